@@ -1,0 +1,1 @@
+"""Atlases on disk: the only rooms that know zarr."""

@@ -1,0 +1,154 @@
+"""A shelf: a folder of atlases, found by their full id whatever their folders are called."""
+
+from __future__ import annotations
+
+import shutil
+import uuid
+from contextlib import suppress
+from dataclasses import dataclass
+from pathlib import Path
+
+from sweep.config import Config
+from sweep.errors import DamagedAtlas, QuestionError
+from sweep.store.atlas import StoredAtlas, create_atlas, open_stored, read_card
+from sweep.store.layout import SHORT_ID, folder_name
+from sweep.store.shards import PARTIAL
+
+_ATTEMPTS = 5
+_MOST_CANDIDATES = 10
+
+
+@dataclass(frozen=True)
+class ShelfEntry:
+    """What stands on the cover of an atlas, unchecked."""
+
+    path: Path
+    """Its folder."""
+    title: str
+    """Its title."""
+    atlas_id: str
+    """Its full id."""
+
+    def __str__(self) -> str:
+        return f"{self.path.name} ({self.title}, {self.atlas_id[:SHORT_ID]})"
+
+
+@dataclass(frozen=True)
+class Shelf:
+    """A folder of atlases; it need not exist until something is put on it."""
+
+    folder: Path
+    """Where the atlases are."""
+
+    def list(self) -> tuple[ShelfEntry, ...]:
+        """Every atlas here by folder name, from the covers alone."""
+        if not self.folder.is_dir():
+            return ()
+        entries = []
+        for path in sorted(self.folder.iterdir()):
+            card = None if PARTIAL.fullmatch(path.name) else read_card(path)
+            if card is not None:
+                title, identity = str(card.get("title", "")), str(card.get("atlas_id", ""))
+                entries.append(ShelfEntry(path, title, identity))
+        return tuple(entries)
+
+    def find_by_id(self, atlas_id: str) -> StoredAtlas | None:
+        """The atlas with this full id, opened; `None` when it is not here.
+
+        Raises
+        ------
+        DamagedAtlas
+            When every atlas of that id here is damaged.
+        """
+        damage: DamagedAtlas | None = None
+        for entry in self.list():
+            if entry.atlas_id == atlas_id:
+                try:
+                    return open_stored(entry.path)
+                except DamagedAtlas as error:
+                    damage = error
+        if damage is not None:
+            raise damage
+        return None
+
+    def find(self, text: Path | str) -> Path:
+        """The one atlas that a text means: a path, or any part of a title, folder name or id.
+
+        A title, folder name or id given in full wins over parts of others.
+
+        Raises
+        ------
+        QuestionError
+            When none or several atlases match; names the candidates.
+        """
+        for path in (Path(text), self.folder / text):
+            if str(text).strip() and (path / "zarr.json").is_file():
+                return path
+        entries = self.list()
+        wanted = str(text).strip().casefold()
+        matches = [e for e in entries if wanted and wanted in _names(e)]
+        matches = matches or [e for e in entries if any(wanted in name for name in _names(e))]
+        if len(matches) == 1:
+            return matches[0].path
+        raise self._not_one(str(text), matches, entries)
+
+    def open_or_create(
+        self, config: Config, atlas_id: str, tile_shape: tuple[int, ...]
+    ) -> StoredAtlas:
+        """The atlas of a config, made when it is not here.
+
+        Two runs may come here at once: the one that is late finds what the other made.
+        """
+        for attempt in range(_ATTEMPTS):
+            found = self.find_by_id(atlas_id)
+            if found is not None:
+                return found
+            try:
+                return create_atlas(self.place_for(config.title, atlas_id), config, tile_shape)
+            except (FileExistsError, FileNotFoundError):
+                # Another run took the name, or took our unfinished folder for a leftover.
+                if attempt == _ATTEMPTS - 1:
+                    raise
+        raise AssertionError("unreachable: the loop returns or raises")
+
+    def place_for(self, title: str, atlas_id: str) -> Path:
+        """Where a new atlas goes: a free name with as many digits of its id as that takes."""
+        for digits in range(SHORT_ID, len(atlas_id)):
+            path = self.folder / folder_name(title, atlas_id, digits)
+            if not path.exists():
+                return path
+        return self.folder / folder_name(title, atlas_id, len(atlas_id))
+
+    def remove_leftovers(self) -> int:
+        """Take away folders of atlases that were never finished; returns how many.
+
+        Each is renamed first, so that a run that is making it at this moment notices and makes
+        another instead of publishing half of one.
+        """
+        removed = 0
+        for path in list(self.folder.glob("*.partial")) if self.folder.is_dir() else []:
+            if PARTIAL.fullmatch(path.name) and path.is_dir() and not path.is_symlink():
+                taken = path.with_name(f"leftover.{uuid.uuid4().hex}.partial")
+                with suppress(FileNotFoundError):
+                    shutil.rmtree(path.rename(taken), ignore_errors=True)
+                    removed += 1
+        return removed
+
+    def _not_one(
+        self, text: str, matches: list[ShelfEntry], entries: tuple[ShelfEntry, ...]
+    ) -> QuestionError:
+        shown = (matches or entries)[:_MOST_CANDIDATES]
+        listed = "; ".join(map(str, shown)) or "nothing"
+        found = f"{len(matches)} atlases match" if matches else "no atlas matches"
+        return QuestionError(
+            f"looking for the atlas {text!r} on the shelf {self.folder}: {found}; there "
+            f"{'are' if matches else 'is'} {listed}",
+            where=[str(entry.path) for entry in shown],
+            remedy="give a part of a title or id that only one of them has, or the path of a folder"
+            if entries
+            else "run a config first, or say with --shelf where the atlases are",
+        )
+
+
+def _names(entry: ShelfEntry) -> tuple[str, ...]:
+    return entry.title.casefold(), entry.path.name.casefold(), entry.atlas_id.casefold()
