@@ -163,7 +163,8 @@ class LimitsAnswer:
             }
             for row in self.rows
         ]
-        document = {"atlas_id": self.atlas_id, "along": self.along, "unit": self.unit, "rows": rows}
+        document: dict[str, Any] = {"atlas_id": self.atlas_id, "along": self.along}
+        document |= {"unit": self.unit, "rows": rows}
         names = ("rows_in_all", "listed", "over", "widened", "bracketed", "nominal")
         document |= {name: getattr(self, name) for name in names}
         document |= {"nodes": self.nodes, "unknown": self.unknown, "cautions": self.cautions}

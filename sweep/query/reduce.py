@@ -83,7 +83,9 @@ def worst_over_box(
         values = _read_block(stored, measure, nodes).transpose(order)
         target = np.ix_(*(places[axis] for axis in (*rest, along)))
         ids = _box_ids([places[axis] for axis in box], box_shape)
-        _fold(values.reshape(*values.shape[: len(rest) + 1], -1), ids, target, worst, which, unknown)
+        _fold(
+            values.reshape(*values.shape[: len(rest) + 1], -1), ids, target, worst, which, unknown
+        )
     worst[unknown > 0] = np.nan
     shape = (-1, len(listed[along]))
     return WorstLines(worst.reshape(shape), which.reshape(shape), unknown.reshape(shape))
@@ -130,9 +132,7 @@ def _blocks(
         yield [place for place, _ in combination], [nodes for _, nodes in combination]
 
 
-def _read_block(
-    stored: Readable, measure: str, nodes: Sequence[Indices]
-) -> NDArray[np.float32]:
+def _read_block(stored: Readable, measure: str, nodes: Sequence[Indices]) -> NDArray[np.float32]:
     starts = [int(axis[0]) for axis in nodes]
     selection = tuple(slice(a, int(axis[-1]) + 1) for a, axis in zip(starts, nodes, strict=True))
     block = stored.read(measure, selection)

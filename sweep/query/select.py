@@ -1,4 +1,4 @@
-"""From what an engineer writes (`kp=0.3`, `sample_period=5ms`, a row's label) to nodes of an axis."""
+"""From what an engineer writes (`kp=0.3`, `sample_period=5ms`, a row label) to nodes of an axis."""
 
 from __future__ import annotations
 

@@ -1,0 +1,121 @@
+"""What a command is, and the options that several commands share."""
+
+from __future__ import annotations
+
+import argparse
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import NoReturn
+
+from sweep.errors import InputError
+
+HALF_SAMPLE = (
+    "Delay counts from the sampling instant to the instant the output changes. The hold's own half "
+    'sample is in the model already: the trade\'s "1.5 samples" is a delay of 1 sample here.'
+)
+"""Said wherever delay is entered or shown."""
+
+BARE_NUMBERS = (
+    "A bare number is in the unit of the stored coordinate (SI; samples on a samples axis); "
+    "5ms, 4kHz or 2% work too. sample_rate is another spelling of sample_period."
+)
+
+
+@dataclass(frozen=True)
+class Command:
+    """One command."""
+
+    name: str
+    """What is typed."""
+    group: str
+    """What one wants with it: make, look, decide or keep."""
+    summary: str
+    """One line for the list of commands."""
+    description: str
+    """A paragraph for its own help."""
+    example: str
+    """A command that works, with the shell's prompt left out."""
+    add_options: Callable[[argparse.ArgumentParser], None]
+    """Declares its arguments."""
+    run: Callable[[argparse.Namespace], int]
+    """Does it; returns the exit code."""
+
+
+class Parser(argparse.ArgumentParser):
+    """A parser whose mistakes are errors of the program's own tree."""
+
+    def error(self, message: str) -> NoReturn:
+        """Raise instead of printing a usage text and leaving."""
+        raise InputError(
+            f"reading the command line: {message}",
+            where=[self.prog],
+            remedy=f"see `{self.prog} --help`",
+        )
+
+
+def add_json(parser: argparse.ArgumentParser) -> None:
+    """Declare ``--json``."""
+    parser.add_argument(
+        "--json", action="store_true", help="one JSON document on stdout, for programs"
+    )
+
+
+def add_shelf(parser: argparse.ArgumentParser) -> None:
+    """Declare ``--shelf``."""
+    parser.add_argument(
+        "--shelf",
+        metavar="DIR",
+        type=Path,
+        default=Path("results"),
+        help="the folder of atlases (default: results/ in the current folder)",
+    )
+
+
+def add_config(parser: argparse.ArgumentParser) -> None:
+    """Declare the config argument."""
+    parser.add_argument("config", metavar="CONFIG", type=Path, help="the TOML file of the sweep")
+
+
+def add_atlas(parser: argparse.ArgumentParser) -> None:
+    """Declare the atlas argument with the shelf that it is looked for on."""
+    parser.add_argument(
+        "atlas", metavar="ATLAS", help="a folder, or any unique part of a title or id on the shelf"
+    )
+    add_shelf(parser)
+    add_json(parser)
+
+
+def add_place(parser: argparse.ArgumentParser, *, unnamed: str) -> None:
+    """Declare ``--at`` and ``--design``."""
+    parser.add_argument(
+        "--at",
+        metavar="AXIS=VALUE,...",
+        action="append",
+        default=[],
+        help=f"where to ask, such as kp=0.3,sample_period=5ms; {unnamed}",
+    )
+    parser.add_argument(
+        "--design",
+        metavar="NAME",
+        default="",
+        help="ask at a design that is stored in the atlas; --at comes on top of it",
+    )
+
+
+def add_nearest(parser: argparse.ArgumentParser) -> None:
+    """Declare ``--nearest``."""
+    parser.add_argument(
+        "--nearest",
+        action="store_true",
+        help="where a value lies between nodes take the nearest node, and say so",
+    )
+
+
+def flatten(values: Sequence[str]) -> tuple[str, ...]:
+    """Names given as ``--each a,b --each c``, one by one.
+
+    >>> flatten(["a,b", "c"])
+    ('a', 'b', 'c')
+    """
+    return tuple(name.strip() for text in values for name in text.split(",") if name.strip())
