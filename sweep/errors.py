@@ -5,6 +5,7 @@
     SweepError
     ├── InputError          2    what was asked cannot be done as asked
     │   ├── ConfigError          a config with one or more mistakes, all listed
+    │   ├── QuantityError        a number or text that is not the quantity that is needed
     │   ├── QuestionError        a question that the atlas cannot be asked
     │   └── ResourceError        the disk (or another resource) will not hold the answer
     ├── AtlasError          3    the atlas cannot give the answer
@@ -91,6 +92,17 @@ class ConfigError(InputError):
             where=[problem.path for problem in self.problems],
             remedy="mend the config and run `sweep plan` on it again; nothing was written",
         )
+
+
+class QuantityError(InputError):
+    """A number or text that is not the quantity that is needed."""
+
+    kind = "quantity"
+
+    def __init__(self, found: str, expected: str, remedy: str = "") -> None:
+        self.found = found
+        self.expected = expected
+        super().__init__(f"found {found}; expected {expected}", remedy=remedy)
 
 
 class QuestionError(InputError):
