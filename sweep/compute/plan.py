@@ -1,0 +1,390 @@
+"""The plan: what a run would do, as an object to print, test and refuse before the first tile."""
+
+from __future__ import annotations
+
+import math
+import shutil
+import time
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass
+from functools import cached_property
+from pathlib import Path
+from typing import Any
+
+import joblib
+import numpy as np
+from numpy.typing import NDArray
+
+from sweep.compute.task import ComputeBlock, SweepSpec, TileResult, TileTask, compute_tile
+from sweep.config import Config
+from sweep.errors import InputError, QuestionError, ResourceError
+from sweep.grid import Grid, Tiling
+from sweep.identity import atlas_id, physics_id
+from sweep.store.atlas import StoredAtlas
+from sweep.store.shards import ShardFormat, TileObjects
+from sweep.store.shelf import Shelf
+from sweep.store.tiles import check_tile_shape, choose_tile_shape
+from sweep.vocabulary import MEASURES
+
+DISK_MARGIN = 1.15
+"""One measured tile stands for all of them with about this much to spare."""
+
+
+@dataclass(frozen=True, eq=False)
+class Survey:
+    """What a config asks for against what the shelf holds; nothing is written to find out."""
+
+    config: Config
+    """What is wanted."""
+    atlas_id: str
+    """Its full id."""
+    atlas: StoredAtlas | None
+    """The atlas with that id; `None` when the shelf has none."""
+    path: Path
+    """Where the atlas is, or will be."""
+    shards: ShardFormat
+    """Shape of its tiles."""
+    missing: Mapping[str, NDArray[np.bool_]]
+    """For each wanted measure, which tiles are not stored; shape of the lattice of tiles."""
+    notes: tuple[str, ...] = ()
+    """Things that the user should know."""
+
+    @property
+    def tiling(self) -> Tiling:
+        """The partition of the grid into tiles."""
+        return Tiling(self.config.grid.shape, self.shards.tile_shape)
+
+    @cached_property
+    def pending(self) -> NDArray[np.intp]:
+        """Flat indices of the tiles to compute, in order; 8 bytes a tile is all a run keeps."""
+        return np.flatnonzero(np.any(list(self.missing.values()), axis=0))
+
+    @cached_property
+    def objects_to_write(self) -> int:
+        """Objects that are not stored, over all measures."""
+        return sum(int(mask.sum()) for mask in self.missing.values())
+
+    @cached_property
+    def pending_nodes(self) -> int:
+        """Nodes of the pending tiles."""
+        return pending_nodes(self.tiling, self.pending)
+
+    def tasks(self) -> Iterator[TileTask]:
+        """The work, made one at a time: a run of any size holds only what is in flight."""
+        return map(self.task, self.pending)
+
+    def task(self, flat: np.intp) -> TileTask:
+        """The work on one pending tile."""
+        index = tuple(map(int, np.unravel_index(flat, self.tiling.counts)))
+        wanted = tuple(name for name, mask in self.missing.items() if mask[index])
+        return TileTask(self.tiling.tile(index), wanted)
+
+    def spec(self, compute: ComputeBlock) -> SweepSpec:
+        """What the tasks have in common."""
+        objects = TileObjects(self.path, self.shards, self.tiling.counts)
+        return SweepSpec(self.config.structure, self.config.grid, compute, objects)
+
+
+@dataclass(frozen=True, eq=False)
+class Plan:
+    """What `run_sweep` would do with a config."""
+
+    title: str
+    """Title of the config."""
+    atlas: Path
+    """Where the atlas is, or will be."""
+    atlas_id: str
+    """Its full id."""
+    physics_id: str
+    """Id of the loop's structure."""
+    grid: Grid
+    """Axes with roles and nominals, and what is fixed."""
+    tile_shape: tuple[int, ...]
+    """Nodes of a whole tile along each axis."""
+    measures: tuple[str, ...]
+    """What is computed at each node."""
+    nodes: int
+    """Nodes in all."""
+    tiles: int
+    """Tiles in all."""
+    tiles_done: int
+    """Tiles that are stored now."""
+    nodes_computed: int
+    """Nodes to be computed."""
+    workers: int
+    """Tiles to be computed at once."""
+    tile_seconds: float | None
+    """Time that one tile took; `None` when it was not measured or nothing is to be done."""
+    seconds: float | None
+    """Time to be expected without start-up, s; `None` when it was not measured."""
+    start_seconds: float | None
+    """Start-up and compilation, s; `None` when it was not measured."""
+    bytes_needed: int
+    """Disk space to be used: from the measured tile, else the most it can be."""
+    bytes_free: int
+    """Disk space that is free."""
+    notes: tuple[str, ...]
+    """Things that the user should know, such as designs between nodes."""
+    nodes_adopted: int = 0
+    """Nodes to be taken over from other atlases."""
+
+    @property
+    def complete(self) -> bool:
+        """Whether nothing is left to compute."""
+        return self.tiles_done == self.tiles
+
+    @property
+    def fits(self) -> bool:
+        """Whether the disk will hold what is missing."""
+        return self.bytes_needed <= self.bytes_free
+
+    def to_json(self) -> dict[str, Any]:
+        """The document of `sweep plan --json`."""
+        return {
+            "title": self.title,
+            "atlas": str(self.atlas),
+            "atlas_id": self.atlas_id,
+            "physics_id": self.physics_id,
+            "axes": [_axis_json(self.grid, name) for name in self.grid.names],
+            "measures": list(self.measures),
+            "tile_shape": list(self.tile_shape),
+            "nodes": self.nodes,
+            "tiles": self.tiles,
+            "tiles_done": self.tiles_done,
+            "nodes_computed": self.nodes_computed,
+            "nodes_adopted": self.nodes_adopted,
+            "workers": self.workers,
+            "tile_seconds": self.tile_seconds,
+            "seconds": self.seconds,
+            "start_seconds": self.start_seconds,
+            "bytes_needed": self.bytes_needed,
+            "bytes_free": self.bytes_free,
+            "fits": self.fits,
+            "complete": self.complete,
+            "notes": list(self.notes),
+        }
+
+
+def plan_sweep(
+    config: Config,
+    shelf_folder: Path | str,
+    *,
+    tile_shape: tuple[int, ...] | None = None,
+    workers: int | None = None,
+    measure_time: bool = True,
+    compute: ComputeBlock | None = None,
+) -> Plan:
+    """Find out what a run would do. Writes nothing.
+
+    Parameters
+    ----------
+    config
+        What is wanted.
+    shelf_folder
+        Where atlases live; need not exist.
+    tile_shape
+        Nodes of a tile along each axis; an atlas that exists keeps its own.
+    workers
+        Tiles at once; the number of processor cores when left out.
+    measure_time
+        Compute one tile to estimate time and disk space; compiles the kernels first.
+    compute
+        The kernel; that of `sweep.measures.registry` when left out.
+
+    Raises
+    ------
+    DamagedAtlas
+        When the atlas that the shelf has for this config cannot be read.
+    """
+    survey = survey_sweep(config, Path(shelf_folder), tile_shape)
+    count = checked_workers(workers)
+    start_seconds, probe = None, None
+    if measure_time and survey.pending.size:
+        start_seconds, kernel = ready_kernel(config, compute)
+        probe = probe_tile(survey, kernel)
+    tile_seconds = None if probe is None else probe.seconds
+    return Plan(
+        title=config.title,
+        atlas=survey.path,
+        atlas_id=survey.atlas_id,
+        physics_id=physics_id(config.structure),
+        grid=config.grid,
+        tile_shape=survey.shards.tile_shape,
+        measures=tuple(survey.missing),
+        nodes=config.grid.size,
+        tiles=len(survey.tiling),
+        tiles_done=len(survey.tiling) - survey.pending.size,
+        nodes_computed=survey.pending_nodes,
+        workers=count,
+        tile_seconds=tile_seconds,
+        seconds=_expected_seconds(survey, probe, count, measured=measure_time),
+        start_seconds=start_seconds,
+        bytes_needed=bytes_needed(survey, probe),
+        bytes_free=bytes_free(Path(shelf_folder)),
+        notes=(*config.notes, *survey.notes),
+    )
+
+
+def survey_sweep(
+    config: Config, shelf_folder: Path, tile_shape: tuple[int, ...] | None = None
+) -> Survey:
+    """Compare a config with the shelf: one walk over the names of the stored objects."""
+    identity = atlas_id(config.structure, config.grid)
+    shelf = Shelf(shelf_folder)
+    atlas = shelf.find_by_id(identity)
+    if atlas is None:
+        chosen = choose_tile_shape(config.grid)
+        shape = chosen if tile_shape is None else check_tile_shape(tile_shape, config.grid)
+        tiling = Tiling(config.grid.shape, shape)
+        missing = {name: np.ones(tiling.counts, np.bool_) for name in config.measures}
+        path = shelf.place_for(config.title, identity)
+        return Survey(config, identity, None, path, ShardFormat.for_tile(shape), missing)
+    _check_measure_versions(config, atlas)
+    missing = {name: ~atlas.done_mask(name) for name in config.measures}
+    notes = _kept_shape(atlas, tile_shape, config.grid)
+    return Survey(config, identity, atlas, atlas.path, atlas.shards, missing, notes)
+
+
+def checked_workers(workers: int | None) -> int:
+    """How many tiles are computed at once.
+
+    Raises
+    ------
+    QuestionError
+        When it is below 1.
+    """
+    if workers is None:
+        return int(joblib.cpu_count())
+    if workers < 1:
+        raise QuestionError(
+            f"{workers} workers were asked for; at least 1 is needed",
+            where=["workers"],
+            remedy=f"give a number from 1 to {joblib.cpu_count()}, the cores of this machine",
+        )
+    return workers
+
+
+def ready_kernel(config: Config, compute: ComputeBlock | None) -> tuple[float, ComputeBlock]:
+    """Compile the kernels of a loop; returns the time that took, s, and the kernel."""
+    start = time.perf_counter()
+    if compute is None:
+        from sweep.measures.registry import compile_kernels, compute_block
+
+        compile_kernels(config.structure)
+        compute = compute_block
+    return time.perf_counter() - start, compute
+
+
+def probe_tile(survey: Survey, compute: ComputeBlock) -> TileResult:
+    """Compute and encode the middle one of the pending tiles, and let it go."""
+    task = survey.task(survey.pending[survey.pending.size // 2])
+    return compute_tile(task, survey.spec(compute), store=False)
+
+
+def bytes_needed(survey: Survey, probe: TileResult | None) -> int:
+    """Disk space for what is missing: from one measured tile, else the most it can be."""
+    most = survey.objects_to_write * survey.shards.most_bytes
+    if probe is None:
+        return most
+    tile_nodes = math.prod(survey.shards.tile_shape)
+    whole = probe.bytes * tile_nodes / probe.nodes if probe.nodes else probe.bytes
+    objects = sum(bool(mask.reshape(-1)[_middle(survey)]) for mask in survey.missing.values())
+    return min(most, math.ceil(whole / objects * survey.objects_to_write * DISK_MARGIN))
+
+
+def bytes_free(folder: Path) -> int:
+    """Free space on the disk that holds ``folder`` or will hold it."""
+    place = folder.absolute()
+    while not place.exists():
+        place = place.parent
+    return shutil.disk_usage(place).free
+
+
+def refuse_if_too_large(survey: Survey, shelf_folder: Path, compute: ComputeBlock) -> None:
+    """Refuse a sweep that the disk will not hold.
+
+    The bound that needs no computing comes first, so that most runs compute no tile twice.
+
+    Raises
+    ------
+    ResourceError
+        When what is missing needs more than what is free.
+    """
+    free = bytes_free(shelf_folder)
+    if not survey.pending.size or bytes_needed(survey, None) <= free:
+        return
+    needed = bytes_needed(survey, probe_tile(survey, compute))
+    if needed > free:
+        raise ResourceError(
+            f"storing {survey.config.title!r} on the disk of {shelf_folder}: it needs about "
+            f"{_gigabytes(needed)} (from one measured tile), {_gigabytes(free)} are free",
+            where=[str(shelf_folder)],
+            remedy="free some space, put the shelf on another disk, or thin out an axis",
+        )
+
+
+def pending_nodes(tiling: Tiling, pending: NDArray[np.intp]) -> int:
+    """Nodes in the given tiles (flat indices), without making a tile of each."""
+    nodes = np.ones(pending.size, np.int64)
+    places = np.unravel_index(pending, tiling.counts)
+    for place, edge, n in zip(places, tiling.tile_shape, tiling.shape, strict=True):
+        nodes *= np.minimum((place + 1) * edge, n) - place * edge
+    return int(nodes.sum())
+
+
+def _middle(survey: Survey) -> int:
+    return int(survey.pending[survey.pending.size // 2])
+
+
+def _expected_seconds(
+    survey: Survey, probe: TileResult | None, workers: int, *, measured: bool
+) -> float | None:
+    if probe is None:
+        return 0.0 if measured else None
+    at_once = min(workers, survey.pending.size, int(joblib.cpu_count()))
+    return probe.seconds / probe.nodes * survey.pending_nodes / at_once
+
+
+def _kept_shape(
+    atlas: StoredAtlas, tile_shape: tuple[int, ...] | None, grid: Grid
+) -> tuple[str, ...]:
+    if tile_shape is None:
+        return ()
+    wanted, kept = check_tile_shape(tile_shape, grid), atlas.tiling.tile_shape
+    if wanted == kept:
+        return ()
+    return (f"the atlas keeps the tile shape {kept} that it was made with; {wanted} was asked for",)
+
+
+def _check_measure_versions(config: Config, atlas: StoredAtlas) -> None:
+    stored = {spec.name: spec.version for spec in atlas.measures}
+    for name in config.measures:
+        current = MEASURES[name].version
+        if stored.get(name, current) != current:
+            raise InputError(
+                f"adding to the atlas {atlas.path}: its {name} has version {stored[name]}, this "
+                f"program computes version {current}; one atlas cannot hold both",
+                where=[name],
+                remedy="move that atlas to another folder and run the config again",
+            )
+
+
+def _axis_json(grid: Grid, name: str) -> dict[str, Any]:
+    axis = grid.axis(name)
+    first, last = float(axis.coordinates[0]), float(axis.coordinates[-1])
+    return {
+        "name": name,
+        "sets": list(axis.sets),
+        "role": axis.role,
+        "nodes": len(axis),
+        "unit": axis.unit,
+        "first": axis.labels[0] if axis.labels else first,
+        "last": axis.labels[-1] if axis.labels else last,
+        "nominal": axis.labels[axis.nominal]
+        if axis.labels
+        else float(axis.coordinates[axis.nominal]),
+    }
+
+
+def _gigabytes(count: int) -> str:
+    return f"{count / 1e9:,.2f} GB"
