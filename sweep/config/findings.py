@@ -107,6 +107,15 @@ def key_path(*parts: str | int) -> str:
     return text
 
 
+def below(place: str, name: str) -> str:
+    """Extend a path by one key.
+
+    >>> below("designs.released", "kp")
+    'designs.released.kp'
+    """
+    return f"{place}.{key_path(name)}"
+
+
 def find_near(word: object, choices: Iterable[str]) -> str:
     """Find the choice that was probably meant; empty when none is near.
 

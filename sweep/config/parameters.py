@@ -35,7 +35,7 @@ def check_given_once(loop: LoopDraft, drafts: Sequence[AxisDraft], findings: Fin
     excused = loop.misspelt | _claimed_by_broken_axes(loop, drafts)
     for path in sorted(loop.required - places.keys() - excused):
         section, _, name = path.rpartition(".")
-        where = f"in [{section}]" if section else "at the top"
+        where = f"in [{section}]" if section else "at the top, before any section,"
         remedy = f"write `{name}` {where}, or sweep it in [axes.{name}]"
         findings.add(path, "nothing", describe_parameter(loop.targets[path].spec), remedy)
 

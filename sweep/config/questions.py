@@ -10,7 +10,7 @@ from typing import Any, Literal
 import numpy as np
 
 from sweep.config.axes import AxisDraft, BuiltAxis
-from sweep.config.findings import Findings, describe, key_path, listed, suggest
+from sweep.config.findings import Findings, below, describe, key_path, listed, suggest
 from sweep.config.model import Case, Design, Range, Requirement
 from sweep.config.reading import check_name
 from sweep.config.shapes import CaseShape, MeasuresShape, check_shape
@@ -34,6 +34,18 @@ class Question:
     """Where mistakes are noted."""
     notes: list[str]
     """Where values between nodes are noted."""
+
+    @property
+    def is_complete(self) -> bool:
+        """Whether every axis is known, so that an unknown name is a mistake of its own."""
+        return all(draft.targets for draft in self.drafts.values())
+
+    def remedy(self, spelled: str, wanted: list[str]) -> str:
+        """Say what to write instead of a name that is no axis."""
+        for name, draft in self.drafts.items():
+            if draft.rows and spelled in {t.path.rpartition(".")[2] for t in draft.targets}:
+                return f"the rows of {name} set it: name labels of {name} instead"
+        return suggest(spelled, wanted) or "remove it"
 
     def names(self, role: str) -> list[str]:
         """Names of the axes with a role."""
@@ -81,20 +93,21 @@ def _check_axes_named(given: Mapping[str, tuple[str, Any]], place: str, question
             question.findings.add(f"{place}.{axis}", "nothing", expected, f"add `{axis}`")
     for axis, (spelled, value) in given.items():
         draft = question.drafts.get(axis)
-        if draft is not None and draft.role != "tolerance":
+        is_fine = draft.role != "tolerance" if draft else not question.is_complete
+        if is_fine:
             continue
         expected = f"design axes only: {listed(wanted) if wanted else 'here there are none'}"
-        remedy = suggest(spelled, wanted) or "remove it"
+        remedy = question.remedy(spelled, wanted)
         if draft is not None:
             remedy = f"nature chooses {axis}: put it into a case, or give the axis a design role"
-        question.findings.add(key_path(place, spelled), describe(value), expected, remedy)
+        question.findings.add(below(place, spelled), describe(value), expected, remedy)
 
 
 def _read_value(
     name: str, spelled: str, value: object, place: str, question: Question
 ) -> float | str | None:
     built = question.built.get(name)
-    where = key_path(place, spelled)
+    where = below(place, spelled)
     if built is None:
         return None
     if built.reader is None:
@@ -161,11 +174,13 @@ def _read_over(data: Mapping[str, Any], place: str, question: Question) -> dict[
     wanted = question.names("tolerance")
     over: dict[str, Range] = {}
     for axis, (spelled, value) in _by_stored_name(data, place, question).items():
-        where = key_path(place, spelled)
+        where = below(place, spelled)
         draft = question.drafts.get(axis)
+        if draft is None and not question.is_complete:
+            continue
         if draft is None or draft.role == "design":
             expected = f"tolerance axes only: {listed(wanted) if wanted else 'here there are none'}"
-            remedy = suggest(spelled, wanted) or "remove it"
+            remedy = question.remedy(spelled, wanted)
             if draft is not None:
                 remedy = f"the engineer chooses {axis}: put it into a design"
             question.findings.add(where, describe(value), expected, remedy)
@@ -223,7 +238,7 @@ def _read_requirements(
 ) -> tuple[Requirement, ...]:
     requirements = []
     for name, value in data.items():
-        requirement = parse_requirement(name, value, key_path(place, "require", name), findings)
+        requirement = parse_requirement(name, value, below(f"{place}.require", name), findings)
         if requirement is not None:
             requirements.append(requirement)
     return tuple(requirements)

@@ -11,7 +11,7 @@ from pathlib import Path, PurePosixPath
 from typing import Any
 
 from sweep.config.document import MAX_BYTES, decode, read_bytes
-from sweep.config.findings import Findings, describe, key_path, listed, suggest
+from sweep.config.findings import Findings, below, describe, listed, suggest
 from sweep.config.loop import LoopDraft
 from sweep.config.reading import Target, check_name, delay_target
 from sweep.config.shapes import MAX_LABEL
@@ -135,9 +135,9 @@ def _check_same_names(rows: list[Row], names: list[str], findings: Findings) -> 
         for name in names:
             if name not in here:
                 expected = f"the parameters of the first row: {listed(names)}"
-                findings.add(key_path(row.place, name), "nothing", expected, f"add `{name}`")
+                findings.add(below(row.place, name), "nothing", expected, f"add `{name}`")
         for name in sorted(here - wanted):
-            remedy = suggest(name, names) or "remove it, or give it in every row"
+            remedy = suggest(name, [*names, "label"]) or "remove it, or give it in every row"
             expected = "only the parameters of the first row"
             findings.add(row.place, f"`{name[:60]}`", expected, remedy)
 
@@ -147,7 +147,7 @@ def _find_targets(
 ) -> dict[str, Target]:
     targets: dict[str, Target] = {}
     for name in names:
-        place = key_path(first.place, name)
+        place = below(first.place, name)
         target = _find_target(name, place, loop, findings)
         if target is None:
             continue
