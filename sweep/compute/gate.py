@@ -41,9 +41,9 @@ class Gate:
 
     def admits(self) -> bool:
         """Whether another tile may start now."""
-        if not self.reason and self._deadline_s is not None:
-            if time.time() + _TIME_MARGIN * self._slowest_s > self._deadline_s:
-                self.close("until")
+        deadline_s = self._deadline_s
+        if deadline_s is not None and time.time() + _TIME_MARGIN * self._slowest_s > deadline_s:
+            self.close("until")
         return not self.reason
 
     def learn(self, tile_s: float) -> None:

@@ -139,7 +139,8 @@ class RunReport:
         if self.complete and not self.tiles_computed:
             changed = "; its labels were rewritten" if self.relabelled else ""
             return f"{self.title} is complete: nothing to compute{changed}"
-        done = f"{self.nodes_computed:,} nodes computed, {self.tiles_done:,} of {self.tiles:,} tiles stored"
+        stored = f"{self.tiles_done:,} of {self.tiles:,} tiles stored"
+        done = f"{self.nodes_computed:,} nodes computed, {stored}"
         if not left:
             return f"{self.title} is complete: {done}"
         return f"{self.title}: {done}; run the same config again to compute the {left:,} tiles left"

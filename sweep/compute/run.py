@@ -45,9 +45,10 @@ from sweep.compute.progress import (
 from sweep.compute.task import Block, ComputeBlock, SweepSpec, TileResult, TileTask, compute_tile
 from sweep.config import Config
 from sweep.errors import ResourceError, SweepError
-from sweep.grid import Grid, Tile
+from sweep.grid import FloatArray, Grid, Tile
 from sweep.identity import physics_id
 from sweep.store.shelf import Shelf
+from sweep.vocabulary import LoopStructure
 
 TILES_PER_GRAPH = 256
 """Tiles handed to dask at once. At the end of each graph the workers wait for the slowest tile, on
@@ -204,7 +205,12 @@ def _kernel_if_needed(survey: Survey, folder: Path, compute: ComputeBlock | None
     return kernel
 
 
-def _nothing_to_compute(*_arguments: object) -> Block:
+def _nothing_to_compute(
+    structure: LoopStructure,  # noqa: ARG001
+    parameters: dict[str, FloatArray],  # noqa: ARG001
+    shape: tuple[int, ...],  # noqa: ARG001
+    measures: tuple[str, ...],  # noqa: ARG001
+) -> Block:
     raise AssertionError("a finished atlas was about to be computed again")
 
 

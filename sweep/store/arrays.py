@@ -8,19 +8,19 @@ zarr has the fused one: it decodes a slice of many chunks three to four times fa
 from __future__ import annotations
 
 import importlib
+import json
 import math
 from collections.abc import Iterable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
 import zarr
 from zarr.codecs import BloscCodec, Crc32cCodec
 from zarr.storage import LocalStore, MemoryStore
 
 from sweep.store.layout import Attributes, Variable, measure_attributes
-from sweep.store.shards import COMPRESSOR, ShardFormat
+from sweep.store.shards import CLEVEL, CNAME, ShardFormat
 from sweep.vocabulary import MeasureSpec
 
 if TYPE_CHECKING:
@@ -31,6 +31,7 @@ Objects = dict[str, bytes]
 
 INNER_CODECS = ("bytes", "blosc", "crc32c")
 """Names of the codecs of a measure's chunks, in order."""
+_FILL_VALUES: dict[str, float | int | str] = {"f": math.nan, "i": 0, "T": ""}
 
 
 def group_objects(
@@ -49,11 +50,28 @@ def group_objects(
             _create_variable(group, variable)
         for spec in measures:
             _create_measure(group, spec, shape, tuple(attributes["axes"]), shards)
-    return {key: buffer.to_bytes() for key, buffer in objects.items()}
+    stored = {key: buffer.to_bytes() for key, buffer in objects.items()}
+    stored["zarr.json"] = _consolidated(stored)
+    return stored
+
+
+def _consolidated(objects: Objects) -> bytes:
+    """The group's metadata with that of its arrays inside, which plain xarray looks for first.
+
+    Readers that do not know it pass over it, as this program does.
+    """
+    group = json.loads(objects["zarr.json"])
+    members = {
+        key.removesuffix("/zarr.json"): json.loads(data)
+        for key, data in sorted(objects.items())
+        if key.endswith("/zarr.json")
+    }
+    inside = {"kind": "inline", "must_understand": False, "metadata": members}
+    whole = {**group, "consolidated_metadata": inside}
+    return json.dumps(whole, allow_nan=False, ensure_ascii=False, indent=2).encode()
 
 
 def _create_variable(group: zarr.Group, variable: Variable) -> None:
-    fill = {"fill_value": math.nan} if variable.values.dtype == np.float64 else {}
     group.create_array(
         variable.name,
         data=variable.values,
@@ -61,7 +79,7 @@ def _create_variable(group: zarr.Group, variable: Variable) -> None:
         compressors=[Crc32cCodec()],
         dimension_names=variable.dims,
         attributes=variable.attributes,
-        **fill,
+        fill_value=_FILL_VALUES[variable.values.dtype.kind],
     )
 
 
@@ -79,7 +97,10 @@ def _create_measure(
         chunks=shards.chunk_shape,
         dtype="float32",
         fill_value=math.nan,
-        compressors=[BloscCodec(typesize=4, **COMPRESSOR), Crc32cCodec()],
+        compressors=[
+            BloscCodec(typesize=4, cname=CNAME, clevel=CLEVEL, shuffle="bitshuffle"),
+            Crc32cCodec(),
+        ],
         dimension_names=dims,
         attributes=measure_attributes(spec),
     )
@@ -108,9 +129,12 @@ def open_arrays(group: zarr.Group) -> dict[str, zarr.Array[Any]]:
 
 
 def open_dataset(folder: Path) -> xr.Dataset:
-    """The atlas as a lazy dataset: nothing is read before it is indexed, and no dask is involved."""
+    """The atlas as a lazy dataset: nothing is read before it is indexed, and dask takes no part."""
     import xarray as xr
 
     with fast_reads():
         store = LocalStore(folder, read_only=True)
-        return xr.open_zarr(store, chunks=None, consolidated=False, decode_times=False)
+        dataset: xr.Dataset = xr.open_zarr(
+            store, chunks=None, consolidated=False, decode_times=False
+        )
+    return dataset

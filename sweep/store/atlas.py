@@ -17,17 +17,17 @@ from numpy.typing import NDArray
 from sweep.config import Config
 from sweep.errors import DamagedAtlas, QuestionError, SweepError
 from sweep.grid import Tile
+from sweep.identity import PROGRAM_VERSION
 from sweep.store.arrays import Objects, group_objects, open_arrays, open_dataset, open_group
 from sweep.store.layout import (
     STORE_VERSION,
     atlas_attributes,
     atlas_variables,
-    clean_json,
 )
 from sweep.store.reading import AtlasContents, read_contents
 from sweep.store.selecting import Index, as_positions, resolve, tiles_touched
 from sweep.store.shards import Measured, ShardFormat, TileObjects, publish, write_new_folder
-from sweep.vocabulary import MEASURES
+from sweep.vocabulary import MEASURES, MeasureSpec
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -94,7 +94,7 @@ class StoredAtlas(AtlasContents):
             return self._read_by_tile(measure, picked)
 
     def done_mask(self, measure: str) -> NDArray[np.bool_]:
-        """Which tiles of a measure are stored, shape of the lattice of tiles; one walk over names."""
+        """Which tiles of a measure are stored, shape of the lattice; one walk over names."""
         return self.objects.done_mask(measure)
 
     def done_tiles(self, measure: str) -> set[tuple[int, ...]]:
@@ -142,28 +142,26 @@ class StoredAtlas(AtlasContents):
     def add_measures(self, config: Config) -> StoredAtlas:
         """Make room for those measures of ``config`` that the atlas does not hold yet."""
         held = {spec.name for spec in self.measures}
-        added = [name for name in config.measures if name not in held]
+        added = tuple(MEASURES[name] for name in config.measures if name not in held)
         if not added:
             return self
-        objects = _metadata(config, self.shards, added)
-        for name in added:
-            publish(self.path / name / "zarr.json", [objects[f"{name}/zarr.json"]])
+        objects = _metadata(config, self.shards, self.measures + added, self.program_version)
+        for key in [*(f"{spec.name}/zarr.json" for spec in added), "zarr.json"]:
+            publish(self.path / key, [objects[key]])
         return open_stored(self.path)
 
     def update_labels(self, config: Config) -> StoredAtlas:
         """Take over what a config may change without computing anything.
 
-        Titles, units' labels, row labels, roles, nominals, designs and cases. Nothing is written
-        when nothing differs.
+        Titles, units' labels, row labels, roles, nominals, designs and cases. Nothing is written,
+        and this very object returned, when nothing differs.
         """
-        objects = _metadata(config, self.shards, [], program_version=self.program_version)
-        changed = {k: v for k, v in objects.items() if _differs(self.path / k, v)}
-        if not changed:
-            return self
-        # The group comes last: a crash before leaves a difference that the next run sees.
+        objects = _metadata(config, self.shards, self.measures, self.program_version)
+        changed = [key for key, data in objects.items() if _differs(self.path / key, data)]
+        # The group comes last: a crash before it leaves a difference that the next run sees.
         for key in sorted(changed, key=lambda key: key == "zarr.json"):
-            publish(self.path / key, [changed[key]])
-        return open_stored(self.path)
+            publish(self.path / key, [objects[key]])
+        return open_stored(self.path) if changed else self
 
     def _measure_array(self, measure: str) -> zarr.Array[Any]:
         names = [spec.name for spec in self.measures]
@@ -213,9 +211,7 @@ class StoredAtlas(AtlasContents):
         )
 
 
-def create_atlas(
-    folder: Path, config: Config, tile_shape: tuple[int, ...], measures: Sequence[str] | None = None
-) -> StoredAtlas:
+def create_atlas(folder: Path, config: Config, tile_shape: tuple[int, ...]) -> StoredAtlas:
     """Make an empty atlas at ``folder``, whole or not at all.
 
     It is built beside its place under another name and renamed, so that a crash leaves at most a
@@ -227,7 +223,7 @@ def create_atlas(
         When something stands at ``folder`` already.
     """
     shards = ShardFormat.for_tile(tile_shape)
-    objects = _metadata(config, shards, config.measures if measures is None else measures)
+    objects = _metadata(config, shards, [MEASURES[name] for name in config.measures])
     folder.parent.mkdir(parents=True, exist_ok=True)
     partial = folder.with_name(f"{folder.name}.{uuid.uuid4().hex}.partial")
     try:
@@ -304,27 +300,32 @@ def _check_versions(folder: Path, attributes: Mapping[str, Any]) -> None:
 
 
 def _metadata(
-    config: Config, shards: ShardFormat, measures: Iterable[str], **attributes: Any
+    config: Config,
+    shards: ShardFormat,
+    measures: Iterable[MeasureSpec],
+    program_version: str = PROGRAM_VERSION,
 ) -> Objects:
-    described = {**atlas_attributes(config, shards.tile_shape), **attributes}
-    clean_json(described)
+    attributes = atlas_attributes(config, shards.tile_shape, program_version)
     variables = atlas_variables(config.structure, config.grid)
-    specs = [MEASURES[name] for name in measures]
-    return group_objects(described, variables, specs, config.grid.shape, shards)
+    return group_objects(attributes, variables, measures, config.grid.shape, shards)
 
 
 def _differs(path: Path, data: bytes) -> bool:
     """Whether a stored object says something else; metadata is compared by its attributes."""
     try:
         stored = path.read_bytes()
-    except FileNotFoundError:
+        if path.name != "zarr.json" or stored == data:
+            return stored != data
+        return _said(stored) != _said(data)
+    except (FileNotFoundError, ValueError, KeyError, TypeError, AttributeError):
         return True
-    if path.name != "zarr.json" or stored == data:
-        return stored != data
-    try:
-        return bool(json.loads(stored)["attributes"] != json.loads(data)["attributes"])
-    except (ValueError, KeyError, TypeError):
-        return True
+
+
+def _said(data: bytes) -> tuple[Any, dict[str, Any]]:
+    """Attributes of a group or array, and of the arrays that a group repeats."""
+    node = json.loads(data)
+    members = node.get("consolidated_metadata", {}).get("metadata", {})
+    return node["attributes"], {name: member["attributes"] for name, member in members.items()}
 
 
 def _one_line(cause: BaseException) -> str:

@@ -6,7 +6,6 @@
 
 from __future__ import annotations
 
-import json
 import re
 import unicodedata
 from collections.abc import Iterable
@@ -86,7 +85,9 @@ def label_name(axis: Axis) -> str:
     return f"{axis.name}_label"
 
 
-def atlas_attributes(config: Config, tile_shape: tuple[int, ...]) -> Attributes:
+def atlas_attributes(
+    config: Config, tile_shape: tuple[int, ...], program_version: str = PROGRAM_VERSION
+) -> Attributes:
     """The attributes of the group: everything that is no coordinate and no measure."""
     grid, structure = config.grid, config.structure
     coordinates = [v.name for v in atlas_variables(structure, grid) if v.name not in grid.names]
@@ -105,7 +106,7 @@ def atlas_attributes(config: Config, tile_shape: tuple[int, ...]) -> Attributes:
         "config": config.document,
         "physics_version": physics_version(structure),
         "store_version": STORE_VERSION,
-        "program_version": PROGRAM_VERSION,
+        "program_version": program_version,
         # How CF conventions, and with them xarray, tell a coordinate from a data variable.
         "coordinates": " ".join(coordinates),
     }
@@ -123,17 +124,6 @@ def physics_version(structure: LoopStructure) -> dict[str, int]:
 def measure_attributes(spec: MeasureSpec) -> Attributes:
     """The attributes of one measure's array."""
     return {"units": spec.unit, "long_name": spec.long_name, "version": spec.version}
-
-
-def clean_json(attributes: Attributes) -> str:
-    """The attributes as canonical JSON text, for comparison.
-
-    Raises
-    ------
-    ValueError
-        When a NaN or an infinity is among them, which JSON cannot hold.
-    """
-    return json.dumps(attributes, allow_nan=False, sort_keys=True, ensure_ascii=False)
 
 
 def slug(title: str) -> str:

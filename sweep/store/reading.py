@@ -130,7 +130,7 @@ def _read_grid(attributes: Mapping[str, Any], arrays: Arrays, structure: LoopStr
 
 def _read_axis(name: str, array: zarr.Array[Any], specs: Mapping[str, ParameterSpec]) -> Axis:
     """An axis without its rows: labels are placeholders until `_read_rows`."""
-    facts = array.attrs.asdict()
+    facts: Mapping[str, Any] = array.attrs.asdict()
     is_row_axis = isinstance(facts.get("sets"), list)
     sets = _texts(facts, "sets") if is_row_axis else (_text(facts, "sets"),)
     values = _coordinates(name, array, (name,), np.int64 if is_row_axis else np.float64)
@@ -211,7 +211,7 @@ def _coordinates(
     length: int | None = None,
 ) -> NDArray[np.float64]:
     _expect(array.dtype == dtype, f"{name} is stored as {array.dtype}")
-    found = tuple(array.metadata.to_dict().get("dimension_names") or ())
+    found = _dimensions(array)
     _expect(found == dims and array.ndim == len(dims), f"{name} has dimensions {found}")
     _check_size(name, array)
     _expect(length in {None, *array.shape}, f"{name} has {array.shape} values, not {length}")
@@ -221,7 +221,7 @@ def _coordinates(
 
 
 def _check_size(name: str, array: zarr.Array[Any]) -> None:
-    """Before anything is read: neither the array nor a chunk of it is larger than an axis may be."""
+    """Before anything is read: neither array nor chunk is larger than an axis may be."""
     nodes = math.prod(array.shape)
     _expect(0 < nodes <= MOST_NODES_ON_AN_AXIS, f"{name} has {nodes} values")
     _expect(array.chunks == array.shape, f"{name} is cut into chunks of {array.chunks}")
@@ -250,16 +250,22 @@ def _tile_shape(attributes: Mapping[str, Any], grid: Grid) -> tuple[int, ...]:
 def _read_measure(
     name: str, array: zarr.Array[Any], grid: Grid, shards: ShardFormat
 ) -> MeasureSpec:
-    facts, stored = array.attrs.asdict(), array.metadata.to_dict()
+    facts: Mapping[str, Any] = array.attrs.asdict()
+    codecs = _inner_codecs(array.metadata.to_dict())
     _expect(array.dtype == np.float32, f"{name} is stored as {array.dtype}, not float32")
     _expect(array.shape == grid.shape, f"{name} has shape {array.shape}, the axes {grid.shape}")
-    dims = tuple(stored.get("dimension_names") or ())
+    dims = _dimensions(array)
     _expect(dims == grid.names, f"{name} has dimensions {dims}, the axes are {grid.names}")
     _expect(array.shards == shards.tile_shape, f"{name} has tiles of {array.shards}")
     _expect(array.chunks == shards.chunk_shape, f"{name} has chunks of {array.chunks}")
-    _expect(_inner_codecs(stored) == INNER_CODECS, f"{name} is coded by {_inner_codecs(stored)}")
+    _expect(codecs == INNER_CODECS, f"{name} is coded by {codecs}")
     version = _entry(facts, "version", int)
     return MeasureSpec(name, _text(facts, "units"), _text(facts, "long_name"), version)
+
+
+def _dimensions(array: zarr.Array[Any]) -> tuple[Any, ...]:
+    stored: Mapping[str, Any] = array.metadata.to_dict()
+    return tuple(stored.get("dimension_names") or ())
 
 
 def _inner_codecs(stored: Mapping[str, Any]) -> tuple[str, ...]:

@@ -47,7 +47,7 @@ def _resolve_one(index: Index, n: int) -> slice | int | Positions:
 def tiles_touched(
     nodes: Sequence[Positions], tile_shape: tuple[int, ...]
 ) -> Iterator[tuple[tuple[int, ...], list[Positions]]]:
-    """Every tile that a product of nodes touches, with the positions along each axis that it fills."""
+    """Every tile that a product of nodes touches, with the places along each axis it fills."""
     along = [_split(axis_nodes, edge) for axis_nodes, edge in zip(nodes, tile_shape, strict=True)]
     for index in np.ndindex(*(len(parts) for parts in along)):
         parts = [axis_parts[i] for axis_parts, i in zip(along, index, strict=True)]

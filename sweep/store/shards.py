@@ -23,6 +23,7 @@ from contextlib import suppress
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
+from typing import Literal
 
 import google_crc32c
 import numpy as np
@@ -34,8 +35,10 @@ from sweep.store.tiles import inner_chunk_shape
 
 Measured = NDArray[np.float32]
 
-COMPRESSOR = {"cname": "lz4", "clevel": 5, "shuffle": "bitshuffle"}
-"""Mantissa noise leaves any lossless codec a ratio near 1.25; this one is the cheapest of them."""
+CNAME: Literal["lz4"] = "lz4"
+"""Blosc codec. Mantissa noise leaves any lossless one a ratio near 1.25; this is the cheapest."""
+CLEVEL = 5
+"""Its level."""
 PARTIAL = re.compile(r".+\.[0-9a-f]{32}\.partial")
 """Names of unfinished objects and atlases; never mistaken for a finished one."""
 
@@ -93,7 +96,7 @@ class ShardFormat:
             and NaN stands beyond it.
         """
         whole = self._padded(values)
-        codec = Blosc(COMPRESSOR["cname"], COMPRESSOR["clevel"], Blosc.BITSHUFFLE)
+        codec = Blosc(CNAME, CLEVEL, Blosc.BITSHUFFLE)
         parts: list[bytes] = []
         index = np.empty((len(self._chunks), 2), "<u8")
         offset = 0
@@ -120,7 +123,7 @@ def _checksum(data: bytes) -> bytes:
 
 @dataclass(frozen=True)
 class TileObjects:
-    """The objects of one atlas on a local disk; small and picklable, so that any worker may hold it."""
+    """The objects of one atlas on a local disk; picklable, so that any worker may hold it."""
 
     folder: Path
     """The atlas."""

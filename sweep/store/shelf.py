@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import shutil
 import uuid
+from collections.abc import Sequence
 from contextlib import suppress
 from dataclasses import dataclass
 from pathlib import Path
@@ -135,7 +136,7 @@ class Shelf:
         return removed
 
     def _not_one(
-        self, text: str, matches: list[ShelfEntry], entries: tuple[ShelfEntry, ...]
+        self, text: str, matches: Sequence[ShelfEntry], entries: Sequence[ShelfEntry]
     ) -> QuestionError:
         shown = (matches or entries)[:_MOST_CANDIDATES]
         listed = "; ".join(map(str, shown)) or "nothing"

@@ -1,4 +1,4 @@
-"""How a grid is cut: the tile that one task computes, and the inner chunks that a reader decodes."""
+"""How a grid is cut: the tile that one task computes, the inner chunk that a reader decodes."""
 
 from __future__ import annotations
 
