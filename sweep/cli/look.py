@@ -184,8 +184,8 @@ COMMANDS = (
         "map",
         "look",
         "stability map over two axes as PNG, SVG or PDF",
-        "Draw the stability map over two axes, the others held. Stable nodes are shaded by the "
-        "logarithm of their spectral radius, the boundary is a line, and what is not computed is "
+        "Draw the stability map over two axes, the others held. What is stable is shaded by "
+        "its decay time constant, the boundary is a line, and what is not computed is "
         f"hatched.\n\n{BARE_NUMBERS}",
         "sweep map first-look -x sample_period -y kp -o map.png",
         _map_options,

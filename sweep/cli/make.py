@@ -19,7 +19,9 @@ STARTERS = ("axis", "converter", "process")
 
 
 def _new_options(parser: argparse.ArgumentParser) -> None:
-    parser.add_argument("file", metavar="FILE", type=Path, help="where to write it, such as my.toml")
+    parser.add_argument(
+        "file", metavar="FILE", type=Path, help="where to write it, such as my.toml"
+    )
     parser.add_argument(
         "--for",
         dest="job",
@@ -63,9 +65,7 @@ def _plan(arguments: argparse.Namespace) -> int:
     from sweep.config import load_config
 
     config = load_config(arguments.config)
-    plan = plan_sweep(
-        config, arguments.shelf, tile_shape=arguments.tile, workers=arguments.workers
-    )
+    plan = plan_sweep(config, arguments.shelf, tile_shape=arguments.tile, workers=arguments.workers)
     if arguments.json:
         print_document(plan.to_json())
         return 0

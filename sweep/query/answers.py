@@ -263,6 +263,8 @@ class PlaneAnswer:
     """The axis upwards."""
     log_radius: NDArray[np.float32] = field(repr=False)
     """Shape (nodes of y, nodes of x); NaN where unknown."""
+    period_s: NDArray[np.float64] = field(repr=False)
+    """Sample period, s; broadcasts to the shape of ``log_radius``."""
     at: Mapping[str, Value]
     """The node at which every other axis is held."""
     nominal: tuple[str, ...]

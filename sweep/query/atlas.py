@@ -15,6 +15,7 @@ from sweep.errors import QuestionError
 from sweep.grid import Axis, Grid
 from sweep.query.answers import LimitsAnswer, Mark, PlaneAnswer, PointAnswer
 from sweep.query.cautions import AT_A_NODE, BETWEEN_NODES
+from sweep.query.facts import AtlasFacts, read_facts
 from sweep.query.limits import MOST_ROWS, find_limits, resolve_limits
 from sweep.query.select import (
     Asked,
@@ -26,7 +27,7 @@ from sweep.query.select import (
     resolve_names,
     value_at,
 )
-from sweep.vocabulary import STABILITY_THRESHOLD
+from sweep.vocabulary import STABILITY_THRESHOLD, LoopStructure
 
 if TYPE_CHECKING:
     import xarray
@@ -91,6 +92,15 @@ class Atlas:
     def dataset(self) -> xarray.Dataset:
         """Every measure with labelled coordinates, read when it is used."""
         return self.stored.dataset
+
+    @property
+    def structure(self) -> LoopStructure:
+        """The loop's kinds and formula options."""
+        return self.stored.structure
+
+    def facts(self) -> AtlasFacts:
+        """Loop, delay budget, axes, measures, completeness and origin at a glance."""
+        return read_facts(self.stored)
 
     def point(
         self,
@@ -226,15 +236,17 @@ class Atlas:
             slice(0, len(axis)) if axis.name in (right.name, up.name) else slice(node, node + 1)
             for axis, node in zip(self.grid.axes, held.node, strict=True)
         )
-        values = self.stored.read("log_radius", block)
-        values = np.moveaxis(values, (places[up.name], places[right.name]), (0, 1))
+        edges = (places[up.name], places[right.name])
+        values = np.moveaxis(self.stored.read("log_radius", block), edges, (0, 1))
+        period_s = np.moveaxis(self.grid.parameters(block)["sample_period"], edges, (0, 1))
         return PlaneAnswer(
             atlas_id=self.atlas_id,
             title=self.title,
             grid=self.grid,
             x=right.name,
             y=up.name,
-            log_radius=values.reshape(len(up), len(right)),
+            log_radius=values.reshape(values.shape[:2]),
+            period_s=period_s.reshape(period_s.shape[:2]),
             at=held.at,
             nominal=held.nominal,
             moved=held.moved,
@@ -297,8 +309,8 @@ class Atlas:
         for design in self.stored.designs:
             values = design.values
             off = all(at[axis] == value for axis, value in values.items() if axis in at)
-            if off and right.name in values and up.name in values:
-                x, y = float(values[right.name]), float(values[up.name])
+            x, y = values.get(right.name), values.get(up.name)
+            if off and isinstance(x, float) and isinstance(y, float):
                 marks.append(Mark(design.name, x, y))
         return marks
 
