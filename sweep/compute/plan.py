@@ -26,8 +26,10 @@ from sweep.store.shelf import Shelf
 from sweep.store.tiles import check_tile_shape, choose_tile_shape
 from sweep.vocabulary import MEASURES
 
-DISK_MARGIN = 1.15
-"""One measured tile stands for all of them with about this much to spare."""
+DISK_MARGIN = 1.1
+"""The largest of the measured tiles stands for all of them with about this much to spare."""
+PROBE_S = 1.0
+"""Time after which no further tile is measured, s."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -85,6 +87,22 @@ class Survey:
         return SweepSpec(self.config.structure, self.config.grid, compute, objects)
 
 
+@dataclass(frozen=True)
+class Probe:
+    """What tiles that were computed and let go say about the rest."""
+
+    tiles: int
+    """How many were computed."""
+    nodes: int
+    """Nodes in them."""
+    seconds: float
+    """Time for all of them, one after the other, s."""
+    slowest_s: float
+    """Time for the slowest, s."""
+    bytes_per_object: float
+    """Size of an object of the largest of them."""
+
+
 @dataclass(frozen=True, eq=False)
 class Plan:
     """What `run_sweep` would do with a config."""
@@ -114,13 +132,13 @@ class Plan:
     workers: int
     """Tiles to be computed at once."""
     tile_seconds: float | None
-    """Time that one tile took; `None` when it was not measured or nothing is to be done."""
+    """Time that a tile took, s; `None` when it was not measured or nothing is to be done."""
     seconds: float | None
     """Time to be expected without start-up, s; `None` when it was not measured."""
     start_seconds: float | None
     """Start-up and compilation, s; `None` when it was not measured."""
     bytes_needed: int
-    """Disk space to be used: from the measured tile, else the most it can be."""
+    """Disk space to be used: from measured tiles, else the most it can be."""
     bytes_free: int
     """Disk space that is free."""
     notes: tuple[str, ...]
@@ -187,7 +205,8 @@ def plan_sweep(
     workers
         Tiles at once; the number of processor cores when left out.
     measure_time
-        Compute one tile to estimate time and disk space; compiles the kernels first.
+        Compute a tile, or a few quick ones, to estimate time and disk space; compiles the
+        kernels first.
     compute
         The kernel; that of `sweep.measures.registry` when left out.
 
@@ -201,8 +220,8 @@ def plan_sweep(
     start_seconds, probe = None, None
     if measure_time and survey.pending.size:
         start_seconds, kernel = ready_kernel(config, compute)
-        probe = probe_tile(survey, kernel)
-    tile_seconds = None if probe is None else probe.seconds
+        probe = probe_tiles(survey, kernel)
+    tile_seconds = None if probe is None else probe.seconds / probe.tiles
     return Plan(
         title=config.title,
         atlas=survey.path,
@@ -275,21 +294,37 @@ def ready_kernel(config: Config, compute: ComputeBlock | None) -> tuple[float, C
     return time.perf_counter() - start, compute
 
 
-def probe_tile(survey: Survey, compute: ComputeBlock) -> TileResult:
-    """Compute and encode the middle one of the pending tiles, and let it go."""
-    task = survey.task(survey.pending[survey.pending.size // 2])
-    return compute_tile(task, survey.spec(compute), store=False)
+def probe_tiles(survey: Survey, compute: ComputeBlock) -> Probe:
+    """Compute and encode the middle pending tile, and let it go.
+
+    Where tiles are quick, more of them, spread over the pending ones, for as long as `PROBE_S`:
+    tiles in which gains of all sizes meet can differ several times in cost.
+    """
+    spec = survey.spec(compute)
+    results: list[TileResult] = []
+    objects = 0
+    for share in (0.5, 0.0, 0.999, 0.25, 0.75, 0.125, 0.875, 0.375, 0.625)[: survey.pending.size]:
+        task = survey.task(survey.pending[int(share * survey.pending.size)])
+        results.append(compute_tile(task, spec, store=False))
+        objects += len(task.measures)
+        if sum(result.seconds for result in results) > PROBE_S:
+            break
+    return Probe(
+        tiles=len(results),
+        nodes=sum(result.nodes for result in results),
+        seconds=sum(result.seconds for result in results),
+        slowest_s=max(result.seconds for result in results),
+        bytes_per_object=max(result.bytes for result in results) * len(results) / objects,
+    )
 
 
-def bytes_needed(survey: Survey, probe: TileResult | None) -> int:
-    """Disk space for what is missing: from one measured tile, else the most it can be."""
+def bytes_needed(survey: Survey, probe: Probe | None) -> int:
+    """Disk space for what is missing: from measured tiles, else the most it can be."""
     most = survey.objects_to_write * survey.shards.most_bytes
     if probe is None:
         return most
-    tile_nodes = math.prod(survey.shards.tile_shape)
-    whole = probe.bytes * tile_nodes / probe.nodes if probe.nodes else probe.bytes
-    objects = sum(bool(mask.reshape(-1)[_middle(survey)]) for mask in survey.missing.values())
-    return min(most, math.ceil(whole / objects * survey.objects_to_write * DISK_MARGIN))
+    expected = probe.bytes_per_object * survey.objects_to_write * DISK_MARGIN
+    return min(most, math.ceil(expected))
 
 
 def bytes_free(folder: Path) -> int:
@@ -313,11 +348,11 @@ def refuse_if_too_large(survey: Survey, shelf_folder: Path, compute: ComputeBloc
     free = bytes_free(shelf_folder)
     if not survey.pending.size or bytes_needed(survey, None) <= free:
         return
-    needed = bytes_needed(survey, probe_tile(survey, compute))
+    needed = bytes_needed(survey, probe_tiles(survey, compute))
     if needed > free:
         raise ResourceError(
             f"storing {survey.config.title!r} on the disk of {shelf_folder}: it needs about "
-            f"{_gigabytes(needed)} (from one measured tile), {_gigabytes(free)} are free",
+            f"{_gigabytes(needed)} (from measured tiles), {_gigabytes(free)} are free",
             where=[str(shelf_folder)],
             remedy="free some space, put the shelf on another disk, or thin out an axis",
         )
@@ -332,12 +367,8 @@ def pending_nodes(tiling: Tiling, pending: NDArray[np.intp]) -> int:
     return int(nodes.sum())
 
 
-def _middle(survey: Survey) -> int:
-    return int(survey.pending[survey.pending.size // 2])
-
-
 def _expected_seconds(
-    survey: Survey, probe: TileResult | None, workers: int, *, measured: bool
+    survey: Survey, probe: Probe | None, workers: int, *, measured: bool
 ) -> float | None:
     if probe is None:
         return 0.0 if measured else None

@@ -27,7 +27,7 @@ from sweep.compute.gate import Gate, interrupts_close, next_occurrence_s
 from sweep.compute.plan import (
     Survey,
     checked_workers,
-    probe_tile,
+    probe_tiles,
     ready_kernel,
     refuse_if_too_large,
     survey_sweep,
@@ -143,7 +143,7 @@ def run_sweep(
     ears.notify(_started(survey, count))
     gate = Gate()
     if until is not None and survey.pending.size:
-        tile_s = probe_tile(survey, kernel).seconds
+        tile_s = probe_tiles(survey, kernel).slowest_s
         gate = Gate(next_occurrence_s(until, time.time()), tile_s)
     start_seconds = time.perf_counter() - began
     if survey.pending.size:
