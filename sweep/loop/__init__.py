@@ -1,0 +1,1 @@
+"""Physics in plain numpy: loop parameters -> sampled plant, realised controller, closed loop."""

@@ -1,0 +1,1 @@
+"""What is computed at a node, and the compiled kernels under it."""

@@ -1,0 +1,408 @@
+"""The compiled kernel: spectral radius along walks through controller coefficients.
+
+At every node the closed loop's characteristic polynomial, in delta = z - 1, is
+
+    P(delta) = (1 + delta)^n A(delta) + B(delta)
+
+with A and B the products of the plant's and the controller's denominators and numerators and n the
+whole-sample delay. It is never multiplied out: evaluated as it stands it keeps its digits both
+where eigenvalues crowd at z = 1 and where a long delay spreads them along the unit circle.
+
+A *walk* is a sequence of nodes along which the coefficients change little by little. `WIDTH` walks
+are solved at once, one in each lane. At each step all roots are extrapolated from the last three
+steps and corrected together by Weierstrass's iteration, z_i <- z_i - W_i with
+
+    W_i = P(z_i) / (a prod_{j != i} (z_i - z_j)),
+
+which doubles the digits with each pass and comes with its own proof: the N disks of radius
+(N - 1) |W_i| about z_i - W_i hold all N roots, as many in each connected part of their union as it
+has disks. The evaluation error of P enters the radii, so the bound that is returned is a bound on
+the true error.
+
+References
+----------
+Weierstrass, K. (1891), Neuer Beweis des Satzes ... Durand, E. (1960); Kerner, I. O. (1966), Numer.
+Math. 8, 290-294: the iteration. Smith, B. T. (1970), Error bounds for zeros of a polynomial based
+upon Gerschgorin's theorems, J. ACM 17, 661-674: the disks. Higham, N. J. (2002), Accuracy and
+Stability of Numerical Algorithms, chapter 5: evaluation errors.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import Any, TypeAlias
+
+import numba
+import numpy as np
+from numpy.typing import NDArray
+
+from sweep.measures.lanes import (
+    WIDTH,
+    all_at_most,
+    load,
+    spread,
+    square_root,
+    store,
+    where_greater,
+)
+
+TARGET = 1e-10
+"""Largest error bound of log_radius with which the kernel is content."""
+
+_UNIT_ROUNDOFF = 2.0**-53
+"""Largest relative error of one correctly rounded operation."""
+_WARM_PASSES = 24
+"""Passes from extrapolated roots before starting anew."""
+_COLD_PASSES = 120
+"""Passes from scratch, besides one for each root."""
+_KICKS = (5, 11, 17)
+"""Passes whose corrections are turned: see `_apply`."""
+_LOOSE = 4
+"""Passes after which roots that cannot be dominant may stay loose."""
+
+Lanes: TypeAlias = Any
+"""A value of `sweep.measures.lanes.LanesType`, which only compiled code holds."""
+Rows: TypeAlias = NDArray[np.float64]
+"""Array of shape (n, `WIDTH`), or a stack of such."""
+RowNumbers: TypeAlias = NDArray[np.int32]
+"""Array of shape (walks, steps)."""
+
+_compiled = numba.njit(nogil=True, cache=True, error_model="numpy", fastmath={"contract"})
+
+
+@_compiled
+def _maximum(left: Lanes, right: Lanes) -> Lanes:
+    return where_greater(left, right, left, right)
+
+
+@_compiled
+def _gather(
+    rows: NDArray[np.float64], which: RowNumbers, step: int, first: int, into: Rows, weights: Rows
+) -> None:
+    """Lay one coefficient row per lane into columns; lanes beyond the last walk repeat it."""
+    last = which.shape[0] - 1
+    for lane in range(WIDTH):
+        row = which[min(first + lane, last), step]
+        for power in range(rows.shape[2]):
+            into[power, lane] = rows[row, 0, power]
+            weights[power, lane] = rows[row, 1, power]
+
+
+@_compiled
+def _convolve(left: Rows, right: Rows, product: Rows) -> None:
+    for power in range(product.shape[0]):
+        store(product, power, spread(0.0))
+    for i in range(left.shape[0]):
+        for j in range(right.shape[0]):
+            store(product, i + j, load(product, i + j) + load(left, i) * load(right, j))
+
+
+@_compiled
+def _scatter_start(
+    degree: int, delay: int, open_loop: Rows, feedback: Rows, re: Rows, im: Rows
+) -> None:
+    """Start on a circle, none of the points on the real axis or mirrored in it."""
+    for lane in range(WIDTH):
+        constant = 0.0
+        sign = 1.0
+        for power in range(feedback.shape[0]):
+            constant += sign * feedback[power, lane]
+            if delay == 0 and power < open_loop.shape[0]:
+                constant += sign * open_loop[power, lane]
+            sign = -sign
+        lead = abs(open_loop[open_loop.shape[0] - 1, lane])
+        radius = (abs(constant) / lead) ** (1.0 / degree)
+        radius = min(max(radius, 0.3), 3.0)
+        for i in range(degree):
+            angle = 2.0 * math.pi * (i + 0.35) / degree
+            re[i, lane] = radius * math.cos(angle) - 1.0
+            im[i, lane] = radius * math.sin(angle)
+
+
+@_compiled
+def _extrapolate(degree: int, known: int, re: Rows, im: Rows, past: Rows) -> None:
+    """Continue each root as a polynomial through its last ``known`` (at most three) values."""
+    last_re, last_im, older_re, older_im = past[0], past[1], past[2], past[3]
+    newest, last, older = 1.0, 0.0, 0.0
+    if known == 2:
+        newest, last = 2.0, -1.0
+    elif known >= 3:
+        newest, last, older = 3.0, -3.0, 1.0
+    for i in range(degree):
+        x, y = load(re, i), load(im, i)
+        last_x, last_y = load(last_re, i), load(last_im, i)
+        store(re, i, newest * x + last * last_x + older * load(older_re, i))
+        store(im, i, newest * y + last * last_y + older * load(older_im, i))
+        store(older_re, i, last_x)
+        store(older_im, i, last_y)
+        store(last_re, i, x)
+        store(last_im, i, y)
+
+
+@_compiled
+def _evaluate(
+    delay: int, open_loop: Rows, feedback: Rows, x: Lanes, y: Lanes
+) -> tuple[Lanes, Lanes]:
+    """P at x + j y."""
+    top = feedback.shape[0] - 1
+    fed_re, fed_im = load(feedback, top), spread(0.0)
+    for power in range(top - 1, -1, -1):
+        carried = fed_re * x - fed_im * y + load(feedback, power)
+        fed_im = fed_re * y + fed_im * x
+        fed_re = carried
+    top = open_loop.shape[0] - 1
+    re, im = load(open_loop, top), spread(0.0)
+    for power in range(top - 1, -1, -1):
+        carried = re * x - im * y + load(open_loop, power)
+        im = re * y + im * x
+        re = carried
+    z = 1.0 + x
+    for _ in range(delay):
+        carried = re * z - im * y
+        im = re * y + im * z
+        re = carried
+    return re + fed_re, im + fed_im
+
+
+@_compiled
+def _correct(
+    degree: int, delay: int, open_loop: Rows, feedback: Rows, re: Rows, im: Rows, work: Rows
+) -> Lanes:
+    """Weierstrass corrections of all roots; returns, by lane, how far they miss the tolerance.
+
+    ``work`` receives the corrections (two arrays) and 1 / |a prod (z_i - z_j)|^2.
+    """
+    fix_re, fix_im, spacing = work[0], work[1], work[2]
+    lead = load(open_loop, open_loop.shape[0] - 1)
+    tolerance = (0.25 * TARGET / degree) ** 2
+    excess = spread(-1.0)
+    for i in range(degree):
+        x, y = load(re, i), load(im, i)
+        value_re, value_im = _evaluate(delay, open_loop, feedback, x, y)
+        prod_re, prod_im = lead, spread(0.0)
+        for j in range(degree):
+            if j != i:
+                dx, dy = x - load(re, j), y - load(im, j)
+                carried = prod_re * dx - prod_im * dy
+                prod_im = prod_re * dy + prod_im * dx
+                prod_re = carried
+        inverse = 1.0 / _maximum(prod_re * prod_re + prod_im * prod_im, spread(1e-290))
+        dx = (value_re * prod_re + value_im * prod_im) * inverse
+        dy = (value_im * prod_re - value_re * prod_im) * inverse
+        store(fix_re, i, dx)
+        store(fix_im, i, dy)
+        store(spacing, i, inverse)
+        excess = _maximum(excess, dx * dx + dy * dy - tolerance * (1.0 + x * x + y * y))
+    return excess
+
+
+@_compiled
+def _apply(degree: int, re: Rows, im: Rows, work: Rows, kick: float) -> None:
+    """Subtract the corrections. A kick turns them, which lets a mirrored pair become two reals."""
+    fix_re, fix_im = work[0], work[1]
+    for i in range(degree):
+        dx, dy = load(fix_re, i), load(fix_im, i)
+        store(re, i, load(re, i) - dx + kick * dy)
+        store(im, i, load(im, i) - dy - kick * dx)
+
+
+@_compiled
+def _enclose(
+    degree: int,
+    delay: int,
+    weights_a: Rows,
+    weights_b: Rows,
+    re: Rows,
+    im: Rows,
+    work: Rows,
+    out: Rows,
+) -> bool:
+    """Disks round all roots and what they prove; returns whether every lane meets `TARGET`.
+
+    ``out`` receives, by lane: |z|^2 - 1, Re z and Im z of the dominant root, its modulus and the
+    bound on the error of that modulus.
+    """
+    fix_re, fix_im, spacing = work[0], work[1], work[2]
+    rounding = 4.0 * (degree + 4.0) * _UNIT_ROUNDOFF
+    share = 1.001 * (degree - 1.0)
+    if degree == 1:
+        share = 1.001
+    reach, best = spread(0.0), spread(-2.0)
+    radius, modulus = spread(0.0), spread(0.0)
+    top_b, top_a = weights_b.shape[0] - 1, weights_a.shape[0] - 1
+    for i in range(degree):
+        x, y = load(re, i), load(im, i)
+        size, z = square_root(x * x + y * y), 1.0 + x
+        z_size = square_root(z * z + y * y)
+        fed = load(weights_b, top_b)
+        for power in range(top_b - 1, -1, -1):
+            fed = fed * size + load(weights_b, power)
+        total = load(weights_a, top_a)
+        for power in range(top_a - 1, -1, -1):
+            total = total * size + load(weights_a, power)
+        for _ in range(delay):
+            total = total * z_size
+        noise = (total + fed) * square_root(load(spacing, i)) * rounding
+        dx, dy = load(fix_re, i), load(fix_im, i)
+        x, y = x - dx, y - dy
+        beyond = 2.0 * x + (x * x + y * y)
+        z = 1.0 + x
+        z_size = square_root(z * z + y * y)
+        disk = (square_root(dx * dx + dy * dy) + noise) * share + 4.0 * _UNIT_ROUNDOFF * size
+        reach = _maximum(reach, z_size + disk)
+        radius = where_greater(beyond, best, disk, radius)
+        modulus = where_greater(beyond, best, z_size, modulus)
+        best = _maximum(best, beyond)
+    # of equal magnitudes the larger argument: the smallest real part, upper half plane
+    out_x, out_y = spread(math.inf), spread(0.0)
+    level = best - 1e-13 * (1.0 + best)
+    for i in range(degree):
+        x, y = load(re, i) - load(fix_re, i), load(im, i) - load(fix_im, i)
+        beyond = 2.0 * x + (x * x + y * y)
+        candidate = where_greater(beyond, level, x, spread(math.inf))
+        out_y = where_greater(out_x, candidate, y, out_y)
+        out_x = where_greater(out_x, candidate, candidate, out_x)
+    store(out, 0, best)
+    store(out, 1, 1.0 + out_x)
+    store(out, 2, out_y)
+    store(out, 3, modulus)
+    bound = _maximum(reach - modulus, radius) + 4.0 * _UNIT_ROUNDOFF * modulus
+    store(out, 4, bound)
+    return all_at_most(bound, TARGET * modulus)
+
+
+@_compiled
+def _iterate(
+    degree: int,
+    delay: int,
+    coefficients: tuple[Rows, Rows, Rows, Rows],
+    re: Rows,
+    im: Rows,
+    work: Rows,
+    out: Rows,
+    limit: int,
+) -> tuple[int, bool]:
+    """Correct until every lane meets `TARGET` or ``limit`` passes are spent; the passes taken."""
+    open_loop, feedback, weights_a, weights_b = coefficients
+    converged_passes = 0
+    for number in range(1, limit + 1):
+        excess = _correct(degree, delay, open_loop, feedback, re, im, work)
+        converged = all_at_most(excess, spread(0.0))
+        converged_passes += converged
+        if converged or (number > _LOOSE and number % 2 == 0) or number == limit:
+            # beyond `_LOOSE` passes minor roots may be left loose: only the disks decide
+            met = _enclose(degree, delay, weights_a, weights_b, re, im, work, out)
+            if met or converged_passes >= 3 or number == limit:
+                _apply(degree, re, im, work, 0.0)
+                return number, met
+        kick = 0.6 if number in _KICKS else 0.0
+        _apply(degree, re, im, work, kick)
+    return limit, False
+
+
+@_compiled
+def _argument(re: float, im: float) -> float:
+    """Argument in [0, pi]: of a conjugate pair the positive one."""
+    return math.atan2(abs(im), re)
+
+
+@_compiled
+def solve_walks(
+    delay: int,
+    plants: tuple[NDArray[np.float64], NDArray[np.float64]],
+    controllers: tuple[NDArray[np.float64], NDArray[np.float64]],
+    plant_rows: RowNumbers,
+    controller_rows: RowNumbers,
+    nodes: RowNumbers,
+    steady: bool,
+    log_radius: NDArray[np.float64],
+    mode_angle: NDArray[np.float64],
+    bound: NDArray[np.float64],
+) -> int:
+    """Solve every node of a batch of walks that share one structure.
+
+    Parameters
+    ----------
+    delay
+        Power n of z beside the open-loop polynomial.
+    plants, controllers
+        Numerators and denominators, each of shape (rows, 2, powers): coefficients in delta, lowest
+        power first, and their weights (magnitude plus an allowance for their own error).
+    plant_rows, controller_rows
+        Rows to take at each node, shape (walks, steps).
+    nodes
+        Where the results go, shape (walks, steps).
+    steady
+        Whether the open-loop polynomial stays the same along each walk.
+    log_radius, mode_angle, bound
+        Receive the logarithm of the spectral radius, the argument of the dominant root (rad, 0 to
+        pi) and the bound on the error of the radius itself; flat, indexed by ``nodes``.
+
+    Returns
+    -------
+    Passes taken, summed over the groups of lanes.
+    """
+    plant_num, plant_den = plants
+    loop_num, loop_den = controllers
+    walks, steps = nodes.shape
+    top_a = plant_den.shape[2] + loop_den.shape[2] - 2
+    top_b = plant_num.shape[2] + loop_num.shape[2] - 2
+    degree = delay + top_a
+    open_loop, weights_a = np.zeros((top_a + 1, WIDTH)), np.zeros((top_a + 1, WIDTH))
+    feedback, weights_b = np.zeros((top_b + 1, WIDTH)), np.zeros((top_b + 1, WIDTH))
+    coefficients = (open_loop, feedback, weights_a, weights_b)
+    left, left_weights = np.zeros((4, WIDTH)), np.zeros((4, WIDTH))
+    right, right_weights = np.zeros((4, WIDTH)), np.zeros((4, WIDTH))
+    fixed, fixed_weights = np.zeros((4, WIDTH)), np.zeros((4, WIDTH))
+    re, im = np.zeros((degree, WIDTH)), np.zeros((degree, WIDTH))
+    first_re, first_im = np.zeros((degree, WIDTH)), np.zeros((degree, WIDTH))
+    past, work = np.zeros((4, degree, WIDTH)), np.zeros((3, degree, WIDTH))
+    out = np.zeros((5, WIDTH))
+    powers_a, powers_b = plant_den.shape[2], plant_num.shape[2]
+    passes = 0
+    for first in range(0, walks, WIDTH):
+        known = 0
+        for step in range(steps):
+            if step == 0 or not steady:
+                _gather(plant_den, plant_rows, step, first, left, left_weights)
+                _gather(loop_den, controller_rows, step, first, right, right_weights)
+                _convolve(left[:powers_a], right[: loop_den.shape[2]], open_loop)
+                _convolve(left_weights[:powers_a], right_weights[: loop_den.shape[2]], weights_a)
+                _gather(plant_num, plant_rows, step, first, fixed, fixed_weights)
+            _gather(loop_num, controller_rows, step, first, right, right_weights)
+            _convolve(fixed[:powers_b], right[: loop_num.shape[2]], feedback)
+            _convolve(fixed_weights[:powers_b], right_weights[: loop_num.shape[2]], weights_b)
+
+            met = False
+            if known == 0 and first > 0:
+                # neighbouring walks start alike
+                re[:] = first_re
+                im[:] = first_im
+            if known > 0:
+                _extrapolate(degree, known, re, im, past)
+            if known > 0 or first > 0:
+                taken, met = _iterate(degree, delay, coefficients, re, im, work, out, _WARM_PASSES)
+                passes += taken
+            if not met:
+                _scatter_start(degree, delay, open_loop, feedback, re, im)
+                limit = _COLD_PASSES + degree
+                taken, met = _iterate(degree, delay, coefficients, re, im, work, out, limit)
+                passes += taken
+                known = 0
+            known += 1
+            if step == 0:
+                first_re[:] = re
+                first_im[:] = im
+
+            for lane in range(min(WIDTH, walks - first)):
+                node = nodes[first + lane, step]
+                modulus = out[3, lane]
+                if modulus > 0.5:
+                    log_radius[node] = 0.5 * math.log1p(out[0, lane])
+                elif modulus > 0.0:
+                    log_radius[node] = math.log(modulus)
+                else:
+                    log_radius[node] = -math.inf
+                mode_angle[node] = _argument(out[1, lane], out[2, lane])
+                bound[node] = out[4, lane]
+    return passes
