@@ -90,11 +90,11 @@ def compute_now(structure: LoopStructure, answer: PointAnswer) -> dict[str, Any]
                 for mode in modes(structure, values)
             ],
             "coefficients": {
-                "plant_num": realised.plant_num,
-                "plant_den": realised.plant_den,
+                "plant_numerator": realised.plant_numerator,
+                "plant_denominator": realised.plant_denominator,
                 "whole_delay": realised.whole_delay,
-                "controller_num": realised.controller_num,
-                "controller_den": realised.controller_den,
+                "controller_numerator": realised.controller_numerator,
+                "controller_denominator": realised.controller_denominator,
             },
         }
     )

@@ -306,9 +306,8 @@ def _head(figure: SubFigure, axes: Axes, drawn: _Drawn) -> None:
     """The title, what is held where, and by whom it is chosen."""
     plane = drawn.plane
     held = [
-        f"{name} = {show_value(plane.grid.axis(name), value)}"
-        + (" (nominal)" if name in plane.nominal else "")
-        + f" [{plane.grid.axis(name).role}]"
+        f"{name} = {show_value(plane.grid.axis(name), value)} "
+        f"({plane.grid.axis(name).role}{', nominal' if name in plane.nominal else ''})"
         for name, value in plane.at.items()
     ]
     lines = textwrap.wrap(printable(f"held: {', '.join(held)}"), 96) if held else []

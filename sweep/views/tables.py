@@ -16,23 +16,27 @@ from rich.table import Table
 from rich.text import Text
 
 from sweep.grid import Axis, Grid
-from sweep.quantities import format_quantity
+from sweep.quantities import display_factor, display_name, format_quantity
 from sweep.query.answers import End, LimitsAnswer, LimitsRow, PlaneAnswer, PointAnswer, show_value
 from sweep.query.cautions import caution_line
 from sweep.query.facts import AtlasFacts, DelayPart
 from sweep.query.select import Value, show_node
 
+ENDS = "ends: how stability is lost (last stable node|first other node)"
 HALF_SAMPLE = "the hold's own half sample is in the model already"
 
 
 class _Sheet(io.StringIO):
     """Paper that knows which letters the terminal has: rich asks its file for ``encoding``."""
 
-    encoding: str
-
     def __init__(self, encoding: str) -> None:
         super().__init__()
-        self.encoding = encoding
+        self._letters = encoding
+
+    @property
+    def encoding(self) -> str:  # type: ignore[override]
+        """What the terminal takes."""
+        return self._letters
 
 
 def to_text(view: object, *, width: int, terminal: bool, encoding: str = "utf-8") -> str:
@@ -119,13 +123,13 @@ def plan_view(document: Mapping[str, Any], grid: Grid, title: str) -> Renderable
         ("tiles", f"{tiles:,}, of which {done:,} are done"),
         ("to compute", f"{document['nodes_computed']:,} nodes"),
     ]
-    facts += [("time", seconds_text(document["seconds"]))] if document.get("seconds") else []
+    facts += _time_fact(document)
     if "bytes_needed" in document:
         free = document.get("bytes_free")
         room = f", {bytes_text(free)} free" if isinstance(free, int | float) else ""
         facts.append(("disk", f"{bytes_text(document['bytes_needed'])} needed{room}"))
-    notes = [Text(f"note: {printable(note)}", style="yellow") for note in document.get("notes", [])]
-    return Group(_title(title), axes_table(grid), _fixed_line(grid), _facts(facts), *notes)
+    parts = [_title(title), axes_table(grid), _fixed_line(grid), _facts(facts)]
+    return Group(*parts, *_notes(document))
 
 
 def run_view(document: Mapping[str, Any]) -> RenderableType:
@@ -150,7 +154,7 @@ def run_view(document: Mapping[str, Any]) -> RenderableType:
         facts.append(
             ("slow path", f"{document['slow_nodes']:,} nodes, {undecided:,} left undecided")
         )
-    return Group(Text(first, style="bold"), _facts(facts))
+    return Group(Text(first, style="bold"), _facts(facts), *_notes(document))
 
 
 def info_view(facts: AtlasFacts) -> RenderableType:
@@ -230,7 +234,7 @@ def limits_view(answer: LimitsAnswer) -> RenderableType:
     if shared:
         parts.append(_facts(_place(answer.grid, shared, named)))
     parts += [Text(line) for line in _box_lines(answer)]
-    parts.append(_limits_table(answer, axis))
+    parts += [Text(""), _limits_table(answer, axis), Text(ENDS, style="dim"), Text("")]
     if answer.rows_in_all > len(answer.rows):
         parts.append(
             Text(
@@ -259,13 +263,28 @@ def plane_view(plane: PlaneAnswer) -> RenderableType:
     return Group(*parts)
 
 
+def _time_fact(document: Mapping[str, Any]) -> list[tuple[str, str]]:
+    if document["nodes_computed"] == 0 or document.get("seconds") is None:
+        return []
+    workers = document.get("workers")
+    at_once = f" with {workers} tiles at once" if workers else ""
+    start = document.get("start_seconds")
+    before = f", after {seconds_text(start)} of start-up" if start else ""
+    return [("time", f"about {seconds_text(document['seconds'])}{at_once}{before}")]
+
+
+def _notes(document: Mapping[str, Any]) -> list[Text]:
+    return [Text(f"note: {printable(note)}", style="yellow") for note in document.get("notes", ())]
+
+
 def _limits_table(answer: LimitsAnswer, axis: Axis) -> Table:
     listed = [answer.grid.axis(name) for name in answer.listed]
-    table = _table(*(item.name for item in listed), "from", "to", "lower end", "upper end")
+    heads = [_head(item.name, item) for item in listed]
+    table = _table(*heads, _head("from", axis), _head("to", axis), "lower end", "upper end")
     for column in range(len(listed) + 2):
         table.columns[column].justify = "right"
     for row in answer.rows:
-        place = [show_value(item, row.at[item.name]) for item in listed]
+        place = [_number(item, row.at[item.name]) for item in listed]
         for line in _interval_lines(row, axis):
             table.add_row(*_cells(*place, *line))
             place = [""] * len(listed)
@@ -279,8 +298,8 @@ def _interval_lines(row: LimitsRow, axis: Axis) -> list[tuple[str, str, str, str
         return [("", "", found, "")]
     return [
         (
-            show_value(axis, interval.low.value),
-            show_value(axis, interval.high.value),
+            _number(axis, interval.low.value),
+            _number(axis, interval.high.value),
             _end_text(interval.low, axis),
             _end_text(interval.high, axis),
         )
@@ -295,9 +314,30 @@ def _end_text(end: End, axis: Axis) -> str:
         return "next node unknown"
     how: str = end.kind or "boundary"
     if end.kind == "oscillation" and end.hz is not None:
-        how = f"oscillation {end.hz:.4g} Hz"
-    a, b = sorted(end.between, key=str) if axis.is_row_axis else sorted(map(float, end.between))
-    return f"{how}, {show_value(axis, a)} .. {show_value(axis, b)}"
+        how = f"oscillation {format_quantity(end.hz, 'Hz', digits=4)}"
+    stable, other = (_number(axis, value) for value in end.between)
+    return f"{how} ({stable}|{other})"
+
+
+def _head(name: str, axis: Axis) -> str:
+    """A column's head with the unit of its numbers."""
+    unit = "" if axis.is_row_axis else display_name(axis.unit, _unit(axis))
+    return f"{name} [{unit}]" if unit else name
+
+
+def _unit(axis: Axis) -> str:
+    """One unit for all of an axis: its own for people, else what suits its largest value."""
+    if axis.display_unit or axis.is_row_axis:
+        return axis.display_unit
+    largest = float(abs(axis.coordinates).max())
+    return format_quantity(largest, axis.unit).partition(" ")[2]
+
+
+def _number(axis: Axis, value: Value) -> str:
+    """A coordinate without its unit, which stands in the head of the column."""
+    if isinstance(value, str):
+        return value
+    return f"{value / display_factor(axis.unit, _unit(axis)):.6g}"
 
 
 def _box_lines(answer: LimitsAnswer) -> Iterable[str]:
@@ -379,12 +419,10 @@ def _or_none(value: float | str | None, unit: str) -> str:
 
 
 def _coefficients(found: Mapping[str, Any]) -> RenderableType:
-    spelled = {"num": "numerator", "den": "denominator"}
     rows = []
     for name, value in found.items():
-        title = " ".join(spelled.get(word, word) for word in name.split("_"))
         texts = [f"{item:.10g}" for item in value] if isinstance(value, list) else [str(value)]
-        rows.append((title, ", ".join(texts)))
+        rows.append((name.replace("_", " "), ", ".join(texts)))
     return _facts(rows)
 
 
@@ -426,7 +464,13 @@ def _title(text: str) -> Text:
 
 
 def _table(*columns: str) -> Table:
-    table = Table(box=box.SIMPLE_HEAD, pad_edge=False, show_edge=False, header_style="bold")
+    table = Table(
+        box=box.SIMPLE_HEAD,
+        pad_edge=False,
+        show_edge=False,
+        header_style="bold",
+        padding=(0, 1, 0, 0),
+    )
     for column in columns:
         table.add_column(Text(printable(column)), overflow="fold")
     return table
