@@ -26,7 +26,7 @@ class MemoryAtlas:
     physics_id: str = "cd" * 32
     program_version: str = "0"
     path: Path = Path("memory.zarr")
-    structure: LoopStructure = LoopStructure("oscillator", "p")
+    structure: LoopStructure = field(default_factory=lambda: LoopStructure("oscillator", "p"))
     nodes_read: list[int] = field(default_factory=list)
 
     @property
