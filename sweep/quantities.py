@@ -32,8 +32,9 @@ CONTEXT: Final = decimal.Context(
 
 PI: Final = Decimal("3.14159265358979323846264338327950288419716939937510582097494459")
 _ONE: Final = Decimal(1)
-_RADIANS_PER_SECOND: Final = decimal.Context(prec=60).divide(_ONE, 2 * PI)
-_DEGREE: Final = decimal.Context(prec=60).divide(PI, Decimal(180))
+_WIDE: Final = decimal.Context(prec=60)
+_RADIANS_PER_SECOND: Final = _WIDE.divide(_ONE, _WIDE.multiply(Decimal(2), PI))
+_DEGREE: Final = _WIDE.divide(PI, Decimal(180))
 
 _SCALES: Final[dict[str, dict[str, Decimal]]] = {
     "s": {"s": _ONE, "ms": Decimal("1e-3"), "us": Decimal("1e-6"), "ns": Decimal("1e-9")},
@@ -60,7 +61,8 @@ _EXAMPLES: Final = {
     "rad": 'an angle such as 0.5 or "30 deg"',
 }
 _NUMBER: Final = re.compile(
-    r"\s*([+-]?(?:[0-9][0-9_]*\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]+)?)\s*(.*?)\s*", re.DOTALL
+    r"\s*([+-]?(?:[0-9][0-9_]*\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]+)?)"
+    r"(?:\s+(1/s)|\s*([^\W\d_][^\s,]*|%))?\s*"
 )
 _LONGEST_TEXT: Final = 200
 _FINITE: Final = "a finite number that double precision can hold"
@@ -102,7 +104,7 @@ def split_quantity(value: object) -> Quantity:
     if isinstance(value, int) and value.bit_length() > 1100:
         raise QuantityError("a whole number with hundreds of digits", _FINITE, _SMALLER)
     number = value if isinstance(value, Decimal) else Decimal(repr(value))
-    return Quantity(_rounded(number, str(value)), "")
+    return Quantity(_rounded(number, value), "")
 
 
 def _split_text(text: str) -> Quantity:
@@ -112,19 +114,20 @@ def _split_text(text: str) -> Quantity:
         if re.fullmatch(r"\s*[+-]?[0-9]+,[0-9]+.{0,40}", text):
             remedy = "write the decimal mark as a point"
         raise QuantityError(_shown(text), 'a number with an optional unit, such as "5 ms"', remedy)
+    unit = match[2] or match[3] or ""
     try:
         number = Decimal(match[1])
     except decimal.DecimalException as error:
         raise QuantityError(_shown(text), _FINITE, _SMALLER) from error
-    return Quantity(_rounded(number, text), _ALIASES.get(match[2], match[2]))
+    return Quantity(_rounded(number, text), _ALIASES.get(unit, unit))
 
 
-def _rounded(number: Decimal, text: str) -> Decimal:
+def _rounded(number: Decimal, written: object) -> Decimal:
     """40 digits of a number that float64 can hold: neither overflowing nor vanishing."""
     if not number.is_finite() or math.isinf(as_float := float(number)):
-        raise QuantityError(_shown(text), _FINITE, _SMALLER)
+        raise QuantityError(_shown(written), _FINITE, _SMALLER)
     if as_float == 0.0 and number != 0:
-        raise QuantityError(_shown(text), _FINITE, _SMALLER)
+        raise QuantityError(_shown(written), _FINITE, _SMALLER)
     return CONTEXT.plus(number)
 
 
@@ -175,7 +178,7 @@ def parse_quantity(
     if converted is None:
         expected = describe_unit(unit, periods=natural_period_s is not None, decibels=decibels)
         raise QuantityError(_shown(value), expected, _unit_remedy(quantity.unit, unit))
-    return _rounded(converted, str(value))
+    return _rounded(converted, value)
 
 
 def _convert(
@@ -312,6 +315,6 @@ def _listed(names: list[str]) -> str:
 
 
 def _shown(value: object) -> str:
-    text = repr(value) if not isinstance(value, str) else f'"{value[:_LONGEST_TEXT]}"'
+    text = f'"{value[:_LONGEST_TEXT]}"' if isinstance(value, str) else str(value)[:_LONGEST_TEXT]
     text = "".join(letter if letter.isprintable() else "?" for letter in text)
     return text if len(text) <= 60 else f"{text[:57]}..."

@@ -25,6 +25,12 @@ MAX_BYTES = 16 * 1024 * 1024
 MAX_DEPTH = 8
 """Deepest nesting; the deepest legal config uses six levels."""
 
+MAX_KEYS = 1000
+"""Most keys of one section, and most sections of one kind."""
+
+_MAX_BITS = 1000
+"""Longest whole number, in bits."""
+
 _LONG_DOTTED_KEY = re.compile(
     r"""(?<![A-Za-z0-9_\-."'])(?:(?:[A-Za-z0-9_-]++|"[^"\n]*+"|'[^'\n]*+')[ \t]*+\.[ \t]*+){12}"""
 )
@@ -115,7 +121,7 @@ def parse_json(text: str, source: str) -> Document:
         When it is no JSON object, nested too deeply, or holds numbers beyond double precision.
     """
     try:
-        document = json.loads(text[: MAX_BYTES * 4], parse_float=_parse_float)
+        document = json.loads(text, parse_float=_parse_float)
     except (ValueError, RecursionError) as error:
         found = f"text that is not JSON: {str(error)[:200]}"
         raise refuse(source, found, "the stored text of a config", "take it unaltered") from None
@@ -147,23 +153,24 @@ def _too_deep(source: str) -> ConfigError:
 
 
 def _check_values(document: Document, source: str) -> None:
-    """Refuse what no later step should have to expect: deep nesting and endless whole numbers."""
+    """Refuse what no later step should have to expect: deep, wide or endless things."""
     findings = Findings(source)
     level: list[tuple[tuple[str | int, ...], Any]] = [((), document)]
     for _ in range(MAX_DEPTH):
         below: list[tuple[tuple[str | int, ...], Any]] = []
         for path, value in level:
-            if isinstance(value, dict):
-                below += [((*path, key), item) for key, item in value.items()]
-            elif isinstance(value, list):
-                below += [((*path, position), item) for position, item in enumerate(value)]
-            elif isinstance(value, int) and value.bit_length() > 1000:
-                findings.add(
-                    key_path(*path),
-                    describe(value),
-                    "a finite number that double precision can hold",
-                    "give a number of magnitude below 1e300",
-                )
+            items = value.items() if isinstance(value, dict) else enumerate(value)
+            if isinstance(value, dict) and len(value) > MAX_KEYS:
+                place = key_path(*path) or "the top level"
+                expected = f"at most {MAX_KEYS} keys in one section"
+                raise refuse(source, f"{len(value)} keys in {place}", expected, "keep fewer")
+            for key, item in items:
+                if isinstance(item, dict | list):
+                    below.append(((*path, key), item))
+                elif isinstance(item, int) and item.bit_length() > _MAX_BITS:
+                    remedy = "give a number of magnitude below 1e300"
+                    expected = "a finite number that double precision can hold"
+                    findings.add(key_path(*path, key), describe(item), expected, remedy)
         level = below
     if level:
         raise _too_deep(source)

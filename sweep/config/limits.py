@@ -129,7 +129,9 @@ def check_names(axes: Sequence[Axis], fixed: Sequence[FixedParameter], findings:
     names["sample_rate"] += 1
     for name, count in names.items():
         if count > 1:
-            place = f"axes.{name}" if any(axis.name == name for axis in axes) else name
+            stored = {coordinate_name(one.path, paths): one.path for one in fixed}
+            stored |= {axis.name: f"axes.{axis.name}" for axis in axes}
+            place = stored.get(name, name)
             expected = "a name that no other axis, parameter or column is stored under"
             remedy = "rename the axis or the delay part"
             findings.add(place, f'the name "{name}" {count} times', expected, remedy)

@@ -5,7 +5,6 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from pathlib import Path
 
-from sweep.config.axes import AxisDraft, draft_axes
 from sweep.config.document import (
     Document,
     canonical_document,
@@ -14,6 +13,7 @@ from sweep.config.document import (
     parse_toml,
     read_bytes,
 )
+from sweep.config.drafts import AxisDraft, draft_axes
 from sweep.config.findings import Findings
 from sweep.config.limits import check_delay, check_names, check_size
 from sweep.config.loop import LoopDraft, read_loop

@@ -189,7 +189,7 @@ def _read_within(form: GivenForm, centre: Decimal | None) -> Decimal | None:
     if centre is None:
         return None
     share = CONTEXT.divide(percentage, Decimal(100))
-    within = CONTEXT.multiply(abs(centre), share)
+    within = CONTEXT.multiply(CONTEXT.abs(centre), share)
     return within if _is_positive(form, "within", within) else None
 
 

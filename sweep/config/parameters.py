@@ -7,7 +7,8 @@ from decimal import Decimal
 from functools import cached_property
 from typing import Any
 
-from sweep.config.axes import AxisDraft, BuiltAxis, build_axis
+from sweep.config.axes import BuiltAxis, build_axis
+from sweep.config.drafts import AxisDraft
 from sweep.config.findings import Findings, find_near
 from sweep.config.loop import LoopDraft
 from sweep.config.reading import (

@@ -9,7 +9,8 @@ from typing import Any, Literal
 
 import numpy as np
 
-from sweep.config.axes import AxisDraft, BuiltAxis
+from sweep.config.axes import BuiltAxis
+from sweep.config.drafts import AxisDraft
 from sweep.config.findings import Findings, below, describe, key_path, listed, suggest
 from sweep.config.model import Case, Design, Range, Requirement
 from sweep.config.reading import check_name
