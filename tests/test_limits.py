@@ -187,7 +187,7 @@ def test_a_smooth_crossing_is_found_to_a_ten_thousandth_of_the_span(curve, end):
 
 
 def two_branches(kink, end, before, after):
-    """A line that crosses at ``end`` and changes its branch at ``kink``; convex, as a maximum is."""
+    """A line that crosses at ``end`` and changes branch at ``kink``; convex, as a maximum is."""
     tie = before * (kink - end)
 
     def values(x):
