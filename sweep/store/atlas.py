@@ -18,7 +18,7 @@ from sweep.config import Config
 from sweep.errors import DamagedAtlas, QuestionError, SweepError
 from sweep.grid import Tile
 from sweep.identity import PROGRAM_VERSION
-from sweep.store.arrays import Objects, group_objects, open_arrays, open_dataset, open_group
+from sweep.store.arrays import Objects, group_objects, open_arrays, open_dataset
 from sweep.store.layout import (
     STORE_VERSION,
     atlas_attributes,
@@ -61,7 +61,7 @@ class StoredAtlas(AtlasContents):
 
     @cached_property
     def _arrays(self) -> dict[str, zarr.Array[Any]]:
-        return open_arrays(open_group(self.path))
+        return open_arrays(self.path)
 
     def read(self, measure: str, selection: Sequence[Index]) -> Measured:
         """Values of a measure at the product of the selected nodes.
@@ -251,7 +251,7 @@ def open_stored(path: Path | str) -> StoredAtlas:
     attributes = _read_attributes(folder)
     _check_versions(folder, attributes)
     try:
-        contents = read_contents(attributes, open_arrays(open_group(folder)))
+        contents = read_contents(attributes, open_arrays(folder))
     except (SweepError, MemoryError, *_UNREADABLE) as cause:
         raise DamagedAtlas(
             f"opening the atlas {folder}: {_one_line(cause)}",

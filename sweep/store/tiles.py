@@ -12,7 +12,7 @@ NODES_PER_INNER_CHUNK = 2**15
 """Float32 nodes in an inner chunk: 128 kB; decoding one costs a reader a fixed 0.1 to 0.5 ms."""
 MOST_NODES_PER_INNER_CHUNK = 2**16
 """256 kB; a point read decodes one whole inner chunk."""
-SMALLEST_TILE, USUAL_TILE, LARGEST_TILE = 2**15, 2**18, 2**20
+SMALLEST_TILE, USUAL_TILE, LARGEST_TILE = 2**16, 2**18, 2**20
 """Nodes in a tile that is chosen: what `kill -9` loses, against the fixed cost of a tile."""
 LONGEST_GAIN_RUN = 128
 """Nodes; the kernel walks along a gain axis, and past this a longer walk gains nothing."""
@@ -37,7 +37,7 @@ def choose_tile_shape(grid: Grid) -> tuple[int, ...]:
     >>> kp = Axis("kp", ("controller.kp",), np.arange(211.0), "design", 0)
     >>> damping = Axis("damping", ("plant.damping",), np.arange(4.0), "tolerance", 0)
     >>> choose_tile_shape(Grid((period, kp, damping)))
-    (80, 71, 4)
+    (160, 71, 4)
     """
     edges = _near_cubic_edges(grid.shape, NODES_PER_INNER_CHUNK)
     counts = [-(-n // edge) for n, edge in zip(grid.shape, edges, strict=True)]
@@ -119,7 +119,7 @@ def check_tile_shape(tile_shape: tuple[int, ...], grid: Grid) -> tuple[int, ...]
 
 
 def _tile_budget(nodes: int) -> int:
-    small = min(USUAL_TILE, max(SMALLEST_TILE, nodes // 32))
+    small = min(USUAL_TILE, max(SMALLEST_TILE, nodes // 16))
     return max(small, min(LARGEST_TILE, nodes // 4096))
 
 
