@@ -55,7 +55,7 @@ def _report(given: list[str]) -> int:
     except OSError as error:
         return report_error(_system_refused(error), as_json=as_json)
     except Exception as error:  # noqa: BLE001 - the last stop before the terminal
-        return _report_bug(error)
+        return _report_bug(error, as_json=as_json)
 
 
 def _run(given: list[str]) -> int:
@@ -83,13 +83,14 @@ def _system_refused(error: OSError) -> SweepError:
     )
 
 
-def _report_bug(error: Exception) -> int:
+def _report_bug(error: Exception, *, as_json: bool) -> int:
     if os.environ.get("SWEEP_TRACEBACK"):
         traceback.print_exc()
-    print_note(
-        f"sweep: this is a mistake in the program: {type(error).__name__}: {error}\n"
-        "  -> set SWEEP_TRACEBACK=1, run it again, and report what it prints"
+    bug = SweepError(
+        f"this is a mistake in the program: {type(error).__name__}: {error}",
+        remedy="set SWEEP_TRACEBACK=1, run it again, and report what it prints",
     )
+    report_error(bug, as_json=as_json)
     return BUG
 
 

@@ -50,8 +50,9 @@ def print_text(text: str) -> None:
 
 
 def print_note(text: str) -> None:
-    """Something to know beside the answer, on stderr."""
-    print(text, file=sys.stderr)
+    """Something to know beside the answer, on stderr; control characters are not passed on."""
+    shown = "".join(c if c.isprintable() or c == "\n" else "?" for c in text)
+    print(shown, file=sys.stderr)
 
 
 def report_error(error: SweepError, *, as_json: bool) -> int:

@@ -75,12 +75,11 @@ def realise(structure: LoopStructure, values: Mapping[str, float]) -> Realised:
 
 def _in_z(polynomial: Polynomial, count: int) -> FloatArray:
     """The first ``count`` coefficients in delta, lowest first, as z's, highest first."""
-    total = np.zeros(1)
+    in_z = np.zeros(count)
     for coefficient in reversed(polynomial[:count]):
-        total = np.polyadd(np.polymul(total, [1.0, -1.0]), coefficient.value.ravel()[:1])
-    padded = np.zeros(count)
-    padded[count - len(total) :] = total
-    return padded
+        in_z = np.append(in_z[1:], 0.0) - in_z
+        in_z[-1] += coefficient.value.ravel()[0]
+    return in_z
 
 
 def modes(structure: LoopStructure, values: Mapping[str, float]) -> list[Mode]:

@@ -393,36 +393,40 @@ def _mode_text(frequency_hz: float, damping: float) -> str:
     return f"{format_quantity(frequency_hz, 'Hz')}, damping ratio {damping:.4g}"
 
 
-def _decay_text(seconds: float) -> str:
-    return "none: it does not decay" if seconds == float("inf") else format_quantity(seconds, "s")
+def _decay_text(seconds: float | str) -> str:
+    """A decay time constant; one that is negative or without bound is growth, or none at all."""
+    if isinstance(seconds, str) or not 0 <= seconds < float("inf"):
+        return "does not decay"
+    return format_quantity(seconds, "s")
 
 
 def _modes(computed: Mapping[str, Any]) -> Table:
+    """One line for each real eigenvalue or conjugate pair."""
     table = _table("mode", "frequency", "damping ratio", "decay time", "magnitude")
     for column in (1, 2, 3, 4):
         table.columns[column].justify = "right"
-    for number, mode in enumerate(computed["modes"], start=1):
+    for mode in computed["modes"]:
+        imaginary = mode["eigenvalue"][1]
+        if imaginary < 0:
+            continue
         table.add_row(
-            str(number),
-            _or_none(mode["frequency_hz"], "Hz"),
-            "" if mode["damping"] is None else f"{mode['damping']:.4g}",
-            _or_none(mode["decay_time_s"], "s"),
+            "pair" if imaginary else "real",
+            format_quantity(mode["frequency_hz"], "Hz"),
+            f"{mode['damping']:.4g}",
+            _decay_text(mode["decay_time_s"]),
             f"{mode['magnitude']:.9g}",
         )
     return table
-
-
-def _or_none(value: float | str | None, unit: str) -> str:
-    if value is None or isinstance(value, str):
-        return value or ""
-    return format_quantity(value, unit)
 
 
 def _coefficients(found: Mapping[str, Any]) -> RenderableType:
     rows = []
     for name, value in found.items():
         texts = [f"{item:.10g}" for item in value] if isinstance(value, list) else [str(value)]
-        rows.append((name.replace("_", " "), ", ".join(texts)))
+        text = ", ".join(texts)
+        if name == "whole_delay":
+            text = f"{format_quantity(float(value), 'samples')}; {HALF_SAMPLE}"
+        rows.append((name.replace("_", " "), text))
     return _facts(rows)
 
 
