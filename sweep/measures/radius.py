@@ -5,6 +5,7 @@ loop parameters -> realised coefficients (`sweep.loop`) -> walks -> `sweep.measu
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
@@ -16,7 +17,7 @@ from sweep.loop.bounded import UNIT_ROUNDOFF, FloatArray
 from sweep.loop.controllers import RealisedController, realise_controller
 from sweep.loop.sampling import Polynomial, SampledPlant, sample_plant
 from sweep.measures.reference import compute_reference
-from sweep.measures.roots import TARGET, solve_walks
+from sweep.measures.roots import evaluation_roundoffs, solve_walks
 from sweep.vocabulary import LOG_RADIUS_FLOOR, STABILITY_THRESHOLD, LoopStructure
 
 IntArray = NDArray[np.int32]
@@ -32,12 +33,26 @@ class RadiusBlock:
     """Natural logarithm of the spectral radius; minus infinity when every eigenvalue is 0."""
     mode_angle: FloatArray
     """Argument of the dominant eigenvalue, rad, 0 to pi."""
-    bound: FloatArray
-    """Bound on the error of ``log_radius``; infinite where the radius may as well be 0."""
+    error: FloatArray
+    """Bound on the error of the radius itself."""
     slow: NDArray[np.bool_]
     """Nodes that went to the slow path."""
     undecided: NDArray[np.bool_]
     """Nodes that neither path could place on one side of the threshold."""
+
+    @property
+    def bound(self) -> FloatArray:
+        """Bound on the error of ``log_radius``: |log(1 + e)| <= e / (1 - e).
+
+        Below `LOG_RADIUS_FLOOR` every radius counts as the floor, so nothing is uncertain there.
+        Infinite where the radius may as well be 0.
+        """
+        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+            radius = np.exp(self.log_radius)
+            relative = self.error / radius
+            bound = np.where(relative < 0.5, relative / (1 - relative), np.inf)
+            floored = radius + self.error <= np.exp(LOG_RADIUS_FLOOR)
+        return np.where(floored, 0.0, bound)
 
 
 @dataclass(frozen=True, eq=False)
@@ -45,7 +60,7 @@ class _Table:
     """Coefficients of every distinct plant or controller of a block, one in each row."""
 
     numerator: FloatArray
-    """(rows, 2, powers): coefficients in delta and their weights."""
+    """(rows, 2, powers): coefficients in delta and their errors."""
     denominator: FloatArray
     """(rows, 2, powers)."""
     row: IntArray
@@ -78,39 +93,26 @@ def compute_radius(
     shape
         Nodes along each axis.
     """
-    log_radius, mode_angle, error = _compute_fast(structure, parameters, shape)
-    slow = ~(_bound_of_log(log_radius, error) <= TARGET) | ~_is_decided(log_radius, error)
-    for index in zip(*np.nonzero(slow), strict=True):
+    block = _compute_fast(structure, parameters, shape)
+    for index in zip(*np.nonzero(block.slow), strict=True):
         values = {path: _at(array, index) for path, array in parameters.items()}
         found = compute_reference(structure, values)
-        if not error[index] <= found.bound:
-            log_radius[index] = found.log_radius
-            mode_angle[index] = found.mode_angle
-            error[index] = found.bound
-    undecided = slow & ~_is_decided(log_radius, error)
-    return RadiusBlock(log_radius, mode_angle, _bound_of_log(log_radius, error), slow, undecided)
+        if found.error <= block.error[index] or not math.isfinite(block.error[index]):
+            block.log_radius[index] = found.log_radius
+            block.mode_angle[index] = found.mode_angle
+            block.error[index] = found.error
+        block.undecided[index] = not _is_decided(block.log_radius[index], block.error[index])
+    return block
 
 
-def _bound_of_log(log_radius: FloatArray, error: FloatArray) -> FloatArray:
-    """Bound on the error of the logarithm from one on the radius: |log(1 + e)| <= e / (1 - e).
-
-    Below `LOG_RADIUS_FLOOR` every radius counts as the floor, so nothing is uncertain there.
-    """
-    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        relative = error / np.exp(log_radius)
-        bound = np.where(relative < 0.5, relative / (1 - relative), np.inf)
-        floored = np.exp(log_radius) + error <= np.exp(LOG_RADIUS_FLOOR)
-    return np.where(floored, 0.0, bound)
-
-
-def _is_decided(log_radius: FloatArray, error: FloatArray) -> NDArray[np.bool_]:
+def _is_decided(log_radius: float, error: float) -> bool:
     """Whether the radius, give or take ``error``, lies on one side of the threshold."""
-    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        radius = np.exp(log_radius)
-        relative = error / radius
-        low = np.where(relative < 1, log_radius + np.log1p(-relative), -np.inf)
-        high = np.where(radius > 0, log_radius + np.log1p(relative), np.log(error))
-    return (low >= STABILITY_THRESHOLD) | (high < STABILITY_THRESHOLD)
+    if not math.isfinite(error):
+        return False
+    radius = math.exp(log_radius)
+    low = log_radius + math.log1p(-error / radius) if error < radius else -math.inf
+    high = log_radius + math.log1p(error / radius) if radius > 0 else math.log(error)
+    return low >= STABILITY_THRESHOLD or high < STABILITY_THRESHOLD
 
 
 def _at(array: FloatArray, index: tuple[np.intp, ...]) -> float:
@@ -119,32 +121,36 @@ def _at(array: FloatArray, index: tuple[np.intp, ...]) -> float:
 
 def _compute_fast(
     structure: LoopStructure, parameters: Mapping[str, FloatArray], shape: tuple[int, ...]
-) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """log_radius, mode_angle and the bound on the radius, by the compiled kernel."""
+) -> RadiusBlock:
+    """The block by the compiled kernel alone; ``slow`` marks what it could not settle."""
     rank = len(shape)
     plant = sample_plant(structure, parameters)
     controller = realise_controller(structure, parameters)
     plants = _tabulate(plant.numerator, plant.denominator, rank)
     controllers = _tabulate(controller.numerator, controller.denominator, rank)
-    results = [np.full(int(np.prod(shape)), np.nan) for _ in range(3)]
+    results = [np.full(math.prod(shape), np.nan) for _ in range(3)]
+    slow = np.ones(math.prod(shape), dtype=bool)
     walk_axis, steady = _choose_walk_axis(parameters, shape)
     plant_rows = _as_walks(plants.row, shape, walk_axis)
     controller_rows = _as_walks(controllers.row, shape, walk_axis)
     nodes = _as_walks(np.arange(len(results[0]), dtype=np.int32).reshape(shape), shape, walk_axis)
     for key, walks, steps in _batches(plant, controller, shape, walk_axis):
         batch = np.ix_(walks, steps)
+        roundoffs = evaluation_roundoffs(key.delay + key.plant_order + key.controller_order)
         solve_walks(
             key.delay,
-            _powers(plants, key.plant_degree, key.plant_order),
-            _powers(controllers, key.controller_degree, key.controller_order),
+            _coefficients(plants, key.plant_degree, key.plant_order, roundoffs),
+            _coefficients(controllers, key.controller_degree, key.controller_order, roundoffs),
             np.ascontiguousarray(plant_rows[batch]),
             np.ascontiguousarray(controller_rows[batch]),
             np.ascontiguousarray(nodes[batch]),
             steady,
             *results,
+            slow,
         )
+    undecided = np.zeros(shape, dtype=bool)
     log_radius, mode_angle, error = (result.reshape(shape) for result in results)
-    return log_radius, mode_angle, error
+    return RadiusBlock(log_radius, mode_angle, error, slow.reshape(shape), undecided)
 
 
 def _tabulate(numerator: Polynomial, denominator: Polynomial, rank: int) -> _Table:
@@ -157,18 +163,27 @@ def _tabulate(numerator: Polynomial, denominator: Polynomial, rank: int) -> _Tab
 def _rows(polynomial: Polynomial, shape: tuple[int, ...]) -> FloatArray:
     table = np.empty((int(np.prod(shape)), 2, len(polynomial)))
     for power, coefficient in enumerate(polynomial):
-        # a coefficient's own error counts as rounding: the kernel allows at least 20 roundoffs
-        # of a weight, so an eighth of the error, in roundoffs, is enough
-        weight = np.abs(coefficient.value) + coefficient.error / (8 * UNIT_ROUNDOFF)
         table[:, 0, power] = np.broadcast_to(coefficient.value, shape).ravel()
-        table[:, 1, power] = np.broadcast_to(weight, shape).ravel()
+        table[:, 1, power] = np.broadcast_to(coefficient.error, shape).ravel()
     return table
 
 
-def _powers(table: _Table, degree: int, order: int) -> tuple[FloatArray, FloatArray]:
+def _weighted(rows: FloatArray, powers: int, roundoffs: float) -> FloatArray:
+    """The first powers of each row, with weights in place of errors.
+
+    The kernel allows a weight ``roundoffs`` times the unit roundoff, so that a weight of the
+    magnitude plus the coefficient's own error in that measure covers both.
+    """
+    values, errors = rows[:, 0, :powers], rows[:, 1, :powers]
+    return np.stack([values, np.abs(values) + errors / (roundoffs * UNIT_ROUNDOFF)], axis=1)
+
+
+def _coefficients(
+    table: _Table, degree: int, order: int, roundoffs: float
+) -> tuple[FloatArray, FloatArray]:
     return (
-        np.ascontiguousarray(table.numerator[:, :, : degree + 1]),
-        np.ascontiguousarray(table.denominator[:, :, : order + 1]),
+        _weighted(table.numerator, degree + 1, roundoffs),
+        _weighted(table.denominator, order + 1, roundoffs),
     )
 
 

@@ -23,7 +23,7 @@ class Radius:
     """Natural logarithm; minus infinity when every eigenvalue is 0, NaN when LAPACK fails."""
     mode_angle: float
     """Argument of the dominant eigenvalue, rad, 0 to pi."""
-    bound: float
+    error: float
     """Bound on the error of the radius itself, not of its logarithm."""
 
 
@@ -71,7 +71,7 @@ def _solve(change: FloatArray) -> Radius:
     return Radius(
         log_radius=float(logarithms[top]),
         mode_angle=max(math.atan2(abs(tie.imag), 1 + tie.real) for tie in ties),
-        bound=reach + 4 * UNIT_ROUNDOFF * float(radii[top]),
+        error=reach + 4 * UNIT_ROUNDOFF * float(radii[top]),
     )
 
 

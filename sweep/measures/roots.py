@@ -17,7 +17,7 @@ steps and corrected together by Weierstrass's iteration, z_i <- z_i - W_i with
 which doubles the digits with each pass and comes with its own proof: the N disks of radius
 (N - 1) |W_i| about z_i - W_i hold all N roots, as many in each connected part of their union as it
 has disks. The evaluation error of P enters the radii, so the bound that is returned is a bound on
-the true error.
+the true error. Roots that cannot be dominant need not converge: their disks need only stay below.
 
 References
 ----------
@@ -36,6 +36,7 @@ import numba
 import numpy as np
 from numpy.typing import NDArray
 
+from sweep.measures.kernel_cache import keep_kernels_in
 from sweep.measures.lanes import (
     WIDTH,
     all_at_most,
@@ -45,12 +46,22 @@ from sweep.measures.lanes import (
     store,
     where_greater,
 )
+from sweep.vocabulary import STABILITY_THRESHOLD
 
 TARGET = 1e-10
 """Largest error bound of log_radius with which the kernel is content."""
 
-_UNIT_ROUNDOFF = 2.0**-53
+RELATIVE_TARGET = 3e-9
+"""Largest part of |log_radius| that stopping the iteration may leave: below single precision."""
+
+UNIT_ROUNDOFF = 2.0**-53
 """Largest relative error of one correctly rounded operation."""
+
+UNSETTLED, EXHAUSTED, SETTLED = 0, 1, 2
+"""What the disks say of a group of lanes."""
+
+_CONVERGED = 1e-7
+"""Correction, relative to sqrt(1 + |delta|^2), from which on the disks are worth drawing."""
 _WARM_PASSES = 24
 """Passes from extrapolated roots before starting anew."""
 _COLD_PASSES = 120
@@ -67,7 +78,19 @@ Rows: TypeAlias = NDArray[np.float64]
 RowNumbers: TypeAlias = NDArray[np.int32]
 """Array of shape (walks, steps)."""
 
+keep_kernels_in(numba)
+
 _compiled = numba.njit(nogil=True, cache=True, error_model="numpy", fastmath={"contract"})
+
+
+@_compiled
+def evaluation_roundoffs(degree: int) -> float:
+    """Rounding errors that evaluating P may collect, in roundoffs of the sum of its terms' sizes.
+
+    Each of at most ``degree`` steps multiplies complex numbers (sqrt(5)) and adds (1); forming the
+    coefficients adds a few more.
+    """
+    return 3.3 * degree + 6.0
 
 
 @_compiled
@@ -170,11 +193,11 @@ def _correct(
 ) -> Lanes:
     """Weierstrass corrections of all roots; returns, by lane, how far they miss the tolerance.
 
-    ``work`` receives the corrections (two arrays) and 1 / |a prod (z_i - z_j)|^2.
+    The first three arrays of ``work`` receive the corrections and 1 / |a prod (z_i - z_j)|^2.
     """
     fix_re, fix_im, spacing = work[0], work[1], work[2]
     lead = load(open_loop, open_loop.shape[0] - 1)
-    tolerance = (0.25 * TARGET / degree) ** 2
+    tolerance = _CONVERGED**2
     excess = spread(-1.0)
     for i in range(degree):
         x, y = load(re, i), load(im, i)
@@ -207,7 +230,7 @@ def _apply(degree: int, re: Rows, im: Rows, work: Rows, kick: float) -> None:
 
 
 @_compiled
-def _enclose(
+def _evaluation_noise(
     degree: int,
     delay: int,
     weights_a: Rows,
@@ -215,21 +238,15 @@ def _enclose(
     re: Rows,
     im: Rows,
     work: Rows,
-    out: Rows,
-) -> bool:
-    """Disks round all roots and what they prove; returns whether every lane meets `TARGET`.
+) -> Lanes:
+    """Bound what rounding did to each correction; returns the largest correction, noise included.
 
-    ``out`` receives, by lane: |z|^2 - 1, Re z and Im z of the dominant root, its modulus and the
-    bound on the error of that modulus.
+    Rows of ``work[3]`` receive the bounds, rows of ``work[4]`` the sizes of the corrections.
     """
-    fix_re, fix_im, spacing = work[0], work[1], work[2]
-    rounding = 4.0 * (degree + 4.0) * _UNIT_ROUNDOFF
-    share = 1.001 * (degree - 1.0)
-    if degree == 1:
-        share = 1.001
-    reach, best = spread(0.0), spread(-2.0)
-    radius, modulus = spread(0.0), spread(0.0)
+    fix_re, fix_im, spacing, noise, sizes = work[0], work[1], work[2], work[3], work[4]
+    rounding = evaluation_roundoffs(degree) * UNIT_ROUNDOFF
     top_b, top_a = weights_b.shape[0] - 1, weights_a.shape[0] - 1
+    largest = spread(0.0)
     for i in range(degree):
         x, y = load(re, i), load(im, i)
         size, z = square_root(x * x + y * y), 1.0 + x
@@ -242,15 +259,72 @@ def _enclose(
             total = total * size + load(weights_a, power)
         for _ in range(delay):
             total = total * z_size
-        noise = (total + fed) * square_root(load(spacing, i)) * rounding
+        uncertain = (total + fed) * square_root(load(spacing, i)) * rounding
+        uncertain = uncertain + 4.0 * UNIT_ROUNDOFF * size
         dx, dy = load(fix_re, i), load(fix_im, i)
-        x, y = x - dx, y - dy
+        correction = 1.001 * square_root(dx * dx + dy * dy)
+        store(noise, i, uncertain)
+        store(sizes, i, correction)
+        largest = _maximum(largest, correction + uncertain)
+    return largest
+
+
+@_compiled
+def _squared_gap(degree: int, i: int, re: Rows, im: Rows) -> Lanes:
+    """Squared distance from root i to the nearest other one."""
+    x, y = load(re, i), load(im, i)
+    nearest = spread(math.inf)
+    for j in range(degree):
+        if j != i:
+            dx, dy = x - load(re, j), y - load(im, j)
+            distance = dx * dx + dy * dy
+            nearest = where_greater(nearest, distance, distance, nearest)
+    return nearest
+
+
+@_compiled
+def _enclose(
+    degree: int,
+    delay: int,
+    weights_a: Rows,
+    weights_b: Rows,
+    re: Rows,
+    im: Rows,
+    work: Rows,
+    out: Rows,
+) -> int:
+    """Disks round all roots and what they prove.
+
+    Returns `SETTLED` when every lane meets the targets, `EXHAUSTED` when what is missing is the
+    rounding's part and no pass can improve it, else `UNSETTLED`.
+
+    A root that stands clear of the others has, besides the disk of Smith's theorem, a much smaller
+    one: scale its row of the companion-like matrix by s = 2 w / gap, w the largest correction, and
+    Gerschgorin's disk about it shrinks to (N - 1) |W_i| s while it still meets no other.
+
+    ``out`` receives, by lane: |z|^2 - 1, Re z and Im z of the dominant root, its modulus and the
+    bound on the error of that modulus.
+    """
+    fix_re, fix_im, noise, sizes = work[0], work[1], work[3], work[4]
+    others = max(degree - 1.0, 1.0)
+    largest = _evaluation_noise(degree, delay, weights_a, weights_b, re, im, work)
+    reach, best = spread(0.0), spread(-2.0)
+    radius, modulus, loose = spread(0.0), spread(0.0), spread(0.0)
+    for i in range(degree):
+        correction, uncertain = load(sizes, i), load(noise, i)
+        gap = square_root(_squared_gap(degree, i, re, im))
+        whole = others * (correction + uncertain)
+        small = whole * (2.002 * largest / gap)
+        is_clear = gap - (2.0 * degree + 8.0) * largest
+        share = where_greater(is_clear, spread(0.0), small, whole)
+        disk = share + uncertain
+        x, y = load(re, i) - load(fix_re, i), load(im, i) - load(fix_im, i)
         beyond = 2.0 * x + (x * x + y * y)
         z = 1.0 + x
         z_size = square_root(z * z + y * y)
-        disk = (square_root(dx * dx + dy * dy) + noise) * share + 4.0 * _UNIT_ROUNDOFF * size
         reach = _maximum(reach, z_size + disk)
         radius = where_greater(beyond, best, disk, radius)
+        loose = where_greater(beyond, best, share - uncertain, loose)
         modulus = where_greater(beyond, best, z_size, modulus)
         best = _maximum(best, beyond)
     # of equal magnitudes the larger argument: the smallest real part, upper half plane
@@ -266,9 +340,13 @@ def _enclose(
     store(out, 1, 1.0 + out_x)
     store(out, 2, out_y)
     store(out, 3, modulus)
-    bound = _maximum(reach - modulus, radius) + 4.0 * _UNIT_ROUNDOFF * modulus
+    bound = _maximum(reach - modulus, radius) + 4.0 * UNIT_ROUNDOFF * modulus
     store(out, 4, bound)
-    return all_at_most(bound, TARGET * modulus)
+    # what the iteration leaves must also vanish beside the logarithm itself, however small
+    digits = RELATIVE_TARGET * _maximum(best, 0.0 - best)
+    if all_at_most(bound, TARGET * modulus) and all_at_most(loose, digits):
+        return SETTLED
+    return EXHAUSTED if all_at_most(loose, spread(0.0)) else UNSETTLED
 
 
 @_compiled
@@ -284,18 +362,16 @@ def _iterate(
 ) -> tuple[int, bool]:
     """Correct until every lane meets `TARGET` or ``limit`` passes are spent; the passes taken."""
     open_loop, feedback, weights_a, weights_b = coefficients
-    converged_passes = 0
     for number in range(1, limit + 1):
         excess = _correct(degree, delay, open_loop, feedback, re, im, work)
         converged = all_at_most(excess, spread(0.0))
-        converged_passes += converged
+        # beyond `_LOOSE` passes minor roots may be left loose: only the disks decide
         if converged or (number > _LOOSE and number % 2 == 0) or number == limit:
-            # beyond `_LOOSE` passes minor roots may be left loose: only the disks decide
-            met = _enclose(degree, delay, weights_a, weights_b, re, im, work, out)
-            if met or converged_passes >= 3 or number == limit:
+            state = _enclose(degree, delay, weights_a, weights_b, re, im, work, out)
+            if state != UNSETTLED or number == limit:
                 _apply(degree, re, im, work, 0.0)
-                return number, met
-        kick = 0.6 if number in _KICKS else 0.0
+                return number, state == SETTLED
+        kick = 0.6 if number in _KICKS and not converged else 0.0
         _apply(degree, re, im, work, kick)
     return limit, False
 
@@ -317,7 +393,8 @@ def solve_walks(
     steady: bool,
     log_radius: NDArray[np.float64],
     mode_angle: NDArray[np.float64],
-    bound: NDArray[np.float64],
+    error: NDArray[np.float64],
+    slow: NDArray[np.bool_],
 ) -> int:
     """Solve every node of a batch of walks that share one structure.
 
@@ -334,9 +411,10 @@ def solve_walks(
         Where the results go, shape (walks, steps).
     steady
         Whether the open-loop polynomial stays the same along each walk.
-    log_radius, mode_angle, bound
+    log_radius, mode_angle, error, slow
         Receive the logarithm of the spectral radius, the argument of the dominant root (rad, 0 to
-        pi) and the bound on the error of the radius itself; flat, indexed by ``nodes``.
+        pi), the bound on the error of the radius itself, and whether that misses `TARGET` or leaves
+        the node undecided at the threshold; flat, indexed by ``nodes``.
 
     Returns
     -------
@@ -356,7 +434,7 @@ def solve_walks(
     fixed, fixed_weights = np.zeros((4, WIDTH)), np.zeros((4, WIDTH))
     re, im = np.zeros((degree, WIDTH)), np.zeros((degree, WIDTH))
     first_re, first_im = np.zeros((degree, WIDTH)), np.zeros((degree, WIDTH))
-    past, work = np.zeros((4, degree, WIDTH)), np.zeros((3, degree, WIDTH))
+    past, work = np.zeros((4, degree, WIDTH)), np.zeros((5, degree, WIDTH))
     out = np.zeros((5, WIDTH))
     powers_a, powers_b = plant_den.shape[2], plant_num.shape[2]
     passes = 0
@@ -404,5 +482,8 @@ def solve_walks(
                 else:
                     log_radius[node] = -math.inf
                 mode_angle[node] = _argument(out[1, lane], out[2, lane])
-                bound[node] = out[4, lane]
+                error[node] = out[4, lane]
+                distance = abs(log_radius[node] - STABILITY_THRESHOLD)
+                allowed = min(TARGET, 0.5 * distance) * modulus
+                slow[node] = not (out[4, lane] <= allowed and allowed < math.inf)
     return passes
