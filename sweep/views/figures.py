@@ -312,7 +312,7 @@ def _head(figure: SubFigure, axes: Axes, drawn: _Drawn) -> None:
     ]
     lines = textwrap.wrap(printable(f"held: {', '.join(held)}"), 96) if held else []
     lines += [
-        f"every {step}th node of {axis.name} is drawn"
+        f"one node in {step} of {axis.name} is drawn"
         for axis, step in ((drawn.x_axis, drawn.step_x), (drawn.y_axis, drawn.step_y))
         if step > 1
     ]

@@ -1,0 +1,288 @@
+"""Tables, maps and progress: what they show, and that they show it the same way every time."""
+
+from __future__ import annotations
+
+import io
+from pathlib import Path
+from types import SimpleNamespace
+
+import matplotlib as mpl
+import numpy as np
+import pytest
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.colors import to_rgb
+from memory_atlas import atlas, axis, rows
+
+from sweep.compute.progress import KernelsReady, SweepStarted, SweepStopping, TileStored
+from sweep.views import figures
+from sweep.views.figures import draw_map, save_figure
+from sweep.views.progress import LineTeller, progress_listener
+from sweep.views.tables import info_view, limits_view, plan_view, plane_view, run_view, to_text
+
+
+def shown(view, width=100):
+    return to_text(view, width=width, terminal=False)
+
+
+# --- tables ------------------------------------------------------------------------------------
+
+HOSTILE = "x [bold]y[/bold] \x1b[31mred\n:smile: $z$"
+
+
+def two_gains(title="Bench", **more):
+    gain = axis("kp", [0.0, 0.5, 1.0], sets="controller.kp", display_unit="V/um")
+    damping = axis("damping", [0.01, 0.02], role="tolerance", sets="plant.damping")
+    period = axis("sample_period", [0.001, 0.002], unit="s", display_unit="ms")
+    values = np.linspace(-0.5, 0.6, 12).reshape(3, 2, 2)
+    return atlas([gain, damping, period], values, title=title, **more)
+
+
+def test_a_text_from_elsewhere_is_shown_as_it_is_and_cannot_steer_the_terminal():
+    designs = (SimpleNamespace(name=HOSTILE, values={}),)
+    text = shown(info_view(two_gains(HOSTILE, designs=designs).facts()))
+    assert "[bold]y[/bold]" in text
+    assert ":smile:" in text
+    assert "\x1b" not in text
+
+
+def test_a_limits_table_says_units_once_in_its_heads():
+    text = shown(limits_view(two_gains().limits("kp")))
+    assert "sample_period [ms]" in text
+    assert "from [V/um]" in text
+    assert "beyond the axis end" in text
+    assert "worst over damping 0.01 to 0.02" in text
+
+
+def test_rows_that_were_left_out_are_counted():
+    text = shown(limits_view(two_gains().limits("kp", rows=1)))
+    assert "1 of 2 rows" in text
+    assert "--rows" in text
+
+
+def test_an_axis_in_seconds_has_one_unit_for_all_of_it():
+    asked = atlas([axis("delay", [1e-6, 1e-5, 1e-3], unit="s")], [-1, -1, 1])
+    text = shown(limits_view(asked.limits("delay")))
+    assert "from [ms]" in text
+    assert "0.001 " in text
+
+
+def test_a_plan_says_roles_sizes_and_notes():
+    document = {
+        "atlas": "results/bench.zarr",
+        "nodes": 12,
+        "tiles": 4,
+        "tiles_done": 1,
+        "nodes_computed": 9,
+        "seconds": 75.0,
+        "start_seconds": 8.0,
+        "workers": 2,
+        "bytes_needed": 8.1e9,
+        "bytes_free": 9.3e10,
+        "notes": ["design quick lies between nodes"],
+    }
+    text = shown(plan_view(document, two_gains().grid, "Bench"))
+    for piece in ("tolerance", "4, of which 1 are done", "about 1 min 15 s", "8.1 GB", "between"):
+        assert piece in text
+
+
+@pytest.mark.parametrize(
+    ("computed", "done", "first"),
+    [(0, 4, "Nothing to do"), (9, 4, "Done"), (6, 3, "Stopped in good order")],
+)
+def test_a_run_report_begins_with_what_happened(computed, done, first):
+    document = {
+        "atlas": "results/bench.zarr",
+        "tiles": 4,
+        "tiles_done": done,
+        "nodes_computed": computed,
+        "seconds": 2.0,
+        "slow_nodes": 1,
+        "undecided_nodes": 0,
+    }
+    assert shown(run_view(document)).startswith(first)
+
+
+# --- maps --------------------------------------------------------------------------------------
+
+
+def plane(values=None, **more):
+    x = axis("sample_period", np.geomspace(1e-3, 1e-1, 12), unit="s", display_unit="ms")
+    y = axis("kp", np.linspace(-1, 1, 9), display_unit="V/um", long_name="proportional gain")
+    held = axis("damping", [0.01, 0.02], role="tolerance")
+    if values is None:
+        values = np.add.outer(np.linspace(-0.3, 0.3, 12), np.linspace(-0.2, 0.2, 9))
+    stacked = np.stack([values, values + 1], axis=-1)
+    return atlas([x, y, held], stacked, **more).plane("sample_period", "kp")
+
+
+@pytest.mark.parametrize("ending", ["png", "svg", "pdf"])
+def test_the_same_answer_gives_the_same_bytes_whatever_the_settings(tmp_path, ending):
+    first, second = tmp_path / f"a.{ending}", tmp_path / f"b.{ending}"
+    save_figure(draw_map(plane()), first)
+    with mpl.rc_context({"font.size": 31, "axes.facecolor": "red", "savefig.dpi": 20}):
+        save_figure(draw_map(plane()), second)
+    assert first.read_bytes() == second.read_bytes()
+
+
+def colours_at(figure, places):
+    """RGB of the drawn pixels at data coordinates."""
+    canvas = FigureCanvasAgg(figure)
+    canvas.draw()
+    pixels = np.asarray(canvas.buffer_rgba())
+    found = figure.axes[0].transData.transform(places)
+    return [pixels[len(pixels) - round(y), round(x), :3] / 255 for x, y in found.tolist()]
+
+
+def test_what_is_not_stable_looks_unlike_what_is_unknown_and_what_is_stable():
+    values = np.full((12, 9), -0.3)
+    values[4:8] = 0.3
+    values[8:] = np.nan
+    figure = draw_map(plane(values))
+    places = [(10.0, 0.13), (1.9, 0.13), *((60.0, y) for y in np.linspace(-0.9, 0.9, 60))]
+    unstable, stable, *unknown = colours_at(figure, places)
+    assert np.allclose(unstable, to_rgb(figures.UNSTABLE), atol=0.01)
+    assert np.abs(stable - unstable).max() > 0.2
+    assert len({tuple(colour) for colour in unknown}) > 1, "hatched, so of two colours at least"
+    assert np.abs(unknown - unstable).max(axis=1).min() > 0.02
+
+
+def lightness(colour):
+    return float(np.dot([0.299, 0.587, 0.114], colour[:3]))
+
+
+def test_shades_of_what_is_stable_fall_in_lightness_without_a_turn():
+    shades = [lightness(figures.DECAY(value)) for value in np.linspace(0, 1, 60)]
+    assert (np.diff(shades) < 0).all()
+    assert lightness(to_rgb(figures.UNSTABLE)) - shades[0] > 0.05
+
+
+def texts_of(figure):
+    import matplotlib.text
+
+    return " ".join(item.get_text() for item in figure.findobj(matplotlib.text.Text))
+
+
+def test_a_map_names_units_held_values_roles_boundary_and_cautions():
+    words = texts_of(draw_map(plane()))
+    for piece in (
+        "sample period (ms)",
+        "proportional gain, kp (V/um)",
+        "damping = 0.01 (tolerance, nominal)",
+        "stability boundary",
+        "not a safety case",
+        "decay time constant",
+    ):
+        assert piece in words.replace("\n", " ")
+    assert "not computed" not in words
+
+
+def test_an_axis_spaced_by_ratio_is_drawn_by_ratio():
+    axes = draw_map(plane()).axes[0]
+    assert (axes.get_xscale(), axes.get_yscale()) == ("log", "linear")
+
+
+def test_the_boundary_lies_where_the_threshold_is_crossed():
+    figure = draw_map(plane())
+    (contour,) = [item for item in figure.axes[0].collections if hasattr(item, "levels")]
+    points = np.concatenate([path.vertices for path in contour.get_paths()])
+    x = np.interp(points[:, 0], np.geomspace(1, 100, 12), np.linspace(-0.3, 0.3, 12))
+    assert np.abs(x + 0.2 * points[:, 1]).max() < 1e-6
+
+
+def test_a_named_design_is_marked_in_the_units_of_the_axes():
+    designs = (SimpleNamespace(name="quick", values={"sample_period": 0.004, "kp": 0.25}),)
+    figure = draw_map(plane(designs=designs))
+    (mark,) = [line for line in figure.axes[0].lines if line.get_marker() == "o"]
+    assert (mark.get_xdata()[0], mark.get_ydata()[0]) == pytest.approx((4.0, 0.25))
+    assert "quick" in texts_of(figure)
+
+
+@pytest.mark.parametrize("value", [np.nan, -36.0, 0.3])
+def test_a_plane_of_one_kind_is_drawn_without_complaint(tmp_path, value):
+    save_figure(draw_map(plane(np.full((12, 9), value))), tmp_path / "map.png")
+
+
+def test_hostile_titles_and_labels_are_drawn_as_they_are(tmp_path):
+    unit = rows("unit", ["$x_1", HOSTILE], {"plant.gain": [1, 2]})
+    gain = axis("kp", [0.0, 1.0])
+    asked = atlas([unit, gain], [[-1, 1], [1, -1]], title=HOSTILE + " 云台")
+    save_figure(draw_map(asked.plane("unit", "kp")), tmp_path / "map.svg")
+
+
+def test_planes_with_a_single_node_on_an_edge_are_drawn(tmp_path):
+    asked = atlas([axis("kp", [0.5]), axis("ki", [1.0, 2.0])], [[-1, 1]])
+    save_figure(draw_map(asked.plane("kp", "ki")), tmp_path / "map.png")
+    assert "1 of 2 computed nodes" in shown(plane_view(asked.plane("kp", "ki")))
+
+
+def test_a_plane_finer_than_the_picture_is_thinned_and_says_so():
+    asked = atlas([axis("kp", np.arange(3100.0)), axis("ki", [1.0, 2.0])], np.zeros((3100, 2)) - 1)
+    assert "every 3th" not in texts_of(draw_map(asked.plane("kp", "ki")))
+    assert "one node in 3 of kp" in texts_of(draw_map(asked.plane("kp", "ki")))
+
+
+def test_a_map_that_cannot_be_written_leaves_nothing_behind(tmp_path):
+    folder = tmp_path / "map.png"
+    folder.mkdir()
+    with pytest.raises(IsADirectoryError):
+        save_figure(draw_map(plane()), folder)
+    assert list(tmp_path.iterdir()) == [folder]
+
+
+# --- progress ----------------------------------------------------------------------------------
+
+STARTED = SweepStarted("Bench", Path("bench.zarr"), 2, 10, 0, 1000, 0)
+
+
+def stored(done):
+    return TileStored((done,), 100, done, 100 * done, 100 * done, 0.5 * done)
+
+
+def test_plain_progress_is_a_line_every_few_seconds():
+    now = iter(np.arange(0, 100, 2.0))
+    stream = io.StringIO()
+    teller = LineTeller(stream, clock=lambda: next(now))
+    for event in (STARTED, KernelsReady(3.0), *map(stored, range(1, 11))):
+        teller.notify(event)
+    lines = stream.getvalue().splitlines()
+    assert lines[0] == "Bench: 10 of 10 tiles to compute, 2 at once"
+    assert 2 <= len(lines[1:]) <= 5
+    assert all("% " in line and "left" in line for line in lines[1:])
+
+
+def test_a_run_that_stops_says_why():
+    stream = io.StringIO()
+    LineTeller(stream).notify(SweepStopping("interrupted"))
+    assert "stopping" in stream.getvalue()
+
+
+def test_a_run_goes_on_when_nobody_reads_its_progress():
+    class Gone(io.StringIO):
+        def write(self, _text):
+            raise BrokenPipeError
+
+    teller = LineTeller(Gone())
+    teller.notify(STARTED)
+    teller.notify(SweepStopping("until"))
+
+
+def test_a_terminal_gets_a_bar_and_a_file_gets_lines():
+    class Terminal(io.StringIO):
+        def isatty(self):
+            return True
+
+    screen, paper = Terminal(), io.StringIO()
+    for stream in (screen, paper):
+        with progress_listener(stream) as listener:
+            for event in (
+                STARTED,
+                KernelsReady(3.0),
+                stored(4),
+                SweepStopping("until"),
+                stored(10),
+            ):
+                listener.notify(event)
+    assert "100%" in screen.getvalue()
+    assert "1,000 nodes" in screen.getvalue()
+    assert "the time is up" in screen.getvalue()
+    assert paper.getvalue().startswith("Bench: 10 of 10 tiles")
