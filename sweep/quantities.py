@@ -65,6 +65,7 @@ _NUMBER: Final = re.compile(
     r"(?:\s+(1/s)|\s*([^\W\d_][^\s,]*|%))?\s*"
 )
 _LONGEST_TEXT: Final = 200
+_WRITE_ONE: Final = "write a number, or a text with a unit"
 _FINITE: Final = "a finite number that double precision can hold"
 _SMALLER: Final = "give a number of magnitude between 1e-300 and 1e300, or 0"
 
@@ -100,7 +101,7 @@ def split_quantity(value: object) -> Quantity:
     if isinstance(value, str):
         return _split_text(value)
     if isinstance(value, bool) or not isinstance(value, int | float | Decimal):
-        raise QuantityError(_shown(value), 'a number, or a text such as "5 ms"')
+        raise QuantityError(_shown(value), 'a number, or a text such as "5 ms"', _WRITE_ONE)
     if isinstance(value, int) and value.bit_length() > 1100:
         raise QuantityError("a whole number with hundreds of digits", _FINITE, _SMALLER)
     number = value if isinstance(value, Decimal) else Decimal(repr(value))
