@@ -275,7 +275,11 @@ def test_opening_loads_neither_kernels_nor_schedulers_nor_figures(atlas):
         "print(sorted({'numba', 'distributed', 'matplotlib', 'scipy.linalg'} & set(sys.modules)))"
     )
     result = subprocess.run(
-        [sys.executable, "-c", code, str(atlas.path)], capture_output=True, text=True, check=True
+        [sys.executable, "-c", code, str(atlas.path)],
+        capture_output=True,
+        text=True,
+        check=True,
+        cwd=Path(stand_in.__file__).parents[1],
     )
     assert result.stdout.strip() == "[]"
 
