@@ -6,6 +6,7 @@ import json
 import os
 import subprocess
 import sys
+from datetime import time
 from pathlib import Path
 
 import numpy as np
@@ -13,6 +14,7 @@ import pytest
 
 from sweep.__main__ import main
 from sweep.cli.parser import COMMANDS
+from sweep.compute.progress import RunReport
 from sweep.config import load_config, parse_config
 from sweep.store.atlas import create_atlas
 
@@ -220,6 +222,38 @@ def test_a_run_computes_what_the_plan_said_and_then_has_nothing_to_do(capsys, tm
     assert (code, err) == (0, "")
     assert "damping" in out
     assert "tolerance" in out
+
+
+@pytest.mark.parametrize(("stopped", "expected"), [("", 0), ("until", 0), ("interrupted", 130)])
+def test_a_run_that_stops_in_time_is_done_and_one_that_is_interrupted_is_not(
+    capsys, tmp_path, monkeypatch, stopped, expected
+):
+    asked = {}
+
+    def run_sweep(config, shelf, **options):
+        asked.update(options, title=config.title, shelf=shelf)
+        numbers = {"nodes": 1, "tiles": 2, "tiles_done": 1, "tiles_computed": 1}
+        numbers |= {"nodes_computed": 1, "seconds": 1.0, "start_seconds": 0.0, "workers": 3}
+        numbers |= {"slow_nodes": 0, "undecided_nodes": 0, "bytes_written": 9}
+        ids = {"title": "Bench", "atlas": Path("x"), "atlas_id": "a", "physics_id": "b"}
+        more = {"peak_memory_bytes": None, "relabelled": False, "stopped": stopped}
+        return RunReport(**ids, **numbers, **more)
+
+    monkeypatch.setattr("sweep.compute.run.run_sweep", run_sweep)
+    path = tmp_path / "bench.toml"
+    path.write_text(CONFIG)
+    options = ["--until", "6:30", "--workers", "3", "--tile", "1x21x2", "--shelf", tmp_path]
+    code, out, _ = run(capsys, "run", path, *options)
+    assert code == expected
+    assert "1 of 2 done" in out
+    assert asked.pop("listener") is not None
+    assert asked == {
+        "title": "Bench",
+        "shelf": tmp_path,
+        "until": time(6, 30),
+        "workers": 3,
+        "tile_shape": (1, 21, 2),
+    }
 
 
 def test_a_config_with_mistakes_lists_them_all_and_writes_nothing(capsys, tmp_path):

@@ -83,6 +83,9 @@ def test_a_plan_says_roles_sizes_and_notes():
     text = shown(plan_view(document, two_gains().grid, "Bench"))
     for piece in ("tolerance", "4, of which 1 are done", "about 1 min 15 s", "8.1 GB", "between"):
         assert piece in text
+    assert "will not hold" not in text
+    full = plan_view(document | {"fits": False}, two_gains().grid, "Bench")
+    assert "will not hold" in shown(full)
 
 
 @pytest.mark.parametrize(

@@ -9,6 +9,7 @@ import io
 from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
+import numpy as np
 from rich import box
 from rich.console import Console, Group, RenderableType
 from rich.padding import Padding
@@ -129,6 +130,8 @@ def plan_view(document: Mapping[str, Any], grid: Grid, title: str) -> Renderable
         room = f", {bytes_text(free)} free" if isinstance(free, int | float) else ""
         facts.append(("disk", f"{bytes_text(document['bytes_needed'])} needed{room}"))
     parts = [_title(title), axes_table(grid), _fixed_line(grid), _facts(facts)]
+    if document.get("fits") is False:
+        parts.append(Text("the disk will not hold it: make room, or sweep fewer nodes", "bold red"))
     return Group(*parts, *_notes(document))
 
 
@@ -334,10 +337,15 @@ def _unit(axis: Axis) -> str:
 
 
 def _number(axis: Axis, value: Value) -> str:
-    """A coordinate without its unit, which stands in the head of the column."""
+    """A coordinate without its unit, which stands in the head of the column.
+
+    What interpolation left of a zero is a zero: a hundred-thousandth of the finest cell.
+    """
     if isinstance(value, str):
         return value
-    return f"{value / display_factor(axis.unit, _unit(axis)):.6g}"
+    finest = float(np.diff(axis.coordinates).min()) if len(axis) > 1 else 0.0
+    shown = 0.0 if abs(value) < 1e-5 * finest else value
+    return f"{shown / display_factor(axis.unit, _unit(axis)):.6g}"
 
 
 def _box_lines(answer: LimitsAnswer) -> Iterable[str]:
