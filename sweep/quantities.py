@@ -65,6 +65,7 @@ _NUMBER: Final = re.compile(
     r"(?:\s+(1/s)|\s*([^\W\d_][^\s,]*|%))?\s*"
 )
 _LONGEST_TEXT: Final = 200
+_ANY_QUANTITY: Final = 'a number, or a text such as "5 ms"'
 _WRITE_ONE: Final = "write a number, or a text with a unit"
 _FINITE: Final = "a finite number that double precision can hold"
 _SMALLER: Final = "give a number of magnitude between 1e-300 and 1e300, or 0"
@@ -80,13 +81,15 @@ class Quantity:
     """Canonical spelling of the unit; empty for a bare number."""
 
 
-def split_quantity(value: object) -> Quantity:
+def split_quantity(value: object, expected: str = _ANY_QUANTITY) -> Quantity:
     """Split a number or a text into number and unit, without judging the unit.
 
     Parameters
     ----------
     value
         int, float, Decimal, or a text such as ``"5 ms"``, ``"5ms"`` or ``"0.4"``.
+    expected
+        What the message says when it is neither.
 
     Raises
     ------
@@ -99,22 +102,22 @@ def split_quantity(value: object) -> Quantity:
     Quantity(number=Decimal('1.5'), unit='samples')
     """
     if isinstance(value, str):
-        return _split_text(value)
+        return _split_text(value, expected)
     if isinstance(value, bool) or not isinstance(value, int | float | Decimal):
-        raise QuantityError(_shown(value), 'a number, or a text such as "5 ms"', _WRITE_ONE)
+        raise QuantityError(_shown(value), expected, _WRITE_ONE)
     if isinstance(value, int) and value.bit_length() > 1100:
         raise QuantityError("a whole number with hundreds of digits", _FINITE, _SMALLER)
     number = value if isinstance(value, Decimal) else Decimal(repr(value))
     return Quantity(_rounded(number, value), "")
 
 
-def _split_text(text: str) -> Quantity:
+def _split_text(text: str, expected: str) -> Quantity:
     match = _NUMBER.fullmatch(text) if len(text) <= _LONGEST_TEXT else None
     if match is None:
         remedy = "write the number first, then its unit"
         if re.fullmatch(r"\s*[+-]?[0-9]+,[0-9]+.{0,40}", text):
             remedy = "write the decimal mark as a point"
-        raise QuantityError(_shown(text), 'a number with an optional unit, such as "5 ms"', remedy)
+        raise QuantityError(_shown(text), expected, remedy)
     unit = match[2] or match[3] or ""
     try:
         number = Decimal(match[1])
@@ -169,7 +172,8 @@ def parse_quantity(
     >>> parse_quantity("6 dB", "1").quantize(Decimal("0.0001"))
     Decimal('1.9953')
     """
-    quantity = split_quantity(value)
+    expected = describe_unit(unit, periods=natural_period_s is not None, decibels=decibels)
+    quantity = split_quantity(value, expected)
     if not quantity.unit:
         return quantity.number
     try:
@@ -177,7 +181,6 @@ def parse_quantity(
     except decimal.DecimalException as error:
         raise QuantityError(_shown(value), _FINITE, _SMALLER) from error
     if converted is None:
-        expected = describe_unit(unit, periods=natural_period_s is not None, decibels=decibels)
         raise QuantityError(_shown(value), expected, _unit_remedy(quantity.unit, unit))
     return _rounded(converted, value)
 

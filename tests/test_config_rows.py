@@ -130,19 +130,23 @@ def test_a_link_within_the_folder_is_followed(tmp_path):
     ("rows", "path", "says"),
     [
         ('[{label = "A", damping = 1}, {label = "B"}]', "rows[1].damping", "first row"),
-        ('[{label = "A", damping = 1}, {label = "B", damping = 1, gain = 1}]', "rows[1]", "first row"),
-        ('[{damping = 1}]', "rows[0].label", "printable"),
-        ('[{label = 3, damping = 1}]', "rows[0].label", "printable"),
+        (
+            '[{label = "A", damping = 1}, {label = "B", damping = 1, gain = 1}]',
+            "rows[1]",
+            "first row",
+        ),
+        ("[{damping = 1}]", "rows[0].label", "printable"),
+        ("[{label = 3, damping = 1}]", "rows[0].label", "printable"),
         ('[{label = "A, B", damping = 1}]', "rows[0].label", "without comma"),
         ('[{label = "A"}]', "rows[0]", "at least one parameter"),
-        ('[{label = "A", damping = {a = 1}}]', "rows[0].\"damping.a\"", "a parameter"),
+        ('[{label = "A", damping = {a = 1}}]', 'rows[0]."damping.a"', "a parameter"),
         ('[{label = "A", damping = 1, plant.damping = 2}]', 'rows[0]."plant.damping"', "once"),
-        ('[{label = "A", damping = "x"}]', "rows[0].damping", "a number"),
-        ('[]', "rows", "1 to 1,000,000 rows"),
-        ('3', "rows", "array of tables"),
-        ('[3]', "rows[0]", "array of tables"),
+        ('[{label = "A", damping = "x"}]', "rows[0].damping", "a plain number"),
+        ("[]", "rows", "1 to 1,000,000 rows"),
+        ("3", "rows", "array of tables"),
+        ("[3]", "rows[0]", "array of tables"),
     ],
-)  # fmt: skip
+)
 def test_rows_with_a_mistake_are_refused_where_they_are_wrong(rows, path, says):
     text = axis_text(f"rows = {rows}", "damping").replace("[axes.damping]", "[axes.unit]")
     found = problems(text)
@@ -211,8 +215,10 @@ def test_at_most_256_samples_of_delay_at_any_node(fixed, axes, fits):
 
 
 def test_rows_that_tie_a_long_delay_to_a_long_period_are_legal():
-    rows = '[{label = "a", sample_period = 0.001, delay.b = 0.1}, {label = "b", sample_period = 1, delay.b = 100}]'
-    text = axis_text(f'rows = {rows}\nrole = "design"', "sample_period")
+    rows = """rows = [
+      {label = "a", sample_period = 0.001, delay.b = 0.1},
+      {label = "b", sample_period = 1, delay.b = 100}]"""
+    text = axis_text(f'{rows}\nrole = "design"', "sample_period")
     text = text.replace("[axes.sample_period]", "[axes.mode]")
     read(text)
     assert "delay" in problems(text.replace("delay.b = 0.1}", "delay.b = 1}"))

@@ -8,7 +8,7 @@ import re
 from collections.abc import Iterable, Mapping
 from decimal import Decimal
 
-from sweep.errors import ConfigError, Problem, QuantityError
+from sweep.errors import ConfigError, Problem
 
 MOST_PROBLEMS = 200
 """Mistakes listed one by one; the rest are counted."""
@@ -35,10 +35,6 @@ class Findings:
         self._count += 1
         if self._count <= MOST_PROBLEMS:
             self._problems.append(Problem(path, found, expected, remedy))
-
-    def add_quantity_error(self, path: str, error: QuantityError) -> None:
-        """Note a text that is not the quantity that belongs at ``path``."""
-        self.add(path, error.found, error.expected, error.remedy)
 
     def __len__(self) -> int:
         return self._count

@@ -84,10 +84,7 @@ class LoopValues:
         """Unit of every delay part, ``s`` or ``samples``, by dotted path."""
         given = _all_given(self._loop, self._drafts)
         paths = sorted({path for path, _ in given if path.startswith("delay.")})
-        return {
-            path: find_delay_unit(path.removeprefix("delay."), self._given(path), self._findings)
-            for path in paths
-        }
+        return {path: find_delay_unit(value for _, value in self._given(path)) for path in paths}
 
     def _given(self, path: str) -> Iterator[tuple[str, Any]]:
         """Every value of a parameter with its place."""

@@ -259,7 +259,7 @@ def parse_requirement(
     try:
         limit = to_float(parse_quantity(value, spec.unit))
     except QuantityError as error:
-        findings.add_quantity_error(place, error)
+        findings.add(place, error.found, error.expected, error.remedy)
         return None
     chosen: Literal["max", "min"] = "max" if sense == "max" else "min"
     if quantity == "decay_time" and not (math.isfinite(limit) and limit > 0):

@@ -82,24 +82,14 @@ def rate_target() -> Target:
     return Target("sample_period", SAMPLE_RATE, is_rate=True)
 
 
-def find_delay_unit(name: str, values: Iterable[tuple[str, object]], findings: Findings) -> str:
-    """Find the unit of a delay part from every (path, value) that it is given.
+def find_delay_unit(values: Iterable[object]) -> str:
+    """Find the unit of a delay part, ``s`` or ``samples``, from every value that it is given.
 
-    Zero fits either unit and a bare number is in seconds. Texts that are no quantities are left to
-    `Reader.read`.
+    The first that says one decides; a bare number is in seconds and zero fits either. `Reader.read`
+    refuses those that say the other.
     """
-    first: tuple[str, str] | None = None
-    for path, value in values:
-        unit = _delay_unit(value)
-        if unit is None or (first and first[1] == unit):
-            continue
-        if first:
-            expected = f"{first[1]}, as at {first[0]}: one delay part has one unit"
-            remedy = f"split delay.{name} into two parts, or write both in one unit"
-            findings.add(path, describe(value), expected, remedy)
-            break
-        first = (path, unit)
-    return first[1] if first else "s"
+    units = (_delay_unit(value) for value in values)
+    return next((unit for unit in units if unit), "s")
 
 
 def _delay_unit(value: object) -> str | None:
@@ -142,8 +132,21 @@ class Reader:
                 value, spec.unit, natural_period_s=self.natural_period_s, decibels=decibels
             )
         except QuantityError as error:
-            self.findings.add_quantity_error(path, error)
+            self._note(path, value, error)
         return None
+
+    def _note(self, path: str, value: object, error: QuantityError) -> None:
+        if self._is_in_other_delay_unit(value):
+            expected = f"{error.expected}, because one delay part has one unit"
+            remedy = f"split {self.target.path} into two parts, or give it one unit everywhere"
+            error = QuantityError(error.found, expected, remedy)
+        self.findings.add(path, error.found, error.expected, error.remedy)
+
+    def _is_in_other_delay_unit(self, value: object) -> bool:
+        """Whether a delay's unit is written beside it, and is not the one of its part."""
+        if not self.target.is_delay or _delay_unit(value) in (None, self.target.spec.unit):
+            return False
+        return split_quantity(value).unit != ""
 
     def _refuse_other_types(self, value: object) -> None:
         if isinstance(value, bool) or not isinstance(value, int | float | Decimal):

@@ -34,12 +34,10 @@ values = ["1 ms", "2 ms", "4 ms", "8 ms", "16 ms"]
 [axes.kp]
 start = -1.0
 stop = 1.0
-step = 0.02
+step = 0.01
 
 [axes.kd]
-start = "0 ms"
-stop = "6 ms"
-count = 61
+values = ["0 ms", "1 ms", "2 ms", "3 ms", "4 ms"]
 
 [axes.damping]                   # a tolerance axis: what nature chooses
 values = [0.005, 0.01, 0.02]
@@ -102,8 +100,6 @@ title = "Outlet temperature of a small heater"
 [plant]
 kind = "lag"                     # gain / (time_constant s + 1)
 time_constant = "40 s"
-output_unit = "K"                # labels only: the gains then read %/K
-input_unit = "%"
 
 [controller]
 kind = "pi"                      # kp + ki / s
@@ -123,7 +119,7 @@ step = 0.05
 [axes.ki]
 start = 0
 stop = 0.3
-step = 0.005
+count = 61
 
 [axes.dead_time]                 # a free name; `sets` says which parameter it sweeps
 sets = "delay.transport"
