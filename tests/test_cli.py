@@ -421,7 +421,9 @@ def test_a_file_gets_no_colour_and_a_narrow_screen_no_failure(capsys, shelf, mon
     _, out, _ = run(capsys, "info", "bench", "--shelf", shelf)
     assert "\x1b" not in out
     from sweep.query.atlas import open_atlas
-    from sweep.views.tables import info_view, limits_view, to_text
+    from sweep.views.limits_table import limits_view
+    from sweep.views.sheet import to_text
+    from sweep.views.tables import info_view
 
     atlas = open_atlas("bench", shelf)
     for view in (info_view(atlas.facts()), limits_view(atlas.limits("kp"))):

@@ -16,8 +16,10 @@ from memory_atlas import atlas, axis, rows
 from sweep.compute.progress import KernelsReady, SweepStarted, SweepStopping, TileStored
 from sweep.views import figures
 from sweep.views.figures import draw_map, save_figure
+from sweep.views.limits_table import limits_view
 from sweep.views.progress import LineTeller, progress_listener
-from sweep.views.tables import info_view, limits_view, plan_view, plane_view, run_view, to_text
+from sweep.views.sheet import to_text
+from sweep.views.tables import info_view, plan_view, plane_view, run_view
 
 
 def shown(view, width=100):
@@ -43,6 +45,19 @@ def test_a_text_from_elsewhere_is_shown_as_it_is_and_cannot_steer_the_terminal()
     assert "[bold]y[/bold]" in text
     assert ":smile:" in text
     assert "\x1b" not in text
+
+
+def test_labels_and_units_from_elsewhere_cannot_steer_the_terminal_either():
+    unit = rows("unit", [HOSTILE, "b"], {"plant.gain": [1, 2]})
+    gain = axis("kp", [0.0, 1.0], sets="controller.kp", display_unit="\x1b[2J")
+    asked = atlas([unit, gain], np.zeros((2, 2)) - 1)
+    for view in (
+        limits_view(asked.limits("kp")),
+        limits_view(asked.limits("kp", at={"unit": "b"})),
+        plane_view(asked.plane("kp", "unit")),
+        info_view(asked.facts()),
+    ):
+        assert "\x1b" not in shown(view)
 
 
 def test_a_limits_table_says_units_once_in_its_heads():

@@ -59,7 +59,7 @@ def _limits(arguments: argparse.Namespace) -> int:
     if arguments.json:
         print_document(answer.to_json())
     else:
-        from sweep.views.tables import limits_view
+        from sweep.views.limits_table import limits_view
 
         print_view(limits_view(answer))
     return INCOMPLETE if answer.unknown == answer.nodes else 0

@@ -29,8 +29,8 @@ def print_document(document: Mapping[str, Any]) -> None:
 
 
 def print_view(view: object, *, to: TextIO | None = None) -> None:
-    """The answer for people: a table or a text from `sweep.views.tables`."""
-    from sweep.views.tables import to_text
+    """The answer for people: a table or a text from `sweep.views`."""
+    from sweep.views.sheet import to_text
 
     stream = to or sys.stdout
     watched = stream.isatty()

@@ -36,7 +36,7 @@ from sweep.grid import Axis
 from sweep.quantities import display_factor, display_name
 from sweep.query.answers import PlaneAnswer, show_value
 from sweep.query.cautions import caution_line
-from sweep.views.tables import printable
+from sweep.views.sheet import printable
 
 FloatArray = NDArray[np.float64]
 

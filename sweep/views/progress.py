@@ -20,7 +20,7 @@ from sweep.compute.progress import (
     SweepStopping,
     TileStored,
 )
-from sweep.views.tables import printable, seconds_text
+from sweep.views.sheet import printable, seconds_text
 
 LINE_EVERY_S = 5.0
 """Least time between two plain lines, s."""

@@ -1,108 +1,34 @@
-"""Answers as tables of at most 100 columns, plain when nobody watches.
-
-Every text that comes from an atlas or a config is shown as it is: no markup, no control characters.
-"""
+"""Answers for people, as tables and lines: plan, run, info, point, plane."""
 
 from __future__ import annotations
 
-import io
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Mapping
 from typing import Any
 
-import numpy as np
-from rich import box
-from rich.console import Console, Group, RenderableType
-from rich.padding import Padding
+from rich.console import Group, RenderableType
 from rich.table import Table
 from rich.text import Text
 
-from sweep.grid import Axis, Grid
-from sweep.quantities import display_factor, display_name, format_quantity
-from sweep.query.answers import End, LimitsAnswer, LimitsRow, PlaneAnswer, PointAnswer, show_value
-from sweep.query.cautions import caution_line
+from sweep.grid import Grid
+from sweep.quantities import format_quantity
+from sweep.query.answers import PlaneAnswer, PointAnswer
 from sweep.query.facts import AtlasFacts, DelayPart
-from sweep.query.select import Value, show_node
+from sweep.query.select import show_node
+from sweep.views.sheet import (
+    bytes_text,
+    caution_text,
+    cells,
+    facts_table,
+    line,
+    moved_lines,
+    place_rows,
+    plain_table,
+    rests_on,
+    seconds_text,
+    title_line,
+)
 
-ENDS = "ends: how stability is lost (last stable node|first other node)"
 HALF_SAMPLE = "the hold's own half sample is in the model already"
-
-
-class _Sheet(io.StringIO):
-    """Paper that knows which letters the terminal has: rich asks its file for ``encoding``."""
-
-    def __init__(self, encoding: str) -> None:
-        super().__init__()
-        self._letters = encoding
-
-    @property
-    def encoding(self) -> str:  # type: ignore[override]
-        """What the terminal takes."""
-        return self._letters
-
-
-def to_text(view: object, *, width: int, terminal: bool, encoding: str = "utf-8") -> str:
-    """A view as text.
-
-    Parameters
-    ----------
-    view
-        What one of the ``..._view`` functions returned.
-    width
-        Columns.
-    terminal
-        Whether someone watches: colour, unless NO_COLOR says otherwise.
-    encoding
-        Of the terminal; lines become ASCII where it lacks their letters.
-    """
-    sheet = _Sheet(encoding)
-    console = Console(
-        file=sheet,
-        width=width,
-        force_terminal=terminal,
-        color_system="auto" if terminal else None,
-        highlight=False,
-        markup=False,
-        emoji=False,
-        legacy_windows=False,
-    )
-    console.print(view)
-    return "\n".join(line.rstrip() for line in sheet.getvalue().splitlines()) + "\n"
-
-
-def printable(text: str) -> str:
-    r"""A text from elsewhere without control characters.
-
-    >>> printable("a\x1b[31mb")
-    'a?[31mb'
-    """
-    return "".join(letter if letter.isprintable() else "?" for letter in text)
-
-
-def seconds_text(seconds: float) -> str:
-    """A duration to the precision that matters.
-
-    >>> seconds_text(0.25), seconds_text(75), seconds_text(12_000)
-    ('0.2 s', '1 min 15 s', '3 h 20 min')
-    """
-    if seconds < 60:
-        return f"{seconds:.1f} s" if seconds < 10 else f"{seconds:.0f} s"
-    minutes, rest = divmod(round(seconds), 60)
-    if minutes < 60:
-        return f"{minutes} min {rest} s"
-    return f"{minutes // 60} h {minutes % 60} min"
-
-
-def bytes_text(count: float) -> str:
-    """A size in the largest decimal unit below it.
-
-    >>> bytes_text(512), bytes_text(8.1e9)
-    ('512 B', '8.1 GB')
-    """
-    for unit in ("B", "kB", "MB", "GB"):
-        if count < 1000:
-            return f"{count:.3g} {unit}"
-        count /= 1000
-    return f"{count:.3g} TB"
 
 
 def plan_view(document: Mapping[str, Any], grid: Grid, title: str) -> RenderableType:
@@ -129,9 +55,9 @@ def plan_view(document: Mapping[str, Any], grid: Grid, title: str) -> Renderable
         free = document.get("bytes_free")
         room = f", {bytes_text(free)} free" if isinstance(free, int | float) else ""
         facts.append(("disk", f"{bytes_text(document['bytes_needed'])} needed{room}"))
-    parts = [_title(title), axes_table(grid), _fixed_line(grid), _facts(facts)]
+    parts = [title_line(title), axes_table(grid), _fixed_line(grid), facts_table(facts)]
     if document.get("fits") is False:
-        parts.append(Text("the disk will not hold it: make room, or sweep fewer nodes", "bold red"))
+        parts.append(line("the disk will not hold it: make room, or sweep fewer nodes", "bold red"))
     return Group(*parts, *_notes(document))
 
 
@@ -157,7 +83,7 @@ def run_view(document: Mapping[str, Any]) -> RenderableType:
         facts.append(
             ("slow path", f"{document['slow_nodes']:,} nodes, {undecided:,} left undecided")
         )
-    return Group(Text(first, style="bold"), _facts(facts), *_notes(document))
+    return Group(line(first, "bold"), facts_table(facts), *_notes(document))
 
 
 def info_view(facts: AtlasFacts) -> RenderableType:
@@ -184,23 +110,23 @@ def info_view(facts: AtlasFacts) -> RenderableType:
         ("made by", f"program version {facts.program_version}"),
     ]
     return Group(
-        _title(facts.title),
-        _facts(loop),
+        title_line(facts.title),
+        facts_table(loop),
         axes_table(facts.grid),
         _fixed_line(facts.grid),
-        _facts(origin),
+        facts_table(origin),
     )
 
 
 def axes_table(grid: Grid) -> Table:
     """Every axis with its role, nodes and ends."""
-    table = _table("axis", "sets", "role", "nodes", "from", "to", "nominal")
+    table = plain_table("axis", "sets", "role", "nodes", "from", "to", "nominal")
     for column in (3, 4, 5, 6):
         table.columns[column].justify = "right"
     for axis in grid.axes:
         sets = ", ".join(axis.sets)
         ends = (show_node(axis, 0), show_node(axis, len(axis) - 1), show_node(axis, axis.nominal))
-        table.add_row(*_cells(axis.name, sets, axis.role, f"{len(axis):,}", *ends))
+        table.add_row(*cells(axis.name, sets, axis.role, f"{len(axis):,}", *ends))
     return table
 
 
@@ -216,52 +142,25 @@ def point_view(answer: PointAnswer, computed: Mapping[str, Any]) -> RenderableTy
             ("decay time", _decay_text(derived["decay_time"])),
             ("dominant mode", _mode_text(derived["frequency"], derived["dominant_damping"])),
         ]
-    parts: list[RenderableType] = [_facts(_place(answer.grid, answer.at, answer.nominal))]
-    parts += _moved_lines(answer.grid, answer.moved, answer.at)
-    parts += [Text(verdict[answer.stable], style=style), _facts(stored)]
-    parts += [Text("computed now, from this node's parameters:", style="bold"), _modes(computed)]
-    parts += [_coefficients(computed["coefficients"]), _cautions(answer.cautions)]
-    return Group(*parts)
-
-
-def limits_view(answer: LimitsAnswer) -> RenderableType:
-    """The stability boundary along one axis, one line for each stable interval."""
-    axis = answer.grid.axis(answer.along)
-    shared = {
-        name: value
-        for name, value in (answer.rows[0].at.items() if answer.rows else ())
-        if name not in answer.listed
-    }
-    named = answer.nominal
-    parts: list[RenderableType] = [_title(f"Stable along {answer.along}")]
-    if shared:
-        parts.append(_facts(_place(answer.grid, shared, named)))
-    parts += [Text(line) for line in _box_lines(answer)]
-    parts += [Text(""), _limits_table(answer, axis), Text(ENDS, style="dim"), Text("")]
-    if answer.rows_in_all > len(answer.rows):
-        parts.append(
-            Text(
-                f"{len(answer.rows):,} of {answer.rows_in_all:,} rows; narrow it with --at, or "
-                "list more with --rows",
-                style="yellow",
-            )
-        )
-    parts.append(_rests_on(answer.nodes, answer.unknown))
-    parts.append(_cautions(answer.cautions))
+    parts: list[RenderableType] = [facts_table(place_rows(answer.grid, answer.at, answer.nominal))]
+    parts += moved_lines(answer.grid, answer.moved, answer.at)
+    parts += [line(verdict[answer.stable], style), facts_table(stored)]
+    parts += [line("computed now, from this node's parameters:", "bold"), _modes(computed)]
+    parts += [_coefficients(computed["coefficients"]), caution_text(answer.cautions)]
     return Group(*parts)
 
 
 def plane_view(plane: PlaneAnswer) -> RenderableType:
     """What a map shows and what it rests on."""
     nodes = plane.log_radius.size
-    parts: list[RenderableType] = [_facts(_place(plane.grid, plane.at, plane.nominal))]
-    parts += _moved_lines(plane.grid, plane.moved, plane.at)
+    parts: list[RenderableType] = [facts_table(place_rows(plane.grid, plane.at, plane.nominal))]
+    parts += moved_lines(plane.grid, plane.moved, plane.at)
     known = nodes - plane.unknown
     share = plane.stable / known if known else 0.0
     parts += [
-        Text(f"{plane.stable:,} of {known:,} computed nodes are stable ({share:.0%})"),
-        _rests_on(nodes, plane.unknown),
-        _cautions(plane.cautions),
+        line(f"{plane.stable:,} of {known:,} computed nodes are stable ({share:.0%})"),
+        rests_on(nodes, plane.unknown),
+        caution_text(plane.cautions),
     ]
     return Group(*parts)
 
@@ -277,124 +176,7 @@ def _time_fact(document: Mapping[str, Any]) -> list[tuple[str, str]]:
 
 
 def _notes(document: Mapping[str, Any]) -> list[Text]:
-    return [Text(f"note: {printable(note)}", style="yellow") for note in document.get("notes", ())]
-
-
-def _limits_table(answer: LimitsAnswer, axis: Axis) -> Table:
-    listed = [answer.grid.axis(name) for name in answer.listed]
-    heads = [_head(item.name, item) for item in listed]
-    table = _table(*heads, _head("from", axis), _head("to", axis), "lower end", "upper end")
-    for column in range(len(listed) + 2):
-        table.columns[column].justify = "right"
-    for row in answer.rows:
-        place = [_number(item, row.at[item.name]) for item in listed]
-        for line in _interval_lines(row, axis):
-            table.add_row(*_cells(*place, *line))
-            place = [""] * len(listed)
-    return table
-
-
-def _interval_lines(row: LimitsRow, axis: Axis) -> list[tuple[str, str, str, str]]:
-    if not row.intervals:
-        found = "unknown" if row.unknown == row.nodes else "none stable"
-        found += "" if row.unknown in (0, row.nodes) else ", some unknown"
-        return [("", "", found, "")]
-    return [
-        (
-            _number(axis, interval.low.value),
-            _number(axis, interval.high.value),
-            _end_text(interval.low, axis),
-            _end_text(interval.high, axis),
-        )
-        for interval in row.intervals
-    ]
-
-
-def _end_text(end: End, axis: Axis) -> str:
-    if end.end == "axis_end":
-        return "beyond the axis end"
-    if end.end == "unknown" or end.between is None:
-        return "next node unknown"
-    how: str = end.kind or "boundary"
-    if end.kind == "oscillation" and end.hz is not None:
-        how = f"oscillation {format_quantity(end.hz, 'Hz', digits=4)}"
-    stable, other = (_number(axis, value) for value in end.between)
-    return f"{how} ({stable}|{other})"
-
-
-def _head(name: str, axis: Axis) -> str:
-    """A column's head with the unit of its numbers."""
-    unit = "" if axis.is_row_axis else display_name(axis.unit, _unit(axis))
-    return f"{name} [{unit}]" if unit else name
-
-
-def _unit(axis: Axis) -> str:
-    """One unit for all of an axis: its own for people, else what suits its largest value."""
-    if axis.display_unit or axis.is_row_axis:
-        return axis.display_unit
-    largest = float(abs(axis.coordinates).max())
-    return format_quantity(largest, axis.unit).partition(" ")[2]
-
-
-def _number(axis: Axis, value: Value) -> str:
-    """A coordinate without its unit, which stands in the head of the column.
-
-    What interpolation left of a zero is a zero: a hundred-thousandth of the finest cell.
-    """
-    if isinstance(value, str):
-        return value
-    finest = float(np.diff(axis.coordinates).min()) if len(axis) > 1 else 0.0
-    shown = 0.0 if abs(value) < 1e-5 * finest else value
-    return f"{shown / display_factor(axis.unit, _unit(axis)):.6g}"
-
-
-def _box_lines(answer: LimitsAnswer) -> Iterable[str]:
-    grid = answer.grid
-    if answer.over:
-        yield "worst over " + "; ".join(
-            f"{name} {_range_text(grid.axis(name), ends)}" for name, ends in answer.over.items()
-        )
-    if answer.widened:
-        yield (
-            f"a bound of {', '.join(answer.widened)} lay between nodes: "
-            "the next node outward was taken in"
-        )
-    for name, ends in answer.bracketed.items():
-        axis = grid.axis(name)
-        yield (
-            f"{name} lies between nodes: bracketed by {show_value(axis, ends[0])} and "
-            f"{show_value(axis, ends[1])}, the worse of them counts"
-        )
-
-
-def _range_text(axis: Axis, ends: Sequence[Value]) -> str:
-    if axis.is_row_axis:
-        shown = ", ".join(map(str, ends[:6]))
-        return shown if len(ends) <= 6 else f"{shown} and {len(ends) - 6} more"
-    low, high = ends[0], ends[-1]
-    if low == high:
-        return show_value(axis, low)
-    return f"{show_value(axis, low)} to {show_value(axis, high)}"
-
-
-def _place(grid: Grid, at: Mapping[str, Value], nominal: Sequence[str]) -> list[tuple[str, str]]:
-    return [
-        (name, show_value(grid.axis(name), value) + (" (nominal)" if name in nominal else ""))
-        for name, value in at.items()
-    ]
-
-
-def _moved_lines(
-    grid: Grid, moved: Mapping[str, Value], at: Mapping[str, Value]
-) -> list[RenderableType]:
-    return [
-        Text(
-            f"{name} = {value} lies between nodes: the nearest, "
-            f"{show_value(grid.axis(name), at[name])}, was taken",
-            style="yellow",
-        )
-        for name, value in moved.items()
-    ]
+    return [line(f"note: {note}", "yellow") for note in document.get("notes", ())]
 
 
 def _mode_text(frequency_hz: float, damping: float) -> str:
@@ -410,7 +192,7 @@ def _decay_text(seconds: float | str) -> str:
 
 def _modes(computed: Mapping[str, Any]) -> Table:
     """One line for each real eigenvalue or conjugate pair."""
-    table = _table("mode", "frequency", "damping ratio", "decay time", "magnitude")
+    table = plain_table("mode", "frequency", "damping ratio", "decay time", "magnitude")
     for column in (1, 2, 3, 4):
         table.columns[column].justify = "right"
     for mode in computed["modes"]:
@@ -435,7 +217,7 @@ def _coefficients(found: Mapping[str, Any]) -> RenderableType:
         if name == "whole_delay":
             text = f"{format_quantity(float(value), 'samples')}; {HALF_SAMPLE}"
         rows.append((name.replace("_", " "), text))
-    return _facts(rows)
+    return facts_table(rows)
 
 
 def _delay_text(facts: AtlasFacts) -> str:
@@ -457,45 +239,4 @@ def _fixed_line(grid: Grid) -> RenderableType:
         f"{item.path} {format_quantity(item.value, item.unit, item.display_unit)}"
         for item in grid.fixed
     ]
-    return Text(f"fixed: {', '.join(items)}" if items else "nothing is fixed")
-
-
-def _rests_on(nodes: int, unknown: int) -> Text:
-    text = f"rests on {nodes:,} nodes"
-    if unknown:
-        return Text(f"{text}, {unknown:,} of them unknown (not computed yet)", style="yellow")
-    return Text(text)
-
-
-def _cautions(codes: Sequence[str]) -> RenderableType:
-    return Text(f"cautions: {caution_line(codes)}", style="dim")
-
-
-def _title(text: str) -> Text:
-    return Text(printable(text), style="bold")
-
-
-def _table(*columns: str) -> Table:
-    table = Table(
-        box=box.SIMPLE_HEAD,
-        pad_edge=False,
-        show_edge=False,
-        header_style="bold",
-        padding=(0, 1, 0, 0),
-    )
-    for column in columns:
-        table.add_column(Text(printable(column)), overflow="fold")
-    return table
-
-
-def _cells(*texts: str) -> list[Text]:
-    return [Text(printable(text)) for text in texts]
-
-
-def _facts(rows: Sequence[tuple[str, Any]]) -> RenderableType:
-    table = Table(box=None, show_header=False, pad_edge=False, padding=(0, 2, 0, 0))
-    table.add_column(style="dim", no_wrap=True)
-    table.add_column(overflow="fold")
-    for name, value in rows:
-        table.add_row(Text(printable(name)), Text(printable(str(value))))
-    return Padding(table, (0, 0, 0, 2))
+    return line(f"fixed: {', '.join(items)}" if items else "nothing is fixed")

@@ -1,0 +1,150 @@
+"""Limits as a table: one line for each stable interval."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+
+import numpy as np
+from rich.console import Group, RenderableType
+from rich.table import Table
+
+from sweep.grid import Axis
+from sweep.quantities import display_factor, display_name, format_quantity
+from sweep.query.answers import End, LimitsAnswer, LimitsRow, show_value
+from sweep.query.select import Value
+from sweep.views.sheet import (
+    caution_text,
+    cells,
+    facts_table,
+    line,
+    place_rows,
+    plain_table,
+    rests_on,
+    title_line,
+)
+
+ENDS = "ends: how stability is lost (last stable node|first other node)"
+
+
+def limits_view(answer: LimitsAnswer) -> RenderableType:
+    """The stability boundary along one axis, one line for each stable interval."""
+    axis = answer.grid.axis(answer.along)
+    shared = {
+        name: value
+        for name, value in (answer.rows[0].at.items() if answer.rows else ())
+        if name not in answer.listed
+    }
+    named = answer.nominal
+    parts: list[RenderableType] = [title_line(f"Stable along {answer.along}")]
+    if shared:
+        parts.append(facts_table(place_rows(answer.grid, shared, named)))
+    parts += [line(text) for text in _box_lines(answer)]
+    parts += [line(""), _limits_table(answer, axis), line(ENDS, "dim"), line("")]
+    if answer.rows_in_all > len(answer.rows):
+        parts.append(
+            line(
+                f"{len(answer.rows):,} of {answer.rows_in_all:,} rows; narrow it with --at, or "
+                "list more with --rows",
+                "yellow",
+            )
+        )
+    parts.append(rests_on(answer.nodes, answer.unknown))
+    parts.append(caution_text(answer.cautions))
+    return Group(*parts)
+
+
+def _limits_table(answer: LimitsAnswer, axis: Axis) -> Table:
+    listed = [answer.grid.axis(name) for name in answer.listed]
+    heads = [_head(item.name, item) for item in listed]
+    table = plain_table(*heads, _head("from", axis), _head("to", axis), "lower end", "upper end")
+    for column in range(len(listed) + 2):
+        table.columns[column].justify = "right"
+    for row in answer.rows:
+        place = [_number(item, row.at[item.name]) for item in listed]
+        for found in _interval_lines(row, axis):
+            table.add_row(*cells(*place, *found))
+            place = [""] * len(listed)
+    return table
+
+
+def _interval_lines(row: LimitsRow, axis: Axis) -> list[tuple[str, str, str, str]]:
+    if not row.intervals:
+        found = "unknown" if row.unknown == row.nodes else "none stable"
+        found += "" if row.unknown in (0, row.nodes) else ", some unknown"
+        return [("", "", found, "")]
+    return [
+        (
+            _number(axis, interval.low.value),
+            _number(axis, interval.high.value),
+            _end_text(interval.low, axis),
+            _end_text(interval.high, axis),
+        )
+        for interval in row.intervals
+    ]
+
+
+def _end_text(end: End, axis: Axis) -> str:
+    if end.end == "axis_end":
+        return "beyond the axis end"
+    if end.end == "unknown" or end.between is None:
+        return "next node unknown"
+    how: str = end.kind or "boundary"
+    if end.kind == "oscillation" and end.hz is not None:
+        how = f"oscillation {format_quantity(end.hz, 'Hz', digits=4)}"
+    stable, other = (_number(axis, value) for value in end.between)
+    return f"{how} ({stable}|{other})"
+
+
+def _head(name: str, axis: Axis) -> str:
+    """A column's head with the unit of its numbers."""
+    unit = "" if axis.is_row_axis else display_name(axis.unit, _unit(axis))
+    return f"{name} [{unit}]" if unit else name
+
+
+def _unit(axis: Axis) -> str:
+    """One unit for all of an axis: its own for people, else what suits its largest value."""
+    if axis.display_unit or axis.is_row_axis:
+        return axis.display_unit
+    largest = float(abs(axis.coordinates).max())
+    return format_quantity(largest, axis.unit).partition(" ")[2]
+
+
+def _number(axis: Axis, value: Value) -> str:
+    """A coordinate without its unit, which stands in the head of the column.
+
+    What interpolation left of a zero is a zero: a hundred-thousandth of the finest cell.
+    """
+    if isinstance(value, str):
+        return value
+    finest = float(np.diff(axis.coordinates).min()) if len(axis) > 1 else 0.0
+    shown = 0.0 if abs(value) < 1e-5 * finest else value
+    return f"{shown / display_factor(axis.unit, _unit(axis)):.6g}"
+
+
+def _box_lines(answer: LimitsAnswer) -> Iterable[str]:
+    grid = answer.grid
+    if answer.over:
+        yield "worst over " + "; ".join(
+            f"{name} {_range_text(grid.axis(name), ends)}" for name, ends in answer.over.items()
+        )
+    if answer.widened:
+        yield (
+            f"a bound of {', '.join(answer.widened)} lay between nodes: "
+            "the next node outward was taken in"
+        )
+    for name, ends in answer.bracketed.items():
+        axis = grid.axis(name)
+        yield (
+            f"{name} lies between nodes: bracketed by {show_value(axis, ends[0])} and "
+            f"{show_value(axis, ends[1])}, the worse of them counts"
+        )
+
+
+def _range_text(axis: Axis, ends: Sequence[Value]) -> str:
+    if axis.is_row_axis:
+        shown = ", ".join(map(str, ends[:6]))
+        return shown if len(ends) <= 6 else f"{shown} and {len(ends) - 6} more"
+    low, high = ends[0], ends[-1]
+    if low == high:
+        return show_value(axis, low)
+    return f"{show_value(axis, low)} to {show_value(axis, high)}"
