@@ -68,7 +68,14 @@ def test_a_path_or_folder_name_finds_an_atlas(shelf):
 
 
 @pytest.mark.parametrize(
-    ("text", "count"), [("head", "2 atlases match"), ("warm", "no atlas"), ("", "no")]
+    ("text", "count"),
+    [
+        ("head", "2 atlases match"),
+        ("warm", "no atlas"),
+        ("", "no"),
+        ("x" * 5000, "no"),
+        ("\0", "no"),
+    ],
 )
 def test_a_text_that_means_not_one_atlas_lists_the_candidates(shelf, text, count):
     with pytest.raises(QuestionError, match=count) as caught:

@@ -130,9 +130,7 @@ def open_arrays(folder: Path) -> dict[str, zarr.Array[Any]]:
     names = sorted(path.parent.name for path in folder.glob("*/zarr.json"))
     store = LocalStore(folder, read_only=True)
     with fast_reads():
-        return {
-            name: zarr.open_array(store, path=name, mode="r", zarr_format=3) for name in names
-        }
+        return {name: zarr.open_array(store, path=name, mode="r", zarr_format=3) for name in names}
 
 
 def open_dataset(folder: Path) -> xr.Dataset:

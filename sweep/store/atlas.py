@@ -35,6 +35,8 @@ if TYPE_CHECKING:
 
 _UNREADABLE = (ValueError, KeyError, TypeError, IndexError, AttributeError, RuntimeError, OSError)
 """What zarr, numpy and json raise when stored bytes are not what they should be."""
+_MOST_METADATA_BYTES = 256 * 2**20
+"""A group's metadata holds the config, tables of rows included, and is never near this."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -264,9 +266,11 @@ def open_stored(path: Path | str) -> StoredAtlas:
 
 def read_card(folder: Path) -> Mapping[str, Any] | None:
     """The attributes of the group at ``folder``, or `None` when it is no atlas at all."""
+    path = folder / "zarr.json"
     try:
-        text = (folder / "zarr.json").read_text(encoding="utf-8")
-        node = json.loads(text)
+        if path.stat().st_size > _MOST_METADATA_BYTES:
+            return None
+        node = json.loads(path.read_text(encoding="utf-8"))
     except (OSError, ValueError, RecursionError):
         return None
     attributes = node.get("attributes") if isinstance(node, dict) else None

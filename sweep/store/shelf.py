@@ -83,7 +83,7 @@ class Shelf:
             When none or several atlases match; names the candidates.
         """
         for path in (Path(text), self.folder / text):
-            if str(text).strip() and (path / "zarr.json").is_file():
+            if str(text).strip() and _is_there(path / "zarr.json"):
                 return path
         entries = self.list()
         wanted = str(text).strip().casefold()
@@ -149,6 +149,13 @@ class Shelf:
             if entries
             else "run a config first, or say with --shelf where the atlases are",
         )
+
+
+def _is_there(path: Path) -> bool:
+    try:
+        return path.is_file()
+    except (OSError, ValueError):
+        return False  # a text that no path can be, such as a very long one
 
 
 def _names(entry: ShelfEntry) -> tuple[str, ...]:

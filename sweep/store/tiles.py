@@ -3,10 +3,9 @@
 from __future__ import annotations
 
 import math
-import re
 
 from sweep.errors import QuestionError
-from sweep.grid import Grid
+from sweep.grid import Grid, Tiling
 
 NODES_PER_INNER_CHUNK = 2**15
 """Float32 nodes in an inner chunk: 128 kB; decoding one costs a reader a fixed 0.1 to 0.5 ms."""
@@ -18,6 +17,8 @@ LONGEST_GAIN_RUN = 128
 """Nodes; the kernel walks along a gain axis, and past this a longer walk gains nothing."""
 MOST_NODES_IN_A_TILE = 2**26
 """Each worker holds a tile whole; this many are 256 MB per measure."""
+MOST_TILES = 100_000_000
+"""Each is a file of its own, and nine bytes of a run's memory."""
 MOST_CHUNKS_IN_A_TILE = 2**12
 """Chunks have a fixed cost; a tile with a large prime edge would fall into slivers."""
 
@@ -69,30 +70,14 @@ def inner_chunk_shape(tile_shape: tuple[int, ...]) -> tuple[int, ...]:
     return tuple(chunk)
 
 
-def parse_tile_shape(text: str, grid: Grid) -> tuple[int, ...]:
-    """A tile shape from text such as ``16,64,64,4,4``, one number for each axis in order.
-
-    Raises
-    ------
-    QuestionError
-        When the text is not such a list, or the tile does not suit the grid.
-    """
-    if not re.fullmatch(r"\s*\d{1,9}\s*(,\s*\d{1,9}\s*)*", text):
-        raise QuestionError(
-            f"reading the tile shape {text[:60]!r}: expected whole numbers parted by commas",
-            remedy=f"give one number for each of the axes {', '.join(grid.names)}",
-        )
-    return check_tile_shape(tuple(int(part) for part in text.split(",")), grid)
-
-
 def check_tile_shape(tile_shape: tuple[int, ...], grid: Grid) -> tuple[int, ...]:
-    """The tile shape, clipped to the grid.
+    """Clip a tile shape that somebody asked for to the grid.
 
     Raises
     ------
     QuestionError
-        When it has another rank than the grid, a number below 1, too many nodes to be held, or
-        an edge that falls into slivers only.
+        When it has another rank than the grid, a number below 1, too many nodes to be held, an
+        edge that falls into slivers only, or would make too many tiles to keep count of.
     """
     remedy = f"give a shape such as {','.join(map(str, choose_tile_shape(grid)))}"
     if len(tile_shape) != len(grid.shape) or min(tile_shape, default=0) < 1:
@@ -113,6 +98,13 @@ def check_tile_shape(tile_shape: tuple[int, ...], grid: Grid) -> tuple[int, ...]
         raise QuestionError(
             f"the tile shape {tile_shape} cannot be cut into chunks of 64 to 256 kB: "
             "expected numbers with small divisors",
+            remedy=remedy,
+        )
+    tiles = len(Tiling(grid.shape, clipped))
+    if tiles > MOST_TILES:
+        raise QuestionError(
+            f"the tile shape {tile_shape} cuts the grid into {tiles:,} tiles; at most "
+            f"{MOST_TILES:,} are allowed, since each is a file",
             remedy=remedy,
         )
     return clipped
