@@ -67,6 +67,8 @@ _NUMBER: Final = re.compile(
 _LONGEST_TEXT: Final = 200
 _ANY_QUANTITY: Final = 'a number, or a text such as "5 ms"'
 _WRITE_ONE: Final = "write a number, or a text with a unit"
+_SMALLEST: Final = Decimal("1e-300")
+_LARGEST: Final = Decimal("1e300")
 _FINITE: Final = "a finite number that double precision can hold"
 _SMALLER: Final = "give a number of magnitude between 1e-300 and 1e300, or 0"
 
@@ -127,10 +129,8 @@ def _split_text(text: str, expected: str) -> Quantity:
 
 
 def _rounded(number: Decimal, written: object) -> Decimal:
-    """40 digits of a number that float64 can hold: neither overflowing nor vanishing."""
-    if not number.is_finite() or math.isinf(as_float := float(number)):
-        raise QuantityError(_shown(written), _FINITE, _SMALLER)
-    if as_float == 0.0 and number != 0:
+    """Round to 40 digits what float64 holds with room for sums, differences and reciprocals."""
+    if not number.is_finite() or (number and not _SMALLEST <= number.copy_abs() <= _LARGEST):
         raise QuantityError(_shown(written), _FINITE, _SMALLER)
     return CONTEXT.plus(number)
 

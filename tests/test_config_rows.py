@@ -214,6 +214,12 @@ def test_at_most_256_samples_of_delay_at_any_node(fixed, axes, fits):
         assert "256 samples" in problems(text)["delay"].expected
 
 
+def test_absurd_but_legal_numbers_are_judged_without_a_warning():
+    axis = '[axes.{0}]\nrows = [{{label = "A", delay.{0} = 0}}, {{label = "B", delay.{0} = {1}}}]\n'
+    text = delay_text("", axis.format("a", "1e300") + axis.format("b", "1e-300"))
+    assert "delay" in problems(text.replace("start = -1\nstop = 1", "start = -1e300\nstop = 1e300"))
+
+
 def test_rows_that_tie_a_long_delay_to_a_long_period_are_legal():
     rows = """rows = [
       {label = "a", sample_period = 0.001, delay.b = 0.1},

@@ -79,6 +79,9 @@ def test_periods_are_multiples_of_the_natural_period_where_one_is_given():
         ("inf", "1", "number first"),
         ("1e400", "1", "magnitude"),
         ("1e-400 s", "s", "magnitude"),
+        ("2e300", "1", "magnitude"),
+        ("-0.9e-300 s", "s", "magnitude"),
+        ("1e-299 ms", "s", "magnitude"),
         ("1e99999999999999999999", "1", "magnitude"),
         ("1e300 dB", "1", "magnitude"),
         (float("nan"), "1", "magnitude"),
@@ -107,7 +110,8 @@ def test_decibels_are_for_gains_only():
 
 
 def test_minus_zero_is_stored_as_zero():
-    assert str(to_float(split_quantity("-0.0").number)) == "0.0"
+    assert str(to_float(Decimal("-0.0"))) == "0.0"
+    assert str(to_float(parse_quantity("-0.0", "1"))) == "0.0"
 
 
 @given(st.integers(1, 10**9))

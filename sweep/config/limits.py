@@ -92,7 +92,9 @@ def _upper_lines(line: Line) -> Line:
     order = np.lexsort((line[0], line[1]))
     hull: list[tuple[float, float]] = []
     for a, b in zip(line[0][order].tolist(), line[1][order].tolist(), strict=True):
-        while hull and (hull[-1][1] == b or _is_hidden(hull, a, b)):
+        if hull and hull[-1][1] == b:
+            hull.pop()
+        while len(hull) > 1 and _is_hidden(hull, a, b):
             hull.pop()
         hull.append((a, b))
     return np.array([a for a, _ in hull]), np.array([b for _, b in hull])
@@ -100,18 +102,14 @@ def _upper_lines(line: Line) -> Line:
 
 def _is_hidden(hull: list[tuple[float, float]], a: float, b: float) -> bool:
     """Whether the last line never rises above both the one before it and the line (a, b)."""
-    a1, b1 = hull[-1]
-    if a >= a1:
-        return True
-    if len(hull) < 2:
-        return False
-    a0, b0 = hull[-2]
+    (a0, b0), (a1, b1) = hull[-2:]
     return (a0 - a) * (b1 - b0) <= (a0 - a1) * (b - b0)
 
 
 def _largest(offsets: FloatArray, slopes: FloatArray, rate_hz: FloatArray) -> FloatArray:
     """Largest of the hull's lines at every rate; their crossings increase along the hull."""
-    crossings = (offsets[:-1] - offsets[1:]) / (slopes[1:] - slopes[:-1])
+    with np.errstate(over="ignore"):  # nearly parallel lines cross at infinity
+        crossings = (offsets[:-1] - offsets[1:]) / (slopes[1:] - slopes[:-1])
     best = np.searchsorted(crossings, rate_hz)
     highest: FloatArray = offsets[best] + slopes[best] * rate_hz
     return highest
