@@ -68,6 +68,21 @@ def test_a_limits_table_says_units_once_in_its_heads():
     assert "worst over damping 0.01 to 0.02" in text
 
 
+def test_the_half_sample_is_mentioned_wherever_a_delay_is_shown_and_only_there():
+    delay = axis("bus", [0.0, 1.0], sets="delay.bus", unit="samples", role="tolerance")
+    gain = axis("kp", [0.0, 1.0], sets="controller.kp")
+    delayed = atlas([delay, gain], np.zeros((2, 2)) - 1)
+    document = {"atlas": "x", "nodes": 4, "tiles": 1, "tiles_done": 1, "nodes_computed": 0}
+    for asked, expected in ((delayed, True), (two_gains(), False)):
+        for text in (
+            shown(limits_view(asked.limits("kp"))),
+            shown(plan_view(document, asked.grid, "Bench")),
+        ):
+            assert ("own half sample is in the model already" in text) == expected
+    words = texts_of(draw_map(delayed.plane("kp", "bus"))).replace("\n", " ")
+    assert "own half sample is in the model already" in words
+
+
 def test_rows_that_were_left_out_are_counted():
     text = shown(limits_view(two_gains().limits("kp", rows=1)))
     assert "1 of 2 rows" in text

@@ -36,7 +36,7 @@ from sweep.grid import Axis
 from sweep.quantities import display_factor, display_name
 from sweep.query.answers import PlaneAnswer, show_value
 from sweep.query.cautions import caution_line
-from sweep.views.sheet import printable
+from sweep.views.sheet import half_sample_text, printable
 
 FloatArray = NDArray[np.float64]
 
@@ -154,6 +154,11 @@ class _Drawn:
         self.period_s: FloatArray = period[:: self.step_y, :: self.step_x]
 
     @property
+    def edges(self) -> tuple[FloatArray, FloatArray]:
+        """Where cells end, along x and along y."""
+        return _cell_edges(self.x_axis, self.x), _cell_edges(self.y_axis, self.y)
+
+    @property
     def decay_s(self) -> FloatArray:
         """Decay time constant where stable, s; NaN elsewhere."""
         values = np.full(self.log_radius.shape, np.nan)
@@ -179,35 +184,39 @@ def _is_log(values: FloatArray) -> bool:
     return spread(np.diff(np.log(values))) < spread(np.diff(values))
 
 
-def _cell_edges(values: FloatArray) -> FloatArray:
-    """Where the cells of nodes end: half-way to each neighbour (by ratio on a log axis)."""
-    if len(values) == 1:
+def _cell_edges(axis: Axis, values: FloatArray) -> FloatArray:
+    """Where the cells of nodes end: half-way to each neighbour (by ratio on a log axis).
+
+    A plain axis ends with its first and last node; a row is as wide as any other.
+    """
+    if len(values) == 1 and not axis.is_row_axis:
         half = 0.5 * abs(values[0]) or 0.5
         return np.array([values[0] - half, values[0] + half])
+    if axis.is_row_axis:
+        return np.arange(0.5, len(values) + 1) - 1.0
     if _is_log(values):
-        return np.exp(_cell_edges_of(np.log(values)))
-    return _cell_edges_of(values)
+        return np.exp(_half_way(np.log(values)))
+    return _half_way(values)
 
 
-def _cell_edges_of(values: FloatArray) -> FloatArray:
-    middle = 0.5 * (values[1:] + values[:-1])
-    first, last = 2 * values[0] - middle[0], 2 * values[-1] - middle[-1]
-    return np.concatenate([[first], middle, [last]])
+def _half_way(values: FloatArray) -> FloatArray:
+    return np.concatenate([values[:1], 0.5 * (values[1:] + values[:-1]), values[-1:]])
 
 
 def _fill(figure: SubFigure, axes: Axes, drawn: _Drawn) -> None:
     """Shade the cells; what stays blank shows the hatched ground, and is unknown."""
-    x, y = _cell_edges(drawn.x), _cell_edges(drawn.y)
+    x, y = drawn.edges
     axes.patch.set(facecolor=UNKNOWN, edgecolor=HATCH, hatch="////", linewidth=0.0)
     lost = np.ma.masked_where(~drawn.known | drawn.stable, np.ones(drawn.known.shape))
     axes.pcolormesh(x, y, lost, cmap=ListedColormap([UNSTABLE]), rasterized=True)
     if not drawn.stable.any():
         return
     decay = drawn.decay_s
-    unit, factor = _time_unit(float(np.nanmedian(decay)))
     # Near the boundary decay time grows without bound; the upper tail shares the palest colour.
-    low, high = np.nanpercentile(decay / factor, [0.5, 95.0])
-    low, high = (float(low), float(high)) if high > 1.05 * low else (0.9 * low, 1.1 * high)
+    low_s, high_s = map(float, np.nanpercentile(decay, [0.5, 95.0]))
+    unit, factor = _time_unit(high_s)
+    low, high = low_s / factor, high_s / factor
+    low, high = (low, high) if high > 1.05 * low else (0.9 * low, 1.1 * high)
     mesh = axes.pcolormesh(
         x,
         y,
@@ -246,7 +255,7 @@ def _draw_boundary(axes: Axes, drawn: _Drawn) -> None:
 
 
 def _edges_between(drawn: _Drawn) -> list[list[tuple[float, float]]]:
-    x, y = _cell_edges(drawn.x), _cell_edges(drawn.y)
+    x, y = drawn.edges
     known, stable = drawn.known, drawn.stable
     across = known[:, 1:] & known[:, :-1] & (stable[:, 1:] != stable[:, :-1])
     upward = known[1:] & known[:-1] & (stable[1:] != stable[:-1])
@@ -274,11 +283,12 @@ def _draw_marks(axes: Axes, drawn: _Drawn) -> None:
 def _label_edge(axes: Axes, axis: Axis, values: FloatArray, edge: str) -> None:
     unit = "" if axis.is_row_axis else display_name(axis.unit, axis.display_unit)
     words = axis.name.replace("_", " ")
-    name = words if axis.long_name in ("", words) else f"{axis.long_name}, {words}"
+    long_name = axis.long_name or words
+    name = long_name if long_name.endswith(words) else f"{long_name}, {words}"
     label = printable(f"{name} ({unit})" if unit else name)
     side = axes.xaxis if edge == "x" else axes.yaxis
     side.set_label_text(label)
-    edges = _cell_edges(values)
+    edges = _cell_edges(axis, values)
     (axes.set_xlim if edge == "x" else axes.set_ylim)(edges[0], edges[-1])
     if axis.labels is not None:
         _name_rows(axes, axis.labels, edge)
@@ -336,6 +346,8 @@ def _foot(figure: SubFigure, plane: PlaneAnswer) -> None:
         )
     figure.legend(handles=keys, loc="upper left", ncols=len(keys), frameon=False, fontsize=9)
     words = f"Atlas {plane.atlas_id[:8]}. Cautions: {caution_line(plane.cautions)}"
+    if half_sample := half_sample_text(plane.grid):
+        words = f"{words}. {half_sample.capitalize()}"
     figure.text(0.013, 0.08, textwrap.fill(words, 140), fontsize=6.8, color="#555555", va="bottom")
 
 

@@ -16,6 +16,7 @@ from sweep.views.sheet import (
     caution_text,
     cells,
     facts_table,
+    half_sample_text,
     line,
     place_rows,
     plain_table,
@@ -48,6 +49,8 @@ def limits_view(answer: LimitsAnswer) -> RenderableType:
                 "yellow",
             )
         )
+    if half_sample := half_sample_text(answer.grid):
+        parts.append(line(half_sample, "dim"))
     parts.append(rests_on(answer.nodes, answer.unknown))
     parts.append(caution_text(answer.cautions))
     return Group(*parts)

@@ -21,6 +21,9 @@ from sweep.query.answers import show_value
 from sweep.query.cautions import caution_line
 from sweep.query.select import Value
 
+HALF_SAMPLE = "the hold's own half sample is in the model already"
+"""Said wherever delay is shown."""
+
 
 class _Sheet(io.StringIO):
     """Paper that knows which letters the terminal has: rich asks its file for ``encoding``."""
@@ -174,3 +177,9 @@ def rests_on(nodes: int, unknown: int) -> Text:
 def caution_text(codes: Sequence[str]) -> RenderableType:
     """The cautions that apply, in their short form."""
     return line(f"cautions: {caution_line(codes)}", "dim")
+
+
+def half_sample_text(grid: Grid) -> str:
+    """What to say beside an answer that shows a delay; empty when the loop has none."""
+    delayed = any(path.startswith("delay.") for path in grid.paths())
+    return f"delay: {HALF_SAMPLE}" if delayed else ""

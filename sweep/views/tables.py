@@ -15,10 +15,12 @@ from sweep.query.answers import PlaneAnswer, PointAnswer
 from sweep.query.facts import AtlasFacts, DelayPart
 from sweep.query.select import show_node
 from sweep.views.sheet import (
+    HALF_SAMPLE,
     bytes_text,
     caution_text,
     cells,
     facts_table,
+    half_sample_text,
     line,
     moved_lines,
     place_rows,
@@ -27,8 +29,6 @@ from sweep.views.sheet import (
     seconds_text,
     title_line,
 )
-
-HALF_SAMPLE = "the hold's own half sample is in the model already"
 
 
 def plan_view(document: Mapping[str, Any], grid: Grid, title: str) -> RenderableType:
@@ -56,6 +56,8 @@ def plan_view(document: Mapping[str, Any], grid: Grid, title: str) -> Renderable
         room = f", {bytes_text(free)} free" if isinstance(free, int | float) else ""
         facts.append(("disk", f"{bytes_text(document['bytes_needed'])} needed{room}"))
     parts = [title_line(title), axes_table(grid), _fixed_line(grid), facts_table(facts)]
+    if half_sample := half_sample_text(grid):
+        parts.append(line(half_sample, "dim"))
     if document.get("fits") is False:
         parts.append(line("the disk will not hold it: make room, or sweep fewer nodes", "bold red"))
     return Group(*parts, *_notes(document))
