@@ -283,6 +283,42 @@ def _squared_gap(degree: int, i: int, re: Rows, im: Rows) -> Lanes:
 
 
 @_compiled
+def _component_radius(
+    degree: int, standing: Lanes, radius: Lanes, re: Rows, im: Rows, work: Rows, best: Lanes
+) -> Lanes:
+    """How far the nearest root may be from a dominant one that does not stand clear of the others.
+
+    Its disk of Smith's theorem holds a root if no other disk meets it; else the connected part that
+    holds one is no wider than all disks together.
+    """
+    fix_re, fix_im, noise, sizes = work[0], work[1], work[3], work[4]
+    others = max(degree - 1.0, 1.0)
+    own_x, own_y = spread(0.0), spread(0.0)
+    own, total = spread(0.0), spread(0.0)
+    for i in range(degree):
+        x, y = load(re, i) - load(fix_re, i), load(im, i) - load(fix_im, i)
+        beyond = 2.0 * x + (x * x + y * y)
+        disk = others * (load(sizes, i) + load(noise, i))
+        # the first root that attains the maximum, as in `_enclose`
+        first = where_greater(own, spread(0.0), spread(-1.0), beyond - best)
+        own_x = where_greater(spread(0.0), first, own_x, x)
+        own_y = where_greater(spread(0.0), first, own_y, y)
+        own = where_greater(spread(0.0), first, own, disk)
+        total = total + disk
+    room = spread(math.inf)
+    for j in range(degree):
+        dx = load(re, j) - load(fix_re, j) - own_x
+        dy = load(im, j) - load(fix_im, j) - own_y
+        distance = square_root(dx * dx + dy * dy)
+        disk = others * (load(sizes, j) + load(noise, j))
+        # at distance 0 it is the root itself: two that coincide have infinite noise
+        margin = where_greater(distance, spread(0.0), distance - disk - own, spread(math.inf))
+        room = where_greater(room, margin, margin, room)
+    alone = where_greater(room, spread(0.0), own, 2.0 * total)
+    return where_greater(spread(0.0), standing, alone, radius)
+
+
+@_compiled
 def _enclose(
     degree: int,
     delay: int,
@@ -307,9 +343,11 @@ def _enclose(
     """
     fix_re, fix_im, noise, sizes = work[0], work[1], work[3], work[4]
     others = max(degree - 1.0, 1.0)
+    standing = spread(0.0)
     largest = _evaluation_noise(degree, delay, weights_a, weights_b, re, im, work)
     reach, best = spread(0.0), spread(-2.0)
-    radius, modulus, loose = spread(0.0), spread(0.0), spread(0.0)
+    radius, modulus, loose, moving = spread(0.0), spread(0.0), spread(0.0), spread(0.0)
+    poison = spread(0.0)
     for i in range(degree):
         correction, uncertain = load(sizes, i), load(noise, i)
         gap = square_root(_squared_gap(degree, i, re, im))
@@ -323,8 +361,12 @@ def _enclose(
         z = 1.0 + x
         z_size = square_root(z * z + y * y)
         reach = _maximum(reach, z_size + disk)
+        # comparisons pass over NaN: it must not make a disk vanish (inf - inf is NaN too)
+        poison = poison + (disk - disk)
         radius = where_greater(beyond, best, disk, radius)
+        standing = where_greater(beyond, best, is_clear, standing)
         loose = where_greater(beyond, best, share - uncertain, loose)
+        moving = where_greater(beyond, best, correction - uncertain, moving)
         modulus = where_greater(beyond, best, z_size, modulus)
         best = _maximum(best, beyond)
     # of equal magnitudes the larger argument: the smallest real part, upper half plane
@@ -340,13 +382,15 @@ def _enclose(
     store(out, 1, 1.0 + out_x)
     store(out, 2, out_y)
     store(out, 3, modulus)
-    bound = _maximum(reach - modulus, radius) + 4.0 * UNIT_ROUNDOFF * modulus
+    if not all_at_most(spread(0.0), standing):
+        radius = _component_radius(degree, standing, radius, re, im, work, best)
+    bound = _maximum(reach - modulus, radius) + 4.0 * UNIT_ROUNDOFF * modulus + poison
     store(out, 4, bound)
     # what the iteration leaves must also vanish beside the logarithm itself, however small
     digits = RELATIVE_TARGET * _maximum(best, 0.0 - best)
     if all_at_most(bound, TARGET * modulus) and all_at_most(loose, digits):
         return SETTLED
-    return EXHAUSTED if all_at_most(loose, spread(0.0)) else UNSETTLED
+    return EXHAUSTED if all_at_most(moving, spread(0.0)) else UNSETTLED
 
 
 @_compiled
@@ -438,6 +482,7 @@ def solve_walks(
     out = np.zeros((5, WIDTH))
     powers_a, powers_b = plant_den.shape[2], plant_num.shape[2]
     passes = 0
+    seeded = False
     for first in range(0, walks, WIDTH):
         known = 0
         for step in range(steps):
@@ -452,13 +497,13 @@ def solve_walks(
             _convolve(fixed_weights[:powers_b], right_weights[: loop_num.shape[2]], weights_b)
 
             met = False
-            if known == 0 and first > 0:
+            if step == 0 and seeded:
                 # neighbouring walks start alike
                 re[:] = first_re
                 im[:] = first_im
             if known > 0:
                 _extrapolate(degree, known, re, im, past)
-            if known > 0 or first > 0:
+            if known > 0 or (step == 0 and seeded):
                 taken, met = _iterate(degree, delay, coefficients, re, im, work, out, _WARM_PASSES)
                 passes += taken
             if not met:
@@ -467,10 +512,12 @@ def solve_walks(
                 taken, met = _iterate(degree, delay, coefficients, re, im, work, out, limit)
                 passes += taken
                 known = 0
-            known += 1
-            if step == 0:
+            # roots that did not settle may have run together: nothing continues from them
+            known = known + 1 if met else 0
+            if step == 0 and met:
                 first_re[:] = re
                 first_im[:] = im
+                seeded = True
 
             for lane in range(min(WIDTH, walks - first)):
                 node = nodes[first + lane, step]
