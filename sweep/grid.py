@@ -1,4 +1,4 @@
-"""The grid of a sweep: axes with coordinates and roles, fixed parameters, and the partition into tiles."""
+"""The grid of a sweep: axes, fixed parameters, and the partition into tiles."""
 
 from __future__ import annotations
 

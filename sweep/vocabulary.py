@@ -71,7 +71,11 @@ PLANTS: dict[str, Kind] = {
         Kind("integrator", "gain / s", (_PLANT_GAIN,)),
         Kind("double_integrator", "gain / s^2", (_PLANT_GAIN,)),
         Kind("lag", "gain / (time_constant s + 1)", (_TIME_CONSTANT, _PLANT_GAIN)),
-        Kind("lagged_integrator", "gain / (s (time_constant s + 1))", (_TIME_CONSTANT, _PLANT_GAIN)),
+        Kind(
+            "lagged_integrator",
+            "gain / (s (time_constant s + 1))",
+            (_TIME_CONSTANT, _PLANT_GAIN),
+        ),
     )
 }
 
@@ -93,7 +97,11 @@ CONTROLLERS: dict[str, Kind] = {
     for kind in (
         Kind("p", "kp", (_KP,)),
         Kind("pi", "kp + ki / s, sampled by the rule `integral`", (_KP, _KI), _INTEGRAL),
-        Kind("pd", "kp + kd s / (derivative_filter s + 1), backward difference", (_KP, _KD, _FILTER)),
+        Kind(
+            "pd",
+            "kp + kd s / (derivative_filter s + 1), backward difference",
+            (_KP, _KD, _FILTER),
+        ),
         Kind(
             "pid",
             "kp + ki / s + kd s / (derivative_filter s + 1), sampled by the rules of pi and pd",
@@ -167,7 +175,7 @@ class LoopStructure:
     integral: str = "backward"
     """Integral rule; meaningful where the controller has one."""
     has_code_period: bool = False
-    """Whether ``controller.code_period`` is a parameter; else the code assumes the sample period."""
+    """Whether ``controller.code_period`` is a parameter; else the code's period is the loop's."""
     delay_parts: tuple[tuple[str, str], ...] = ()
     """Delay parts as (name, unit), unit ``s`` or ``samples``, sorted by name."""
     hold: str = "zero_order"
@@ -177,7 +185,8 @@ class LoopStructure:
         """Every parameter of the loop by dotted path, in the order in which it is shown."""
         specs = {"sample_period": SAMPLE_PERIOD}
         specs |= {f"plant.{spec.name}": spec for spec in PLANTS[self.plant].parameters}
-        specs |= {f"controller.{spec.name}": spec for spec in CONTROLLERS[self.controller].parameters}
+        controller = CONTROLLERS[self.controller].parameters
+        specs |= {f"controller.{spec.name}": spec for spec in controller}
         if self.has_code_period:
             specs["controller.code_period"] = CODE_PERIOD
         for name, unit in self.delay_parts:

@@ -13,13 +13,13 @@ import tempfile
 from pathlib import Path
 from types import ModuleType
 
-_SOURCES = ("kernel_cache.py", "lanes.py", "roots.py")
+_SOURCES = ("kernel_cache.py", "lanes.py", "disks.py", "roots.py", "../vocabulary.py")
 
 
 def kernel_folder() -> Path:
-    """The folder for the kernels of these sources: in the user's cache, else a new temporary one."""
+    """Where kernels of these sources are kept: in the user's cache, else a new temporary folder."""
     here = Path(__file__).parent
-    text = b"".join((here / name).read_bytes() for name in (*_SOURCES, "../vocabulary.py"))
+    text = b"".join((here / name).read_bytes() for name in _SOURCES)
     name = f"kernels-{hashlib.sha256(text).hexdigest()[:16]}"
     user_cache = os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache"
     folder = Path(user_cache) / "sampled-loop-atlas" / name

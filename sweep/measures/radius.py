@@ -16,8 +16,9 @@ from numpy.typing import NDArray
 from sweep.loop.bounded import UNIT_ROUNDOFF, FloatArray
 from sweep.loop.controllers import RealisedController, realise_controller
 from sweep.loop.sampling import Polynomial, SampledPlant, sample_plant
+from sweep.measures.disks import evaluation_roundoffs
 from sweep.measures.reference import compute_reference
-from sweep.measures.roots import evaluation_roundoffs, solve_walks
+from sweep.measures.roots import solve_walks
 from sweep.vocabulary import LOG_RADIUS_FLOOR, STABILITY_THRESHOLD, LoopStructure
 
 IntArray = NDArray[np.int32]

@@ -14,54 +14,39 @@ steps and corrected together by Weierstrass's iteration, z_i <- z_i - W_i with
 
     W_i = P(z_i) / (a prod_{j != i} (z_i - z_j)),
 
-which doubles the digits with each pass and comes with its own proof: the N disks of radius
-(N - 1) |W_i| about z_i - W_i hold all N roots, as many in each connected part of their union as it
-has disks. The evaluation error of P enters the radii, so the bound that is returned is a bound on
-the true error. Roots that cannot be dominant need not converge: their disks need only stay below.
+which doubles the digits with each pass and comes with its own proof (`sweep.measures.disks`). Roots
+that cannot be dominant need not converge: their disks need only stay below.
 
 References
 ----------
 Weierstrass, K. (1891), Neuer Beweis des Satzes ... Durand, E. (1960); Kerner, I. O. (1966), Numer.
-Math. 8, 290-294: the iteration. Smith, B. T. (1970), Error bounds for zeros of a polynomial based
-upon Gerschgorin's theorems, J. ACM 17, 661-674: the disks. Higham, N. J. (2002), Accuracy and
-Stability of Numerical Algorithms, chapter 5: evaluation errors.
+Math. 8, 290-294: the iteration.
 """
 
 from __future__ import annotations
 
 import math
-from typing import Any, TypeAlias
+from typing import TypeAlias
 
-import numba
 import numpy as np
 from numpy.typing import NDArray
 
-from sweep.measures.kernel_cache import keep_kernels_in
-from sweep.measures.lanes import (
-    WIDTH,
-    all_at_most,
-    load,
-    spread,
-    square_root,
-    store,
-    where_greater,
+from sweep.measures.disks import (
+    SETTLED,
+    TARGET,
+    UNSETTLED,
+    Lanes,
+    Rows,
+    compiled,
+    enclose,
+    maximum,
 )
+from sweep.measures.lanes import WIDTH, all_at_most, load, spread, store
 from sweep.vocabulary import STABILITY_THRESHOLD
-
-TARGET = 1e-10
-"""Largest error bound of log_radius with which the kernel is content."""
-
-RELATIVE_TARGET = 3e-9
-"""Largest part of |log_radius| that stopping the iteration may leave: below single precision."""
-
-UNIT_ROUNDOFF = 2.0**-53
-"""Largest relative error of one correctly rounded operation."""
-
-UNSETTLED, EXHAUSTED, SETTLED = 0, 1, 2
-"""What the disks say of a group of lanes."""
 
 _CONVERGED = 1e-7
 """Correction, relative to sqrt(1 + |delta|^2), from which on the disks are worth drawing."""
+
 _WARM_PASSES = 24
 """Passes from extrapolated roots before starting anew."""
 _COLD_PASSES = 120
@@ -71,34 +56,11 @@ _KICKS = (5, 11, 17)
 _LOOSE = 4
 """Passes after which roots that cannot be dominant may stay loose."""
 
-Lanes: TypeAlias = Any
-"""A value of `sweep.measures.lanes.LanesType`, which only compiled code holds."""
-Rows: TypeAlias = NDArray[np.float64]
-"""Array of shape (n, `WIDTH`), or a stack of such."""
 RowNumbers: TypeAlias = NDArray[np.int32]
 """Array of shape (walks, steps)."""
 
-keep_kernels_in(numba)
 
-_compiled = numba.njit(nogil=True, cache=True, error_model="numpy", fastmath={"contract"})
-
-
-@_compiled
-def evaluation_roundoffs(degree: int) -> float:
-    """Rounding errors that evaluating P may collect, in roundoffs of the sum of its terms' sizes.
-
-    Each of at most ``degree`` steps multiplies complex numbers (sqrt(5)) and adds (1); forming the
-    coefficients adds a few more.
-    """
-    return 3.3 * degree + 6.0
-
-
-@_compiled
-def _maximum(left: Lanes, right: Lanes) -> Lanes:
-    return where_greater(left, right, left, right)
-
-
-@_compiled
+@compiled
 def _gather(
     rows: NDArray[np.float64], which: RowNumbers, step: int, first: int, into: Rows, weights: Rows
 ) -> None:
@@ -111,7 +73,7 @@ def _gather(
             weights[power, lane] = rows[row, 1, power]
 
 
-@_compiled
+@compiled
 def _convolve(left: Rows, right: Rows, product: Rows) -> None:
     for power in range(product.shape[0]):
         store(product, power, spread(0.0))
@@ -120,7 +82,7 @@ def _convolve(left: Rows, right: Rows, product: Rows) -> None:
             store(product, i + j, load(product, i + j) + load(left, i) * load(right, j))
 
 
-@_compiled
+@compiled
 def _scatter_start(
     degree: int, delay: int, open_loop: Rows, feedback: Rows, re: Rows, im: Rows
 ) -> None:
@@ -142,7 +104,7 @@ def _scatter_start(
             im[i, lane] = radius * math.sin(angle)
 
 
-@_compiled
+@compiled
 def _extrapolate(degree: int, known: int, re: Rows, im: Rows, past: Rows) -> None:
     """Continue each root as a polynomial through its last ``known`` (at most three) values."""
     last_re, last_im, older_re, older_im = past[0], past[1], past[2], past[3]
@@ -162,7 +124,7 @@ def _extrapolate(degree: int, known: int, re: Rows, im: Rows, past: Rows) -> Non
         store(last_im, i, y)
 
 
-@_compiled
+@compiled
 def _evaluate(
     delay: int, open_loop: Rows, feedback: Rows, x: Lanes, y: Lanes
 ) -> tuple[Lanes, Lanes]:
@@ -187,7 +149,7 @@ def _evaluate(
     return re + fed_re, im + fed_im
 
 
-@_compiled
+@compiled
 def _correct(
     degree: int, delay: int, open_loop: Rows, feedback: Rows, re: Rows, im: Rows, work: Rows
 ) -> Lanes:
@@ -209,17 +171,17 @@ def _correct(
                 carried = prod_re * dx - prod_im * dy
                 prod_im = prod_re * dy + prod_im * dx
                 prod_re = carried
-        inverse = 1.0 / _maximum(prod_re * prod_re + prod_im * prod_im, spread(1e-290))
+        inverse = 1.0 / maximum(prod_re * prod_re + prod_im * prod_im, spread(1e-290))
         dx = (value_re * prod_re + value_im * prod_im) * inverse
         dy = (value_im * prod_re - value_re * prod_im) * inverse
         store(fix_re, i, dx)
         store(fix_im, i, dy)
         store(spacing, i, inverse)
-        excess = _maximum(excess, dx * dx + dy * dy - tolerance * (1.0 + x * x + y * y))
+        excess = maximum(excess, dx * dx + dy * dy - tolerance * (1.0 + x * x + y * y))
     return excess
 
 
-@_compiled
+@compiled
 def _apply(degree: int, re: Rows, im: Rows, work: Rows, kick: float) -> None:
     """Subtract the corrections. A kick turns them, which lets a mirrored pair become two reals."""
     fix_re, fix_im = work[0], work[1]
@@ -229,171 +191,7 @@ def _apply(degree: int, re: Rows, im: Rows, work: Rows, kick: float) -> None:
         store(im, i, load(im, i) - dy - kick * dx)
 
 
-@_compiled
-def _evaluation_noise(
-    degree: int,
-    delay: int,
-    weights_a: Rows,
-    weights_b: Rows,
-    re: Rows,
-    im: Rows,
-    work: Rows,
-) -> Lanes:
-    """Bound what rounding did to each correction; returns the largest correction, noise included.
-
-    Rows of ``work[3]`` receive the bounds, rows of ``work[4]`` the sizes of the corrections.
-    """
-    fix_re, fix_im, spacing, noise, sizes = work[0], work[1], work[2], work[3], work[4]
-    rounding = evaluation_roundoffs(degree) * UNIT_ROUNDOFF
-    top_b, top_a = weights_b.shape[0] - 1, weights_a.shape[0] - 1
-    largest = spread(0.0)
-    for i in range(degree):
-        x, y = load(re, i), load(im, i)
-        size, z = square_root(x * x + y * y), 1.0 + x
-        z_size = square_root(z * z + y * y)
-        fed = load(weights_b, top_b)
-        for power in range(top_b - 1, -1, -1):
-            fed = fed * size + load(weights_b, power)
-        total = load(weights_a, top_a)
-        for power in range(top_a - 1, -1, -1):
-            total = total * size + load(weights_a, power)
-        for _ in range(delay):
-            total = total * z_size
-        uncertain = (total + fed) * square_root(load(spacing, i)) * rounding
-        uncertain = uncertain + 4.0 * UNIT_ROUNDOFF * size
-        dx, dy = load(fix_re, i), load(fix_im, i)
-        correction = 1.001 * square_root(dx * dx + dy * dy)
-        store(noise, i, uncertain)
-        store(sizes, i, correction)
-        largest = _maximum(largest, correction + uncertain)
-    return largest
-
-
-@_compiled
-def _squared_gap(degree: int, i: int, re: Rows, im: Rows) -> Lanes:
-    """Squared distance from root i to the nearest other one."""
-    x, y = load(re, i), load(im, i)
-    nearest = spread(math.inf)
-    for j in range(degree):
-        if j != i:
-            dx, dy = x - load(re, j), y - load(im, j)
-            distance = dx * dx + dy * dy
-            nearest = where_greater(nearest, distance, distance, nearest)
-    return nearest
-
-
-@_compiled
-def _component_radius(
-    degree: int, standing: Lanes, radius: Lanes, re: Rows, im: Rows, work: Rows, best: Lanes
-) -> Lanes:
-    """How far the nearest root may be from a dominant one that does not stand clear of the others.
-
-    Its disk of Smith's theorem holds a root if no other disk meets it; else the connected part that
-    holds one is no wider than all disks together.
-    """
-    fix_re, fix_im, noise, sizes = work[0], work[1], work[3], work[4]
-    others = max(degree - 1.0, 1.0)
-    own_x, own_y = spread(0.0), spread(0.0)
-    own, total = spread(0.0), spread(0.0)
-    for i in range(degree):
-        x, y = load(re, i) - load(fix_re, i), load(im, i) - load(fix_im, i)
-        beyond = 2.0 * x + (x * x + y * y)
-        disk = others * (load(sizes, i) + load(noise, i))
-        # the first root that attains the maximum, as in `_enclose`
-        first = where_greater(own, spread(0.0), spread(-1.0), beyond - best)
-        own_x = where_greater(spread(0.0), first, own_x, x)
-        own_y = where_greater(spread(0.0), first, own_y, y)
-        own = where_greater(spread(0.0), first, own, disk)
-        total = total + disk
-    room = spread(math.inf)
-    for j in range(degree):
-        dx = load(re, j) - load(fix_re, j) - own_x
-        dy = load(im, j) - load(fix_im, j) - own_y
-        distance = square_root(dx * dx + dy * dy)
-        disk = others * (load(sizes, j) + load(noise, j))
-        # at distance 0 it is the root itself: two that coincide have infinite noise
-        margin = where_greater(distance, spread(0.0), distance - disk - own, spread(math.inf))
-        room = where_greater(room, margin, margin, room)
-    alone = where_greater(room, spread(0.0), own, 2.0 * total)
-    return where_greater(spread(0.0), standing, alone, radius)
-
-
-@_compiled
-def _enclose(
-    degree: int,
-    delay: int,
-    weights_a: Rows,
-    weights_b: Rows,
-    re: Rows,
-    im: Rows,
-    work: Rows,
-    out: Rows,
-) -> int:
-    """Disks round all roots and what they prove.
-
-    Returns `SETTLED` when every lane meets the targets, `EXHAUSTED` when what is missing is the
-    rounding's part and no pass can improve it, else `UNSETTLED`.
-
-    A root that stands clear of the others has, besides the disk of Smith's theorem, a much smaller
-    one: scale its row of the companion-like matrix by s = 2 w / gap, w the largest correction, and
-    Gerschgorin's disk about it shrinks to (N - 1) |W_i| s while it still meets no other.
-
-    ``out`` receives, by lane: |z|^2 - 1, Re z and Im z of the dominant root, its modulus and the
-    bound on the error of that modulus.
-    """
-    fix_re, fix_im, noise, sizes = work[0], work[1], work[3], work[4]
-    others = max(degree - 1.0, 1.0)
-    standing = spread(0.0)
-    largest = _evaluation_noise(degree, delay, weights_a, weights_b, re, im, work)
-    reach, best = spread(0.0), spread(-2.0)
-    radius, modulus, loose, moving = spread(0.0), spread(0.0), spread(0.0), spread(0.0)
-    poison = spread(0.0)
-    for i in range(degree):
-        correction, uncertain = load(sizes, i), load(noise, i)
-        gap = square_root(_squared_gap(degree, i, re, im))
-        whole = others * (correction + uncertain)
-        small = whole * (2.002 * largest / gap)
-        is_clear = gap - (2.0 * degree + 8.0) * largest
-        share = where_greater(is_clear, spread(0.0), small, whole)
-        disk = share + uncertain
-        x, y = load(re, i) - load(fix_re, i), load(im, i) - load(fix_im, i)
-        beyond = 2.0 * x + (x * x + y * y)
-        z = 1.0 + x
-        z_size = square_root(z * z + y * y)
-        reach = _maximum(reach, z_size + disk)
-        # comparisons pass over NaN: it must not make a disk vanish (inf - inf is NaN too)
-        poison = poison + (disk - disk)
-        radius = where_greater(beyond, best, disk, radius)
-        standing = where_greater(beyond, best, is_clear, standing)
-        loose = where_greater(beyond, best, share - uncertain, loose)
-        moving = where_greater(beyond, best, correction - uncertain, moving)
-        modulus = where_greater(beyond, best, z_size, modulus)
-        best = _maximum(best, beyond)
-    # of equal magnitudes the larger argument: the smallest real part, upper half plane
-    out_x, out_y = spread(math.inf), spread(0.0)
-    level = best - 1e-13 * (1.0 + best)
-    for i in range(degree):
-        x, y = load(re, i) - load(fix_re, i), load(im, i) - load(fix_im, i)
-        beyond = 2.0 * x + (x * x + y * y)
-        candidate = where_greater(beyond, level, x, spread(math.inf))
-        out_y = where_greater(out_x, candidate, y, out_y)
-        out_x = where_greater(out_x, candidate, candidate, out_x)
-    store(out, 0, best)
-    store(out, 1, 1.0 + out_x)
-    store(out, 2, out_y)
-    store(out, 3, modulus)
-    if not all_at_most(spread(0.0), standing):
-        radius = _component_radius(degree, standing, radius, re, im, work, best)
-    bound = _maximum(reach - modulus, radius) + 4.0 * UNIT_ROUNDOFF * modulus + poison
-    store(out, 4, bound)
-    # what the iteration leaves must also vanish beside the logarithm itself, however small
-    digits = RELATIVE_TARGET * _maximum(best, 0.0 - best)
-    if all_at_most(bound, TARGET * modulus) and all_at_most(loose, digits):
-        return SETTLED
-    return EXHAUSTED if all_at_most(moving, spread(0.0)) else UNSETTLED
-
-
-@_compiled
+@compiled
 def _iterate(
     degree: int,
     delay: int,
@@ -411,7 +209,7 @@ def _iterate(
         converged = all_at_most(excess, spread(0.0))
         # beyond `_LOOSE` passes minor roots may be left loose: only the disks decide
         if converged or (number > _LOOSE and number % 2 == 0) or number == limit:
-            state = _enclose(degree, delay, weights_a, weights_b, re, im, work, out)
+            state = enclose(degree, delay, weights_a, weights_b, re, im, work, out)
             if state != UNSETTLED or number == limit:
                 _apply(degree, re, im, work, 0.0)
                 return number, state == SETTLED
@@ -420,13 +218,13 @@ def _iterate(
     return limit, False
 
 
-@_compiled
+@compiled
 def _argument(re: float, im: float) -> float:
     """Argument in [0, pi]: of a conjugate pair the positive one."""
     return math.atan2(abs(im), re)
 
 
-@_compiled
+@compiled
 def solve_walks(
     delay: int,
     plants: tuple[NDArray[np.float64], NDArray[np.float64]],
