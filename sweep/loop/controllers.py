@@ -17,8 +17,11 @@ A term whose gain is exactly 0 is absent together with its memory: ki = 0 leaves
 
 from __future__ import annotations
 
+import itertools
+import operator
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import reduce
 
 import numpy as np
 from numpy.typing import NDArray
@@ -98,17 +101,27 @@ def realise_controller(
     )
 
 
+def _is_nothing(coefficient: Bounded) -> bool:
+    """Whether a coefficient is 0 throughout, so that adding or multiplying it is idle."""
+    return coefficient.value.size == 1 and not coefficient.value.any()
+
+
+def _sum(terms: list[Bounded]) -> Bounded:
+    """The sum of what is not nothing."""
+    present = [term for term in terms if not _is_nothing(term)]
+    return reduce(operator.add, present) if present else Bounded.exact(0.0)
+
+
 def _multiply(first: Polynomial, second: Polynomial) -> Polynomial:
-    product = [Bounded.exact(0.0)] * (len(first) + len(second) - 1)
-    for i, a in enumerate(first):
-        for j, b in enumerate(second):
-            product[i + j] = product[i + j] + a * b
-    return product
+    terms: list[list[Bounded]] = [[] for _ in range(len(first) + len(second) - 1)]
+    for (i, a), (j, b) in itertools.product(enumerate(first), enumerate(second)):
+        if not (_is_nothing(a) or _is_nothing(b)):
+            terms[i + j].append(a * b)
+    return [_sum(power) for power in terms]
 
 
 def _add(*polynomials: Polynomial) -> Polynomial:
-    total = [Bounded.exact(0.0)] * max(len(polynomial) for polynomial in polynomials)
-    for polynomial in polynomials:
-        for power, coefficient in enumerate(polynomial):
-            total[power] = total[power] + coefficient
-    return total
+    return [
+        _sum([term for term in power if term is not None])
+        for power in itertools.zip_longest(*polynomials)
+    ]

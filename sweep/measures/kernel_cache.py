@@ -13,7 +13,14 @@ import tempfile
 from pathlib import Path
 from types import ModuleType
 
-_SOURCES = ("kernel_cache.py", "lanes.py", "disks.py", "roots.py", "../vocabulary.py")
+_SOURCES = (
+    "kernel_cache.py",
+    "lanes.py",
+    "disks.py",
+    "elementary.py",
+    "roots.py",
+    "../vocabulary.py",
+)
 
 
 def kernel_folder() -> Path:

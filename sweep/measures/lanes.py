@@ -133,6 +133,42 @@ def square_root(_typing: Any, value: Any) -> Any:
     return lanes_type(lanes_type), generate
 
 
+_BITS = ir.VectorType(ir.IntType(64), WIDTH)
+_MANTISSA_BITS = 52
+# bits of sqrt(1/2): subtracting them moves the carry into the exponent to where x >= sqrt(1/2)
+_ROOT_HALF = 0x3FE6A09E667F3BCD
+
+
+def _bits(value: int) -> Any:
+    return ir.Constant(_BITS, [value] * WIDTH)
+
+
+def _exponent_bits(builder: Any, value: Any) -> Any:
+    above = builder.sub(builder.bitcast(value, _BITS), _bits(_ROOT_HALF))
+    return builder.ashr(above, _bits(_MANTISSA_BITS))
+
+
+@intrinsic
+def exponent(_typing: Any, value: Any) -> Any:
+    """The power of 2 that leaves each positive, normal lane in [sqrt(1/2), sqrt(2)), as a float."""
+
+    def generate(_context: Any, builder: Any, _signature: Any, args: Any) -> Any:
+        return builder.sitofp(_exponent_bits(builder, args[0]), _VECTOR)
+
+    return lanes_type(lanes_type), generate
+
+
+@intrinsic
+def mantissa(_typing: Any, value: Any) -> Any:
+    """Each positive, normal lane over 2 to its `exponent`: in [sqrt(1/2), sqrt(2))."""
+
+    def generate(_context: Any, builder: Any, _signature: Any, args: Any) -> Any:
+        shift = builder.shl(_exponent_bits(builder, args[0]), _bits(_MANTISSA_BITS))
+        return builder.bitcast(builder.sub(builder.bitcast(args[0], _BITS), shift), _VECTOR)
+
+    return lanes_type(lanes_type), generate
+
+
 @intrinsic
 def where_greater(_typing: Any, left: Any, right: Any, chosen: Any, other: Any) -> Any:
     """``chosen`` in the lanes where left > right, ``other`` elsewhere (and where one is NaN)."""

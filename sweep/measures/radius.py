@@ -58,14 +58,32 @@ class RadiusBlock:
 
 @dataclass(frozen=True, eq=False)
 class _Table:
-    """Coefficients of every distinct plant or controller of a block, one in each row."""
+    """The distinct plants or controllers of a block, one in each row."""
 
-    numerator: FloatArray
-    """(rows, 2, powers): coefficients in delta and their errors."""
-    denominator: FloatArray
-    """(rows, 2, powers)."""
+    numerator: Polynomial
+    """Coefficients in delta, lowest power first."""
+    denominator: Polynomial
+    """Coefficients in delta, lowest power first."""
     row: IntArray
     """Row of each node, broadcasting over the block."""
+
+    def coefficients(
+        self, degree: int, order: int, roundoffs: float
+    ) -> tuple[FloatArray, FloatArray]:
+        """Numerators and denominators up to a power, each (rows, 2, powers): values and weights.
+
+        The kernel allows a weight ``roundoffs`` times the unit roundoff, so that a weight of the
+        magnitude plus the coefficient's own error in that measure covers both.
+        """
+        tables = []
+        for polynomial in (self.numerator[: degree + 1], self.denominator[: order + 1]):
+            table = np.empty((*self.row.shape, 2, len(polynomial)))
+            for power, coefficient in enumerate(polynomial):
+                allowance = coefficient.error / (roundoffs * UNIT_ROUNDOFF)
+                table[..., 0, power] = coefficient.value
+                table[..., 1, power] = np.abs(coefficient.value) + allowance
+            tables.append(table.reshape(-1, 2, len(polynomial)))
+        return tables[0], tables[1]
 
 
 @dataclass(frozen=True)
@@ -136,15 +154,12 @@ def _compute_fast(
     controller_rows = _as_walks(controllers.row, shape, walk_axis)
     nodes = _as_walks(np.arange(len(results[0]), dtype=np.int32).reshape(shape), shape, walk_axis)
     for key, walks, steps in _batches(plant, controller, shape, walk_axis):
-        batch = np.ix_(walks, steps)
         roundoffs = evaluation_roundoffs(key.delay + key.plant_order + key.controller_order)
         solve_walks(
             key.delay,
-            _coefficients(plants, key.plant_degree, key.plant_order, roundoffs),
-            _coefficients(controllers, key.controller_degree, key.controller_order, roundoffs),
-            np.ascontiguousarray(plant_rows[batch]),
-            np.ascontiguousarray(controller_rows[batch]),
-            np.ascontiguousarray(nodes[batch]),
+            plants.coefficients(key.plant_degree, key.plant_order, roundoffs),
+            controllers.coefficients(key.controller_degree, key.controller_order, roundoffs),
+            *(_pick(rows, walks, steps) for rows in (plant_rows, controller_rows, nodes)),
             steady,
             *results,
             slow,
@@ -157,35 +172,8 @@ def _compute_fast(
 def _tabulate(numerator: Polynomial, denominator: Polynomial, rank: int) -> _Table:
     coefficients = [*numerator, *denominator]
     shape = np.broadcast_shapes((1,) * rank, *(c.value.shape for c in coefficients))
-    rows = np.arange(int(np.prod(shape)), dtype=np.int32).reshape(shape)
-    return _Table(_rows(numerator, shape), _rows(denominator, shape), rows)
-
-
-def _rows(polynomial: Polynomial, shape: tuple[int, ...]) -> FloatArray:
-    table = np.empty((int(np.prod(shape)), 2, len(polynomial)))
-    for power, coefficient in enumerate(polynomial):
-        table[:, 0, power] = np.broadcast_to(coefficient.value, shape).ravel()
-        table[:, 1, power] = np.broadcast_to(coefficient.error, shape).ravel()
-    return table
-
-
-def _weighted(rows: FloatArray, powers: int, roundoffs: float) -> FloatArray:
-    """The first powers of each row, with weights in place of errors.
-
-    The kernel allows a weight ``roundoffs`` times the unit roundoff, so that a weight of the
-    magnitude plus the coefficient's own error in that measure covers both.
-    """
-    values, errors = rows[:, 0, :powers], rows[:, 1, :powers]
-    return np.stack([values, np.abs(values) + errors / (roundoffs * UNIT_ROUNDOFF)], axis=1)
-
-
-def _coefficients(
-    table: _Table, degree: int, order: int, roundoffs: float
-) -> tuple[FloatArray, FloatArray]:
-    return (
-        _weighted(table.numerator, degree + 1, roundoffs),
-        _weighted(table.denominator, order + 1, roundoffs),
-    )
+    rows = np.arange(math.prod(shape), dtype=np.int32).reshape(shape)
+    return _Table(numerator, denominator, rows)
 
 
 def _choose_walk_axis(
@@ -204,6 +192,13 @@ def _choose_walk_axis(
 def _as_walks(array: NDArray[Any], shape: tuple[int, ...], walk_axis: int) -> NDArray[Any]:
     whole = np.broadcast_to(array, shape)
     return np.moveaxis(whole, walk_axis, -1).reshape(-1, shape[walk_axis])
+
+
+def _pick(rows: IntArray, walks: IntArray, steps: IntArray) -> IntArray:
+    """Some walks and some steps of them; no detour when they are all."""
+    if (len(walks), len(steps)) != rows.shape:
+        rows = rows[np.ix_(walks, steps)]
+    return np.ascontiguousarray(rows)
 
 
 def _batches(

@@ -41,7 +41,8 @@ from sweep.measures.disks import (
     enclose,
     maximum,
 )
-from sweep.measures.lanes import WIDTH, all_at_most, load, spread, store
+from sweep.measures.elementary import argument, log_of_radius
+from sweep.measures.lanes import WIDTH, all_at_most, load, spread, store, where_greater
 from sweep.vocabulary import STABILITY_THRESHOLD
 
 _CONVERGED = 1e-7
@@ -219,9 +220,27 @@ def _iterate(
 
 
 @compiled
-def _argument(re: float, im: float) -> float:
-    """Argument in [0, pi]: of a conjugate pair the positive one."""
-    return math.atan2(abs(im), re)
+def _describe(out: Rows) -> None:
+    """Turn what `enclose` left in ``out`` into the answer.
+
+    Row 0 becomes the logarithm, row 1 the argument, and row 5 is above 0 where the bound in row 4
+    misses `TARGET` or leaves the node undecided at the threshold.
+    """
+    beyond, modulus, bound = load(out, 0), load(out, 3), load(out, 4)
+    store(out, 1, argument(load(out, 1), load(out, 2)))
+    within = all_at_most(spread(1e-150), modulus) and all_at_most(modulus, spread(1e150))
+    if within:
+        store(out, 0, log_of_radius(beyond, modulus))
+    else:
+        for lane in range(WIDTH):
+            radius = out[3, lane]
+            out[0, lane] = math.log(radius) if radius > 0.0 else -math.inf
+    distance = load(out, 0) - STABILITY_THRESHOLD
+    distance = 0.5 * maximum(distance, 0.0 - distance)
+    allowed = where_greater(distance, spread(TARGET), spread(TARGET), distance) * modulus
+    # a comparison with NaN or with infinity on both sides does not hold: such a node is slow
+    held = where_greater(allowed - bound, spread(-1e-300), spread(-1.0), spread(1.0))
+    store(out, 5, held)
 
 
 @compiled
@@ -277,7 +296,7 @@ def solve_walks(
     re, im = np.zeros((degree, WIDTH)), np.zeros((degree, WIDTH))
     first_re, first_im = np.zeros((degree, WIDTH)), np.zeros((degree, WIDTH))
     past, work = np.zeros((4, degree, WIDTH)), np.zeros((5, degree, WIDTH))
-    out = np.zeros((5, WIDTH))
+    out = np.zeros((6, WIDTH))
     powers_a, powers_b = plant_den.shape[2], plant_num.shape[2]
     passes = 0
     seeded = False
@@ -317,18 +336,11 @@ def solve_walks(
                 first_im[:] = im
                 seeded = True
 
+            _describe(out)
             for lane in range(min(WIDTH, walks - first)):
                 node = nodes[first + lane, step]
-                modulus = out[3, lane]
-                if modulus > 0.5:
-                    log_radius[node] = 0.5 * math.log1p(out[0, lane])
-                elif modulus > 0.0:
-                    log_radius[node] = math.log(modulus)
-                else:
-                    log_radius[node] = -math.inf
-                mode_angle[node] = _argument(out[1, lane], out[2, lane])
+                log_radius[node] = out[0, lane]
+                mode_angle[node] = out[1, lane]
                 error[node] = out[4, lane]
-                distance = abs(log_radius[node] - STABILITY_THRESHOLD)
-                allowed = min(TARGET, 0.5 * distance) * modulus
-                slow[node] = not (out[4, lane] <= allowed and allowed < math.inf)
+                slow[node] = out[5, lane] > 0.0
     return passes
