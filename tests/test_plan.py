@@ -6,8 +6,9 @@ import pytest
 import stand_in
 
 from sweep.compute import plan as planning
-from sweep.compute.plan import Survey, checked_workers, pending_nodes, plan_sweep, survey_sweep
+from sweep.compute.plan import checked_workers, plan_sweep
 from sweep.compute.run import run_sweep
+from sweep.compute.survey import Survey, pending_nodes, survey_sweep
 from sweep.errors import QuestionError, ResourceError
 from sweep.grid import Tiling
 

@@ -15,7 +15,6 @@ import stand_in
 
 from sweep.compute import plan as planning
 from sweep.compute.gate import Gate, next_occurrence_s
-from sweep.compute.plan import survey_sweep
 from sweep.compute.progress import (
     KernelsReady,
     SweepFinished,
@@ -24,6 +23,7 @@ from sweep.compute.progress import (
     TileStored,
 )
 from sweep.compute.run import TILES_PER_GRAPH, execute, run_sweep
+from sweep.compute.survey import survey_sweep
 from sweep.compute.task import TileTask, compute_tile
 from sweep.errors import DamagedAtlas, InputError, QuestionError, ResourceError, SweepError
 from sweep.store.atlas import create_atlas, open_stored

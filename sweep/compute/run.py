@@ -25,12 +25,10 @@ import dask.threaded
 
 from sweep.compute.gate import Gate, interrupts_close, next_occurrence_s
 from sweep.compute.plan import (
-    Survey,
     checked_workers,
     probe_tiles,
     ready_kernel,
     refuse_if_too_large,
-    survey_sweep,
 )
 from sweep.compute.progress import (
     Deaf,
@@ -42,6 +40,7 @@ from sweep.compute.progress import (
     SweepStopping,
     TileStored,
 )
+from sweep.compute.survey import Survey, survey_sweep
 from sweep.compute.task import Block, ComputeBlock, SweepSpec, TileResult, TileTask, compute_tile
 from sweep.config import Config
 from sweep.errors import ResourceError, SweepError

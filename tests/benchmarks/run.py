@@ -23,8 +23,8 @@ import time
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 
-from sweep.compute.plan import survey_sweep
 from sweep.compute.run import run_sweep
+from sweep.compute.survey import survey_sweep
 from sweep.config import Config, parse_config
 from sweep.measures.registry import compile_kernels, compute_block
 
