@@ -11,7 +11,7 @@ from typing import Any, TextIO
 
 from sweep.errors import SweepError
 
-WIDEST = 100
+WIDEST = 108
 """Columns that a table takes at most, and all that it takes when nobody watches."""
 
 

@@ -1,4 +1,4 @@
-"""The paper that answers are written on: plain tables and lines of at most 100 columns.
+"""The paper that answers are written on: plain tables and lines of at most 108 columns.
 
 Every text that comes from an atlas or a config is shown as it is, without markup and without
 control characters.
