@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import json
 import math
 
@@ -97,7 +98,8 @@ CONTINUOUS = {
 
 def test_a_delayed_integrator_sampled_faster_tends_to_half_pi_with_the_second_order(tmp_path):
     rows = ",\n".join(
-        f'{{label = "{k} samples", sample_period = "{1 / (k + 0.5)!r} s", delay.update = "{k} samples"}}'
+        f'{{label = "{k} samples", sample_period = "{1 / (k + 0.5)!r} s", '
+        f'delay.update = "{k} samples"}}'
         for k in CONTINUOUS
     )
     text = f"""
@@ -125,7 +127,7 @@ def test_a_delayed_integrator_sampled_faster_tends_to_half_pi_with_the_second_or
         # one oscillation takes four delays
         assert row.intervals[0].high.hz == pytest.approx(0.25, rel=1e-3)
     errors = [math.pi / 2 - end for end in ends.values()]
-    for coarse, fine in zip(errors, errors[1:], strict=False):
+    for coarse, fine in itertools.pairwise(errors):
         assert coarse / fine == pytest.approx(4, rel=0.1)
 
 
@@ -175,7 +177,7 @@ def test_a_delayed_oscillator_sampled_faster_tends_to_the_line_of_hsu_and_bhatt(
         assert line.expect((0, edge)) == {"smooth": 2, "between": 0}
         errors.append(row.intervals[0].high.value - HSU_BHATT_LIMIT)
         assert row.intervals[0].high.hz == pytest.approx(1 / 8, rel=1e-3)
-    for coarse, fine in zip(errors, errors[1:], strict=False):
+    for coarse, fine in itertools.pairwise(errors):
         assert coarse / fine == pytest.approx(4, rel=0.1)
 
 

@@ -1,4 +1,4 @@
-"""The oscillator under proportional feedback: stable gains of stored atlases against closed forms."""
+"""The oscillator under proportional feedback: limits of stored atlases against closed forms."""
 
 from __future__ import annotations
 
