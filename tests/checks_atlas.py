@@ -25,7 +25,7 @@ Polynomial = Callable[[float], Sequence[float]]
 """Coordinate on the asked axis -> characteristic polynomial in z, highest power first."""
 
 SHARE_OF_SPAN = 1e-4
-ROOM_FOR_ROOTS = 0.1
+ROOM_FOR_ROOTS = 0.3
 STEPS_IN_A_CELL = 48
 
 

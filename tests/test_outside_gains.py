@@ -85,7 +85,7 @@ def test_where_the_pair_meets_minus_one_the_corner_lies_between_the_named_nodes(
 
 @pytest.mark.parametrize(
     ("period_s", "edge", "stop"),
-    [(0.01, 200.3338889589498823742579, 250.3), (0.1, 20.33892560993158491362028, 25.03)],
+    [(0.01, 200.3338892589498823742579, 250.3), (0.1, 20.33892560993158491362028, 25.03)],
 )
 def test_fast_sampling_allows_twice_the_sample_rate(tmp_path, period_s, edge, stop):
     text = f"""
