@@ -29,22 +29,26 @@ CHECKOUT = Path(__file__).resolve().parents[2]
 DELAYS = (1.0, 4.3)
 
 
-def gain_plane(delay_samples: float, planes: int):
-    """The overnight config's gains at some of its sample periods, with one total delay."""
+def gain_planes(delay_samples: float, planes: int):
+    """The overnight config's gains at some of its sample periods and dampings, one total delay."""
     config = load_config(CHECKOUT / "configs" / "overnight.toml")
-    axes = {axis.name: axis for axis in config.grid.axes}
+    axes = {axis.name: axis.coordinates for axis in config.grid.axes}
     structure = replace(config.structure, delay_parts=(("update", "samples"),))
-    periods = np.linspace(20, 140, planes).astype(int)
-    shape = (planes, len(axes["kp"]), len(axes["kd"]))
-    parameters = {
-        "sample_period": axes["sample_period"].coordinates[periods].reshape(-1, 1, 1),
-        "controller.kp": axes["kp"].coordinates.reshape(1, -1, 1),
-        "controller.kd": axes["kd"].coordinates.reshape(1, 1, -1),
-        "plant.damping": np.full((1, 1, 1), 0.01),
-        "delay.update": np.full((1, 1, 1), delay_samples),
+    swept = {
+        "sample_period": axes["sample_period"][np.linspace(20, 140, planes).astype(int)],
+        "plant.damping": axes["damping"][:planes],
+        "controller.kp": axes["kp"],
+        "controller.kd": axes["kd"],
     }
-    for fixed in config.grid.fixed:
-        parameters.setdefault(fixed.path, np.full((1, 1, 1), fixed.value))
+    shape = tuple(len(values) for values in swept.values())
+    parameters = {
+        path: values.reshape([-1 if k == position else 1 for k in range(len(swept))])
+        for position, (path, values) in enumerate(swept.items())
+    }
+    fixed = {parameter.path: parameter.value for parameter in config.grid.fixed}
+    fixed["delay.update"] = delay_samples
+    for path, value in fixed.items():
+        parameters.setdefault(path, np.full([1] * len(swept), value))
     return structure, parameters, shape
 
 
@@ -71,7 +75,7 @@ def timed(function, *arguments) -> float:
 
 
 def compare(delay_samples: float, *, planes: int, matrices: int, rounds: int) -> dict:
-    structure, parameters, shape = gain_plane(delay_samples, planes)
+    structure, parameters, shape = gain_planes(delay_samples, planes)
     stack = stack_matrices(structure, parameters, shape, matrices)
     block = compute_radius(structure, parameters, shape)
     nodes = block.slow.size
@@ -98,8 +102,8 @@ def compare(delay_samples: float, *, planes: int, matrices: int, rounds: int) ->
     }
 
 
-def run_benchmark(*, planes: int = 8, matrices: int = 20_000, rounds: int = 9) -> dict:
-    structure, _, _ = gain_plane(DELAYS[0], 1)
+def run_benchmark(*, planes: int = 4, matrices: int = 20_000, rounds: int = 9) -> dict:
+    structure, _, _ = gain_planes(DELAYS[0], 1)
     start = time.perf_counter()
     compile_kernels(structure)
     compilation = time.perf_counter() - start
