@@ -158,7 +158,7 @@ def whole(config: Config, measure: str = "log_radius"):
 
 def objects_of(folder: Path) -> dict[str, bytes]:
     """Every stored object of every measure, by path relative to the atlas."""
-    paths = [p for name in MEASURES for p in folder.glob(f"{name}/c/**/*") if p.is_file()]
+    paths = [p for name in MEASURES for p in folder.glob(f"{name}/c.*")]
     return {str(path.relative_to(folder)): path.read_bytes() for path in paths}
 
 

@@ -256,7 +256,7 @@ def test_no_workers_or_an_unfit_tile_write_nothing(tmp_path):
 
 def test_leftovers_of_killed_runs_are_cleared_away(tmp_path):
     atlas = run(stand_in.small(), tmp_path).atlas
-    partial = atlas / "log_radius" / "c" / "0" / "0" / "0" / "0" / f"0.{'f' * 32}.partial"
+    partial = atlas / "log_radius" / f"c.0.0.0.0.0.{'f' * 32}.partial"
     partial.write_bytes(b"half")
     (tmp_path / f"x.zarr.{'f' * 32}.partial").mkdir()
     run(stand_in.small(), tmp_path, compute=stand_in.must_not_run)

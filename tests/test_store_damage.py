@@ -51,9 +51,9 @@ def test_a_damaged_tile_is_named_with_its_object_and_the_remedy(atlas):
     path.write_bytes(broken)
     with pytest.raises(DamagedAtlas) as caught:
         atlas.read("log_radius", ALL)
-    assert caught.value.where == ("log_radius/c/1/2",)
+    assert caught.value.where == ("log_radius/c.1.2",)
     assert "(1, 2)" in caught.value.message
-    assert "delete log_radius/c/1/2" in caught.value.remedy
+    assert "delete log_radius/c.1.2" in caught.value.remedy
     assert caught.value.exit_code == 3
 
 
@@ -82,22 +82,29 @@ def test_a_truncated_object_is_damage_and_not_unknown(atlas):
 
 
 def test_only_proper_names_inside_the_lattice_count_as_done(atlas):
-    folder = atlas.path / "log_radius" / "c"
-    whole = (folder / "0" / "0").read_bytes()
-    for name in ("01", "x", "-1", "4", "0.partial", f"0.{'a' * 32}.partial", "٣"):
-        (folder / "1" / name).write_bytes(whole)
-    (folder / "7").mkdir()
-    (folder / "7" / "0").write_bytes(whole)
-    (folder / "2" / "1").unlink()
-    (folder / "2" / "1").mkdir()
+    folder = atlas.path / "log_radius"
+    whole = (folder / "c.0.0").read_bytes()
+    names = ["c.1.01", "c.1.x", "c.1.-1", "c.1.4", "c.3.0", "c.1", "c.1.1.1", "c.1.٣", "d.1.1"]
+    for name in [*names, "c.0.0.partial", f"c.0.0.{'a' * 32}.partial", "c..1", "c.1.99999999999"]:
+        (folder / name).write_bytes(whole)
+    (folder / "c.2.1").unlink()
+    (folder / "c.2.1").mkdir()
     expected = {tile.index for tile in atlas.tiling} - {(2, 1)}
     assert atlas.done_tiles("log_radius") == expected
 
 
 def test_leftovers_of_killed_writers_are_removed_and_objects_are_not(atlas):
     before = stand_in.objects_of(atlas.path)
-    (atlas.path / "log_radius" / "c" / "1" / f"2.{'0' * 32}.partial").write_bytes(b"half")
+    leftover = atlas.path / "log_radius" / f"c.1.2.{'0' * 32}.partial"
+    leftover.write_bytes(b"half")
     assert atlas.objects.remove_partials("log_radius") == 1
+    assert stand_in.objects_of(atlas.path) == before
+
+
+def test_a_settled_object_stays_as_it_is_and_an_absent_one_is_passed_over(atlas):
+    before = stand_in.objects_of(atlas.path)
+    atlas.objects.settle("log_radius", (1, 2))
+    atlas.objects.settle("log_radius", (9, 9))
     assert stand_in.objects_of(atlas.path) == before
 
 
@@ -180,6 +187,10 @@ WRONG_ARRAYS = {
     "a measure without checksums": (
         "log_radius/zarr.json",
         lambda node: node["codecs"][0]["configuration"]["codecs"].pop(),
+    ),
+    "objects in a tree of folders": (
+        "log_radius/zarr.json",
+        lambda node: node["chunk_key_encoding"]["configuration"].__setitem__("separator", "/"),
     ),
     "no JSON at all": ("log_radius/zarr.json", None),
 }

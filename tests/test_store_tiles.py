@@ -1,6 +1,7 @@
 """How grids are cut into tiles and tiles into chunks, and what a shard of them holds."""
 
 import math
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -11,6 +12,7 @@ from hypothesis import strategies as st
 
 from sweep.errors import QuestionError
 from sweep.grid import Axis, Grid, Tiling
+from sweep.store.arrays import FLAT_NAMES
 from sweep.store.shards import ShardFormat, TileObjects, publish
 from sweep.store.tiles import (
     LARGEST_TILE,
@@ -108,6 +110,7 @@ def test_zarr_reads_from_the_objects_exactly_what_was_written(tmp_path_factory, 
         chunks=shards.chunk_shape,
         dtype="float32",
         fill_value=math.nan,
+        chunk_key_encoding=FLAT_NAMES,
         compressors=[
             zarr.codecs.BloscCodec(typesize=4, cname="lz4", shuffle="bitshuffle"),
             zarr.codecs.Crc32cCodec(),
@@ -134,7 +137,7 @@ def test_chunks_that_do_not_divide_a_tile_are_refused():
 
 
 def test_publishing_leaves_the_old_object_when_the_disk_refuses_the_new(tmp_path, monkeypatch):
-    path = tmp_path / "c" / "0"
+    path = tmp_path / "c.0"
     publish(path, [b"old"])
 
     def full(_descriptor):
@@ -142,28 +145,24 @@ def test_publishing_leaves_the_old_object_when_the_disk_refuses_the_new(tmp_path
 
     monkeypatch.setattr("os.fsync", full)
     with pytest.raises(OSError, match="No space"):
-        publish(path, [b"new"])
+        publish(path, [b"new"], synced=True)
     assert path.read_bytes() == b"old"
-    assert [p.name for p in path.parent.iterdir()] == ["0"]
+    assert [p.name for p in tmp_path.iterdir()] == ["c.0"]
 
 
 def test_a_writer_survives_that_its_unfinished_file_is_taken_for_a_leftover(tmp_path, monkeypatch):
-    path, synced = tmp_path / "0", []
-    import os
+    replace, attempts = Path.replace, []
 
-    fsync = os.fsync
+    def lose_it_once(partial, target):
+        attempts.append(partial)
+        if len(attempts) == 1:
+            partial.unlink()
+        return replace(partial, target)
 
-    def sweep_away_once(descriptor):
-        fsync(descriptor)
-        synced.append(descriptor)
-        if len(synced) == 1:
-            for partial in tmp_path.glob("*.partial"):
-                partial.unlink()
-
-    monkeypatch.setattr("os.fsync", sweep_away_once)
-    publish(path, [b"va", b"lue"])
-    assert path.read_bytes() == b"value"
-    assert len(synced) == 2
+    monkeypatch.setattr(Path, "replace", lose_it_once)
+    publish(tmp_path / "c.0", [b"va", b"lue"])
+    assert (tmp_path / "c.0").read_bytes() == b"value"
+    assert len(attempts) == 2
 
 
 def test_the_tile_shape_of_one_config_is_one_and_the_same():

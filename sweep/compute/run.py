@@ -175,8 +175,10 @@ def execute(
         while not gate.reason and (batch := list(itertools.islice(remaining, TILES_PER_GRAPH))):
             graph = {("tile", n): (partial(work, task),) for n, task in enumerate(batch)}
             callbacks = [(None, None, None, after_task, None)]
+            # Twice as many tasks as threads are handed over, so that no worker waits while this
+            # thread brings a tile to the disk or a listener draws.
             dask.threaded.get(
-                graph, list(graph), pool=pool, num_workers=workers, callbacks=callbacks
+                graph, list(graph), pool=pool, num_workers=2 * workers, callbacks=callbacks
             )
         patient = True
     finally:
@@ -259,6 +261,7 @@ def _compute_all(
     first_tile = time.perf_counter()
 
     def on_outcome(outcome: Outcome) -> None:
+        outcome = _settled(survey, spec, outcome)
         if isinstance(outcome, TileResult):
             gate.learn(outcome.seconds)
             tally.add(outcome, time.perf_counter() - first_tile)
@@ -277,6 +280,20 @@ def _compute_all(
     if tally.failures:
         raise _failure(survey, tally)
     return tally
+
+
+def _settled(survey: Survey, spec: SweepSpec, outcome: Outcome) -> Outcome:
+    """Bring a stored tile to the disk; one that does not get there is dropped and has failed."""
+    if not isinstance(outcome, TileResult):
+        return outcome
+    try:
+        for measure in outcome.measures:
+            spec.objects.settle(measure, outcome.index)
+    except OSError as cause:
+        for measure in outcome.measures:
+            spec.objects.drop(measure, outcome.index)
+        return TileFailure(survey.tiling.tile(outcome.index), cause)
+    return outcome
 
 
 def _stored(before: SweepStarted, tally: Tally, result: TileResult) -> TileStored:

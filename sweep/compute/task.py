@@ -83,6 +83,8 @@ class TileResult:
     """Its nodes."""
     seconds: float
     """Time it took, compression and storing included, s."""
+    measures: tuple[str, ...]
+    """Those that were computed."""
     bytes: int
     """Size of its objects."""
     slow_nodes: int
@@ -114,7 +116,9 @@ def compute_tile(task: TileTask, spec: SweepSpec, *, store: bool = True) -> Tile
         else:
             size += sum(map(len, spec.objects.format.encode(values)))
     seconds = time.perf_counter() - start
-    return TileResult(tile.index, tile.size, seconds, size, block.slow_nodes, block.undecided_nodes)
+    return TileResult(
+        tile.index, tile.size, seconds, task.measures, size, block.slow_nodes, block.undecided_nodes
+    )
 
 
 def _trusted(values: NDArray[np.float32], measure: str, tile: Tile) -> NDArray[np.float32]:

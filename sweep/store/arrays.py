@@ -25,12 +25,15 @@ from sweep.vocabulary import MeasureSpec
 
 if TYPE_CHECKING:
     import xarray as xr
+    from zarr.core.chunk_key_encodings import ChunkKeyEncodingParams
 
 Objects = dict[str, bytes]
 """Contents of stored objects by key, which is a path relative to the atlas."""
 
 INNER_CODECS = ("bytes", "blosc", "crc32c")
 """Names of the codecs of a measure's chunks, in order."""
+FLAT_NAMES: ChunkKeyEncodingParams = {"name": "default", "separator": "."}
+"""Objects of a measure are called ``c.0.1.2`` and lie in one folder."""
 _FILL_VALUES: dict[str, float | int | str] = {"f": math.nan, "i": 0, "T": ""}
 
 
@@ -97,6 +100,7 @@ def _create_measure(
         chunks=shards.chunk_shape,
         dtype="float32",
         fill_value=math.nan,
+        chunk_key_encoding=FLAT_NAMES,
         compressors=[
             BloscCodec(typesize=4, cname=CNAME, clevel=CLEVEL, shuffle="bitshuffle"),
             Crc32cCodec(),

@@ -149,7 +149,7 @@ class StoredAtlas(AtlasContents):
             return self
         objects = _metadata(config, self.shards, self.measures + added, self.program_version)
         for key in [*(f"{spec.name}/zarr.json" for spec in added), "zarr.json"]:
-            publish(self.path / key, [objects[key]])
+            publish(self.path / key, [objects[key]], synced=True)
         return open_stored(self.path)
 
     def update_labels(self, config: Config) -> StoredAtlas:
@@ -162,7 +162,7 @@ class StoredAtlas(AtlasContents):
         changed = [key for key, data in objects.items() if _differs(self.path / key, data)]
         # The group comes last: a crash before it leaves a difference that the next run sees.
         for key in sorted(changed, key=lambda key: key == "zarr.json"):
-            publish(self.path / key, [objects[key]])
+            publish(self.path / key, [objects[key]], synced=True)
         return open_stored(self.path) if changed else self
 
     def _measure_array(self, measure: str) -> zarr.Array[Any]:

@@ -251,7 +251,8 @@ def _read_measure(
     name: str, array: zarr.Array[Any], grid: Grid, shards: ShardFormat
 ) -> MeasureSpec:
     facts: Mapping[str, Any] = array.attrs.asdict()
-    codecs = _inner_codecs(array.metadata.to_dict())
+    stored: Mapping[str, Any] = array.metadata.to_dict()
+    codecs = _inner_codecs(stored)
     _expect(array.dtype == np.float32, f"{name} is stored as {array.dtype}, not float32")
     _expect(array.shape == grid.shape, f"{name} has shape {array.shape}, the axes {grid.shape}")
     dims = _dimensions(array)
@@ -259,6 +260,8 @@ def _read_measure(
     _expect(array.shards == shards.tile_shape, f"{name} has tiles of {array.shards}")
     _expect(array.chunks == shards.chunk_shape, f"{name} has chunks of {array.chunks}")
     _expect(codecs == INNER_CODECS, f"{name} is coded by {codecs}")
+    separator = stored["chunk_key_encoding"]["configuration"]["separator"]
+    _expect(separator == ".", f"objects of {name} are named with {separator!r}")
     version = _entry(facts, "version", int)
     return MeasureSpec(name, _text(facts, "units"), _text(facts, "long_name"), version)
 
