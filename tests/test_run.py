@@ -27,6 +27,7 @@ from sweep.compute.survey import survey_sweep
 from sweep.compute.task import TileTask, compute_tile
 from sweep.errors import DamagedAtlas, InputError, QuestionError, ResourceError, SweepError
 from sweep.store.atlas import create_atlas, open_stored
+from sweep.store.shards import TileObjects
 from sweep.vocabulary import MEASURES, MeasureSpec
 
 
@@ -236,6 +237,18 @@ def test_a_disk_that_fills_up_stops_the_run_with_a_remedy(tmp_path):
     with pytest.raises(ResourceError, match="No space left") as caught:
         run(stand_in.small(), tmp_path, compute=stand_in.Recording(faults={3: full}))
     assert "free some disk space" in caught.value.remedy
+    assert run(stand_in.small(), tmp_path).complete
+
+
+def test_a_tile_that_does_not_reach_the_disk_has_failed_and_is_not_done(tmp_path, monkeypatch):
+    def lost(_objects, _measure, _index):
+        raise OSError(errno.EIO, "Input/output error")
+
+    with monkeypatch.context() as broken, pytest.raises(SweepError, match="Input/output error"):
+        broken.setattr(TileObjects, "settle", lost)
+        run(stand_in.small(), tmp_path)
+    (atlas,) = tmp_path.iterdir()
+    assert not open_stored(atlas).done_tiles("log_radius")
     assert run(stand_in.small(), tmp_path).complete
 
 
