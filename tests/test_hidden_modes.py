@@ -104,7 +104,7 @@ def test_the_command_line_finds_no_limits_and_calls_the_point_unstable(undamped,
 
 
 def test_a_hair_beside_the_multiple_the_loop_is_stable_again(tmp_path):
-    # the other side of the coin: what is called unstable is the hidden mode and not its surroundings
+    # what is called unstable is the hidden mode and not its surroundings
     text = oscillator_text(0, periods(0.49, 0.5, 0.51, 0.99, 1, 1.01), samples(0))
     atlas = sweep_atlas(text, tmp_path)
     found = [

@@ -53,7 +53,8 @@ OSCILLATOR = 'kind = "oscillator"\nnatural_frequency = "0.1591549430918953357688
 def test_the_undamped_oscillator_has_the_derived_radii_at_every_period(sweep):
     atlas = sweep(
         f"{OSCILLATOR}\ndamping = 0",
-        f"[axes.kp]\nvalues = [-0.3, 0]\n[axes.sample_period]\nvalues = [{periods(*WITHOUT_DELAY)}]",
+        f"[axes.kp]\nvalues = [-0.3, 0]\n"
+        f"[axes.sample_period]\nvalues = [{periods(*WITHOUT_DELAY)}]",
     )
     for ratio, radius in WITHOUT_DELAY.items():
         place = list(WITHOUT_DELAY).index(ratio)
