@@ -8,7 +8,6 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,7 +20,7 @@ from sweep.measures.reference import compute_reference
 from sweep.measures.roots import solve_walks
 from sweep.vocabulary import LOG_RADIUS_FLOOR, STABILITY_THRESHOLD, LoopStructure
 
-IntArray = NDArray[np.int32]
+IntArray = NDArray[np.int64]
 
 _GAINS = frozenset({"controller.kp", "controller.ki", "controller.kd"})
 
@@ -150,16 +149,17 @@ def _compute_fast(
     results = [np.full(math.prod(shape), np.nan) for _ in range(3)]
     slow = np.ones(math.prod(shape), dtype=bool)
     walk_axis, steady = _choose_walk_axis(parameters, shape)
-    plant_rows = _as_walks(plants.row, shape, walk_axis)
-    controller_rows = _as_walks(controllers.row, shape, walk_axis)
-    nodes = _as_walks(np.arange(len(results[0]), dtype=np.int32).reshape(shape), shape, walk_axis)
-    for key, walks, steps in _batches(plant, controller, shape, walk_axis):
+    nodes = np.arange(len(slow)).reshape(shape)
+    lanes = [_walk_starts(rows, shape, walk_axis) for rows in (plants.row, controllers.row, nodes)]
+    for key, walks, positions in _batches(plant, controller, shape, walk_axis):
         roundoffs = evaluation_roundoffs(key.delay + key.plant_order + key.controller_order)
         solve_walks(
             key.delay,
             plants.coefficients(key.plant_degree, key.plant_order, roundoffs),
             controllers.coefficients(key.controller_degree, key.controller_order, roundoffs),
-            *(_pick(rows, walks, steps) for rows in (plant_rows, controller_rows, nodes)),
+            *(starts[walks] for starts, _ in lanes),
+            tuple(stride for _, stride in lanes),
+            positions,
             steady,
             *results,
             slow,
@@ -172,8 +172,7 @@ def _compute_fast(
 def _tabulate(numerator: Polynomial, denominator: Polynomial, rank: int) -> _Table:
     coefficients = [*numerator, *denominator]
     shape = np.broadcast_shapes((1,) * rank, *(c.value.shape for c in coefficients))
-    rows = np.arange(math.prod(shape), dtype=np.int32).reshape(shape)
-    return _Table(numerator, denominator, rows)
+    return _Table(numerator, denominator, np.arange(math.prod(shape)).reshape(shape))
 
 
 def _choose_walk_axis(
@@ -189,36 +188,38 @@ def _choose_walk_axis(
     return max(steady or range(len(shape)), key=lambda axis: shape[axis]), bool(steady)
 
 
-def _as_walks(array: NDArray[Any], shape: tuple[int, ...], walk_axis: int) -> NDArray[Any]:
-    whole = np.broadcast_to(array, shape)
-    return np.moveaxis(whole, walk_axis, -1).reshape(-1, shape[walk_axis])
+def _walk_starts(rows: IntArray, shape: tuple[int, ...], walk_axis: int) -> tuple[IntArray, int]:
+    """The row at position 0 of every walk, and the stride from one position to the next.
 
-
-def _pick(rows: IntArray, walks: IntArray, steps: IntArray) -> IntArray:
-    """Some walks and some steps of them; no detour when they are all."""
-    if (len(walks), len(steps)) != rows.shape:
-        rows = rows[np.ix_(walks, steps)]
-    return np.ascontiguousarray(rows)
+    ``rows`` counts through a block that broadcasts over ``shape``, so its strides are constant.
+    """
+    along = np.moveaxis(rows, walk_axis, -1)
+    stride = int(along[..., 1].flat[0] - along[..., 0].flat[0]) if along.shape[-1] > 1 else 0
+    others = shape[:walk_axis] + shape[walk_axis + 1 :]
+    return np.broadcast_to(along[..., 0], others).ravel(), stride
 
 
 def _batches(
     plant: SampledPlant, controller: RealisedController, shape: tuple[int, ...], walk_axis: int
 ) -> Iterator[tuple[_Shape, IntArray, IntArray]]:
-    """Nodes that share delay and degrees, as (key, walks, steps): the product of the two lists.
+    """Nodes that share delay and degrees, as (key, walks, positions): the product of the two lists.
 
     Where a walk passes through nodes of several kinds (an integral gain that is 0 somewhere), each
     kind is walked by itself.
     """
+    whole: IntArray = np.zeros((1,) * len(shape), dtype=np.int64) + plant.whole_delay
     parts = np.broadcast_arrays(
-        plant.whole_delay + controller.whole_delay,
+        whole + controller.whole_delay,
         plant.fractional,
         controller.order,
         controller.numerator_degree,
     )
     kinds, code = np.unique(np.stack([part.ravel() for part in parts]), axis=1, return_inverse=True)
-    codes = _as_walks(
-        code.reshape((1,) * (len(shape) - parts[0].ndim) + parts[0].shape), shape, walk_axis
-    )
+    along = np.moveaxis(code.reshape(parts[0].shape).astype(np.int16), walk_axis, -1)
+    # where no walk changes its kind, one column tells all
+    others = shape[:walk_axis] + shape[walk_axis + 1 :]
+    codes = np.broadcast_to(along, (*others, along.shape[-1])).reshape(-1, along.shape[-1])
+    every = np.arange(shape[walk_axis])
     for number, (delay, fractional, order, degree) in enumerate(kinds.T.tolist()):
         key = _Shape(
             delay=delay,
@@ -227,15 +228,15 @@ def _batches(
             controller_order=order,
             controller_degree=degree,
         )
-        present = codes == number if kinds.shape[1] > 1 else np.ones(codes.shape, dtype=bool)
-        walks = np.flatnonzero(present.any(axis=1)).astype(np.int32)
+        present = codes == number
+        walks = np.flatnonzero(present.any(axis=1))
         for pattern, members in _group_rows(present[walks]):
-            yield key, walks[members], np.flatnonzero(pattern).astype(np.int32)
+            yield key, walks[members], every if len(pattern) == 1 else np.flatnonzero(pattern)
 
 
 def _group_rows(
     present: NDArray[np.bool_],
-) -> Iterator[tuple[NDArray[np.bool_], NDArray[np.intp]]]:
+) -> Iterator[tuple[NDArray[np.bool_], IntArray]]:
     """Rows of a table of flags that are equal, as (row, indices)."""
     if (present == present[:1]).all():
         yield present[0], np.arange(len(present))

@@ -57,18 +57,18 @@ _KICKS = (5, 11, 17)
 _LOOSE = 4
 """Passes after which roots that cannot be dominant may stay loose."""
 
-RowNumbers: TypeAlias = NDArray[np.int32]
-"""Array of shape (walks, steps)."""
+Starts: TypeAlias = NDArray[np.int64]
+"""Array of shape (walks,): where each walk begins."""
 
 
 @compiled
 def _gather(
-    rows: NDArray[np.float64], which: RowNumbers, step: int, first: int, into: Rows, weights: Rows
+    rows: NDArray[np.float64], starts: Starts, offset: int, first: int, into: Rows, weights: Rows
 ) -> None:
     """Lay one coefficient row per lane into columns; lanes beyond the last walk repeat it."""
-    last = which.shape[0] - 1
+    last = len(starts) - 1
     for lane in range(WIDTH):
-        row = which[min(first + lane, last), step]
+        row = starts[min(first + lane, last)] + offset
         for power in range(rows.shape[2]):
             into[power, lane] = rows[row, 0, power]
             weights[power, lane] = rows[row, 1, power]
@@ -248,9 +248,11 @@ def solve_walks(
     delay: int,
     plants: tuple[NDArray[np.float64], NDArray[np.float64]],
     controllers: tuple[NDArray[np.float64], NDArray[np.float64]],
-    plant_rows: RowNumbers,
-    controller_rows: RowNumbers,
-    nodes: RowNumbers,
+    plant_rows: Starts,
+    controller_rows: Starts,
+    nodes: Starts,
+    strides: tuple[int, int, int],
+    positions: NDArray[np.int64],
     steady: bool,
     log_radius: NDArray[np.float64],
     mode_angle: NDArray[np.float64],
@@ -267,15 +269,19 @@ def solve_walks(
         Numerators and denominators, each of shape (rows, 2, powers): coefficients in delta, lowest
         power first, and their weights (magnitude plus an allowance for their own error).
     plant_rows, controller_rows
-        Rows to take at each node, shape (walks, steps).
+        Row that each walk takes at position 0 of the walk axis.
     nodes
-        Where the results go, shape (walks, steps).
+        Where its result at position 0 goes.
+    strides
+        By how much these three move with each position.
+    positions
+        The positions that are walked, increasing.
     steady
         Whether the open-loop polynomial stays the same along each walk.
     log_radius, mode_angle, error, slow
         Receive the logarithm of the spectral radius, the argument of the dominant root (rad, 0 to
         pi), the bound on the error of the radius itself, and whether that misses `TARGET` or leaves
-        the node undecided at the threshold; flat, indexed by ``nodes``.
+        the node undecided at the threshold; flat, one place for each node.
 
     Returns
     -------
@@ -283,35 +289,44 @@ def solve_walks(
     """
     plant_num, plant_den = plants
     loop_num, loop_den = controllers
-    walks, steps = nodes.shape
+    walks, steps = len(nodes), len(positions)
+    plant_stride, controller_stride, node_stride = strides
     top_a = plant_den.shape[2] + loop_den.shape[2] - 2
     top_b = plant_num.shape[2] + loop_num.shape[2] - 2
     degree = delay + top_a
     open_loop, weights_a = np.zeros((top_a + 1, WIDTH)), np.zeros((top_a + 1, WIDTH))
     feedback, weights_b = np.zeros((top_b + 1, WIDTH)), np.zeros((top_b + 1, WIDTH))
     coefficients = (open_loop, feedback, weights_a, weights_b)
-    left, left_weights = np.zeros((4, WIDTH)), np.zeros((4, WIDTH))
-    right, right_weights = np.zeros((4, WIDTH)), np.zeros((4, WIDTH))
-    fixed, fixed_weights = np.zeros((4, WIDTH)), np.zeros((4, WIDTH))
+    powers_a, powers_b = plant_den.shape[2], plant_num.shape[2]
+    plant_den_lanes, plant_den_weights = np.zeros((powers_a, WIDTH)), np.zeros((powers_a, WIDTH))
+    plant_num_lanes, plant_num_weights = np.zeros((powers_b, WIDTH)), np.zeros((powers_b, WIDTH))
+    powers_a, powers_b = loop_den.shape[2], loop_num.shape[2]
+    loop_den_lanes, loop_den_weights = np.zeros((powers_a, WIDTH)), np.zeros((powers_a, WIDTH))
+    loop_num_lanes, loop_num_weights = np.zeros((powers_b, WIDTH)), np.zeros((powers_b, WIDTH))
     re, im = np.zeros((degree, WIDTH)), np.zeros((degree, WIDTH))
     first_re, first_im = np.zeros((degree, WIDTH)), np.zeros((degree, WIDTH))
     past, work = np.zeros((4, degree, WIDTH)), np.zeros((5, degree, WIDTH))
     out = np.zeros((6, WIDTH))
-    powers_a, powers_b = plant_den.shape[2], plant_num.shape[2]
     passes = 0
     seeded = False
     for first in range(0, walks, WIDTH):
         known = 0
         for step in range(steps):
+            plant_offset = positions[step] * plant_stride
+            offset = positions[step] * controller_stride
             if step == 0 or not steady:
-                _gather(plant_den, plant_rows, step, first, left, left_weights)
-                _gather(loop_den, controller_rows, step, first, right, right_weights)
-                _convolve(left[:powers_a], right[: loop_den.shape[2]], open_loop)
-                _convolve(left_weights[:powers_a], right_weights[: loop_den.shape[2]], weights_a)
-                _gather(plant_num, plant_rows, step, first, fixed, fixed_weights)
-            _gather(loop_num, controller_rows, step, first, right, right_weights)
-            _convolve(fixed[:powers_b], right[: loop_num.shape[2]], feedback)
-            _convolve(fixed_weights[:powers_b], right_weights[: loop_num.shape[2]], weights_b)
+                _gather(
+                    plant_den, plant_rows, plant_offset, first, plant_den_lanes, plant_den_weights
+                )
+                _gather(
+                    plant_num, plant_rows, plant_offset, first, plant_num_lanes, plant_num_weights
+                )
+                _gather(loop_den, controller_rows, offset, first, loop_den_lanes, loop_den_weights)
+                _convolve(plant_den_lanes, loop_den_lanes, open_loop)
+                _convolve(plant_den_weights, loop_den_weights, weights_a)
+            _gather(loop_num, controller_rows, offset, first, loop_num_lanes, loop_num_weights)
+            _convolve(plant_num_lanes, loop_num_lanes, feedback)
+            _convolve(plant_num_weights, loop_num_weights, weights_b)
 
             met = False
             if step == 0 and seeded:
@@ -338,7 +353,7 @@ def solve_walks(
 
             _describe(out)
             for lane in range(min(WIDTH, walks - first)):
-                node = nodes[first + lane, step]
+                node = nodes[first + lane] + positions[step] * node_stride
                 log_radius[node] = out[0, lane]
                 mode_angle[node] = out[1, lane]
                 error[node] = out[4, lane]
