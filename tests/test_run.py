@@ -244,9 +244,10 @@ def test_a_tile_that_does_not_reach_the_disk_has_failed_and_is_not_done(tmp_path
     def lost(_objects, _measure, _index):
         raise OSError(errno.EIO, "Input/output error")
 
-    with monkeypatch.context() as broken, pytest.raises(SweepError, match="Input/output error"):
-        broken.setattr(TileObjects, "settle", lost)
+    monkeypatch.setattr(TileObjects, "settle", lost)
+    with pytest.raises(SweepError, match="Input/output error"):
         run(stand_in.small(), tmp_path)
+    monkeypatch.undo()
     (atlas,) = tmp_path.iterdir()
     assert not open_stored(atlas).done_tiles("log_radius")
     assert run(stand_in.small(), tmp_path).complete
