@@ -1,4 +1,4 @@
-"""The demo configs' atlases, made small, are read by plain xarray in a process without the package."""
+"""Small atlases of the demo configs, read by plain xarray in a process without the package."""
 
 from __future__ import annotations
 
