@@ -207,15 +207,16 @@ def _batches(
     Where a walk passes through nodes of several kinds (an integral gain that is 0 somewhere), each
     kind is walked by itself.
     """
-    whole: IntArray = np.zeros((1,) * len(shape), dtype=np.int64) + plant.whole_delay
-    parts = np.broadcast_arrays(
-        whole + controller.whole_delay,
+    marks = (
+        plant.whole_delay + controller.whole_delay,
         plant.fractional,
         controller.order,
         controller.numerator_degree,
     )
+    common = np.broadcast_shapes((1,) * len(shape), *(mark.shape for mark in marks))
+    parts = [np.broadcast_to(mark, common).astype(np.int64) for mark in marks]
     kinds, code = np.unique(np.stack([part.ravel() for part in parts]), axis=1, return_inverse=True)
-    along = np.moveaxis(code.reshape(parts[0].shape).astype(np.int16), walk_axis, -1)
+    along = np.moveaxis(code.reshape(common).astype(np.int16), walk_axis, -1)
     # where no walk changes its kind, one column tells all
     others = shape[:walk_axis] + shape[walk_axis + 1 :]
     codes = np.broadcast_to(along, (*others, along.shape[-1])).reshape(-1, along.shape[-1])
