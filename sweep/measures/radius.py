@@ -219,7 +219,8 @@ def _batches(
     along = np.moveaxis(code.reshape(common).astype(np.int16), walk_axis, -1)
     # where no walk changes its kind, one column tells all
     others = shape[:walk_axis] + shape[walk_axis + 1 :]
-    codes = np.broadcast_to(along, (*others, along.shape[-1])).reshape(-1, along.shape[-1])
+    columns = common[walk_axis]
+    codes = np.broadcast_to(along, (*others, columns)).reshape(-1, columns)
     every = np.arange(shape[walk_axis])
     for number, (delay, fractional, order, degree) in enumerate(kinds.T.tolist()):
         key = _Shape(
