@@ -63,8 +63,8 @@ class _Table:
     """Coefficients in delta, lowest power first."""
     denominator: Polynomial
     """Coefficients in delta, lowest power first."""
-    row: IntArray
-    """Row of each node, broadcasting over the block."""
+    shape: tuple[int, ...]
+    """Shape that the rows are counted through; it broadcasts over the block."""
 
     def coefficients(
         self, degree: int, order: int, roundoffs: float
@@ -76,7 +76,7 @@ class _Table:
         """
         tables = []
         for polynomial in (self.numerator[: degree + 1], self.denominator[: order + 1]):
-            table = np.empty((*self.row.shape, 2, len(polynomial)))
+            table = np.empty((*self.shape, 2, len(polynomial)))
             for power, coefficient in enumerate(polynomial):
                 allowance = coefficient.error / (roundoffs * UNIT_ROUNDOFF)
                 table[..., 0, power] = coefficient.value
@@ -112,7 +112,8 @@ def compute_radius(
         Nodes along each axis.
     """
     block = _compute_fast(structure, parameters, shape)
-    for index in zip(*np.nonzero(block.slow), strict=True):
+    for flat in np.flatnonzero(block.slow):
+        index = np.unravel_index(flat, shape)
         values = {path: _at(array, index) for path, array in parameters.items()}
         found = compute_reference(structure, values)
         if found.error <= block.error[index] or not math.isfinite(block.error[index]):
@@ -146,11 +147,13 @@ def _compute_fast(
     controller = realise_controller(structure, parameters)
     plants = _tabulate(plant.numerator, plant.denominator, rank)
     controllers = _tabulate(controller.numerator, controller.denominator, rank)
-    results = [np.full(math.prod(shape), np.nan) for _ in range(3)]
-    slow = np.ones(math.prod(shape), dtype=bool)
+    # every node lies in exactly one batch, so the kernel fills all of these
+    log_radius, mode_angle, error = (np.empty(shape) for _ in range(3))
+    slow = np.empty(shape, dtype=bool)
     walk_axis, steady = _choose_walk_axis(parameters, shape)
-    nodes = np.arange(len(slow)).reshape(shape)
-    lanes = [_walk_starts(rows, shape, walk_axis) for rows in (plants.row, controllers.row, nodes)]
+    lanes = [
+        _walk_starts(rows, shape, walk_axis) for rows in (plants.shape, controllers.shape, shape)
+    ]
     for key, walks, positions in _batches(plant, controller, shape, walk_axis):
         roundoffs = evaluation_roundoffs(key.delay + key.plant_order + key.controller_order)
         solve_walks(
@@ -161,18 +164,15 @@ def _compute_fast(
             tuple(stride for _, stride in lanes),
             positions,
             steady,
-            *results,
-            slow,
+            *(array.reshape(-1) for array in (log_radius, mode_angle, error, slow)),
         )
-    undecided = np.zeros(shape, dtype=bool)
-    log_radius, mode_angle, error = (result.reshape(shape) for result in results)
-    return RadiusBlock(log_radius, mode_angle, error, slow.reshape(shape), undecided)
+    return RadiusBlock(log_radius, mode_angle, error, slow, np.zeros(shape, dtype=bool))
 
 
 def _tabulate(numerator: Polynomial, denominator: Polynomial, rank: int) -> _Table:
     coefficients = [*numerator, *denominator]
     shape = np.broadcast_shapes((1,) * rank, *(c.value.shape for c in coefficients))
-    return _Table(numerator, denominator, np.arange(math.prod(shape)).reshape(shape))
+    return _Table(numerator, denominator, shape)
 
 
 def _choose_walk_axis(
@@ -188,15 +188,19 @@ def _choose_walk_axis(
     return max(steady or range(len(shape)), key=lambda axis: shape[axis]), bool(steady)
 
 
-def _walk_starts(rows: IntArray, shape: tuple[int, ...], walk_axis: int) -> tuple[IntArray, int]:
+def _walk_starts(
+    rows: tuple[int, ...], shape: tuple[int, ...], walk_axis: int
+) -> tuple[IntArray, int]:
     """The row at position 0 of every walk, and the stride from one position to the next.
 
-    ``rows`` counts through a block that broadcasts over ``shape``, so its strides are constant.
+    Rows count through the shape ``rows``, which broadcasts over ``shape``.
     """
-    along = np.moveaxis(rows, walk_axis, -1)
-    stride = int(along[..., 1].flat[0] - along[..., 0].flat[0]) if along.shape[-1] > 1 else 0
-    others = shape[:walk_axis] + shape[walk_axis + 1 :]
-    return np.broadcast_to(along[..., 0], others).ravel(), stride
+    strides = [math.prod(rows[axis + 1 :]) if n > 1 else 0 for axis, n in enumerate(rows)]
+    starts = np.zeros(1, dtype=np.int64)
+    for axis, count in enumerate(shape):
+        if axis != walk_axis:
+            starts = np.add.outer(starts, np.arange(count) * strides[axis]).ravel()
+    return starts, strides[walk_axis]
 
 
 def _batches(

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from typing import TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,12 +13,15 @@ from sweep.loop.bounded import FloatArray
 from sweep.measures.radius import RadiusBlock, compute_radius
 from sweep.vocabulary import LOG_RADIUS_FLOOR, LoopStructure
 
+Stored: TypeAlias = NDArray[np.float32]
+"""Values of one measure as they are stored."""
+
 
 @dataclass(frozen=True, eq=False)
 class BlockResult:
     """The stored values of a block of nodes."""
 
-    values: dict[str, NDArray[np.float32]]
+    values: dict[str, Stored]
     """By measure, each of the block's shape; never NaN."""
     slow_nodes: int
     """Nodes that went to the slow path."""
@@ -25,17 +29,20 @@ class BlockResult:
     """Nodes whose stability neither path could decide; they are stored as not stable."""
 
 
-def _stored_log_radius(block: RadiusBlock) -> FloatArray:
-    floored = np.maximum(block.log_radius, LOG_RADIUS_FLOOR)
+def _stored_log_radius(block: RadiusBlock) -> Stored:
+    stored = np.maximum(block.log_radius, LOG_RADIUS_FLOOR, dtype=np.float32, casting="same_kind")
     # never stable by error, and never NaN: that would mean not computed
-    return np.where(block.undecided, 0.0, floored)
+    stored[block.undecided] = 0.0
+    return stored
 
 
-def _stored_mode_angle(block: RadiusBlock) -> FloatArray:
-    return np.nan_to_num(block.mode_angle, nan=0.0)
+def _stored_mode_angle(block: RadiusBlock) -> Stored:
+    stored = block.mode_angle.astype(np.float32)
+    stored[np.isnan(stored)] = 0.0
+    return stored
 
 
-FROM_RADIUS: dict[str, Callable[[RadiusBlock], FloatArray]] = {
+FROM_RADIUS: dict[str, Callable[[RadiusBlock], Stored]] = {
     "log_radius": _stored_log_radius,
     "mode_angle": _stored_mode_angle,
 }
@@ -69,7 +76,7 @@ def compute_block(
     functions = {name: FROM_RADIUS[name] for name in measures}
     block = compute_radius(structure, parameters, shape)
     return BlockResult(
-        values={name: function(block).astype(np.float32) for name, function in functions.items()},
+        values={name: function(block) for name, function in functions.items()},
         slow_nodes=int(block.slow.sum()),
         undecided_nodes=int(block.undecided.sum()),
     )
