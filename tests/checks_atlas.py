@@ -25,7 +25,6 @@ Polynomial = Callable[[float], Sequence[float]]
 """Coordinate on the asked axis -> characteristic polynomial in z, highest power first."""
 
 SHARE_OF_SPAN = 1e-4
-ROOM_FOR_ROOTS = 0.3
 STEPS_IN_A_CELL = 48
 
 
@@ -60,11 +59,9 @@ def is_smooth(polynomial: Polynomial, low: float, high: float) -> bool:
     """Whether one simple root is the dominant one at every place of a cell.
 
     From place to place it moves by less than a third of its distance to the nearest other root,
-    its own conjugate included, and it is real throughout or complex throughout; also a little
-    beyond the cell, since where two roots meet the slope is infinite.
+    its own conjugate included, and it is real throughout or complex throughout. What happens beyond
+    the cell, roots that meet just outside it included, is no excuse.
     """
-    room = ROOM_FOR_ROOTS * (high - low)
-    low, high = low - room, high + room
     path = [roots_of(polynomial(x)) for x in np.linspace(low, high, STEPS_IN_A_CELL + 1)]
     for before, after in itertools.pairwise(path):
         if (before[0].imag == 0) != (after[0].imag == 0):

@@ -7,6 +7,7 @@ import math
 
 import numpy as np
 import pytest
+from checks_atlas import samples, sweep_atlas
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from memory_atlas import atlas, axis, rows
@@ -104,22 +105,27 @@ def test_where_two_branches_meet_in_the_cell_the_larger_of_both_sides_counts():
 @given(
     st.lists(st.floats(-40, 1e6, allow_nan=False), min_size=2, max_size=8),
     st.lists(st.floats(1e-6, 5), min_size=8, max_size=8),
-    st.lists(st.floats(0, math.pi), min_size=8, max_size=8),
+    st.lists(
+        st.floats(0, math.pi) | st.sampled_from([0.0, math.pi, math.nan]), min_size=8, max_size=8
+    ),
+    st.lists(st.integers(0, 1), min_size=8, max_size=8),
     st.integers(0, 6),
 )
-def test_whatever_the_neighbours_are_the_crossing_stays_in_its_cell(f, steps, angles, cell):
+def test_whatever_the_neighbours_are_the_crossing_stays_in_its_cell(f, steps, angles, which, cell):
     f = np.array(f)
+    angle, tolerance = np.array(angles)[: len(f)], np.array(which)[: len(f)]
     cell %= len(f) - 1
     f[cell] = -abs(f[cell]) - 1e-3
     f[cell + 1] = abs(f[cell + 1])
     x = np.cumsum(steps)[: len(f)]
     for values in (f, np.where(np.arange(len(f)) > cell + 1, np.inf, f)):
-        at = find_crossing(x, values, np.array(angles)[: len(f)], cell, EDGE)
+        at = find_crossing(x, values, angle, tolerance, cell, EDGE)
         assert x[cell] <= at <= x[cell + 1]
 
 
 def test_an_infinite_neighbour_puts_the_limit_on_the_stable_node():
-    at = find_crossing(np.array([1.0, 2.0]), np.array([-1.0, np.inf]), np.zeros(2), 0, EDGE)
+    f, same = np.array([-1.0, np.inf]), np.zeros(2, dtype=np.int64)
+    at = find_crossing(np.array([1.0, 2.0]), f, np.zeros(2), same, 0, EDGE)
     assert at == 1.0
 
 
@@ -132,6 +138,136 @@ def crossing_at(places):
     """Lines that cross from stable to not stable at each of ``places``, on 0..10."""
     x = np.arange(11.0)
     return x, np.subtract.outer(-np.asarray(places, float), -x)
+
+
+# --- real eigenvalues --------------------------------------------------------------------------
+
+
+def meeting_roots(meet, end, middle, sign):
+    """A pair that parts at ``meet`` into two real roots, the larger of which leaves at ``end``."""
+    rate = (1 - middle) ** 2 / (end - meet)
+
+    def values(x):
+        apart = rate * (x - meet)
+        real = np.log(middle + np.sqrt(np.maximum(apart, 0)))
+        return np.where(apart > 0, real, np.log(middle**2 - np.minimum(apart, 0)) / 2)
+
+    def angles(x):
+        angle = np.arctan2(np.sqrt(np.maximum(rate * (meet - x), 0)), middle)
+        return angle if sign > 0 else math.pi - angle
+
+    return values, angles
+
+
+@pytest.mark.parametrize("sign", [1, -1])
+@pytest.mark.parametrize("share", [0.1, 0.4, 0.9])
+@pytest.mark.parametrize("away", [0.003, 0.05, 0.3, 1.2])
+def test_real_roots_that_meet_just_before_the_crossing_cell_leave_the_crossing_exact(
+    away, share, sign
+):
+    meet, end = X[100] - away / 200, X[100] + share / 200
+    high = single_limit(*meeting_roots(meet, end, 0.97, sign)).high
+    assert high.between == (X[100], X[101])
+    assert abs(high.value - end) < 1e-6
+
+
+def test_a_double_integrator_whose_real_roots_meet_beside_the_boundary_keeps_its_limit(tmp_path):
+    # own derivation, Jury's conditions of degree 3: kp > 0
+    text = """
+    title = "Roots that meet"
+    sample_period = "0.5 s"
+    [plant]
+    kind = "double_integrator"
+    [controller]
+    kind = "pd"
+    [axes.kd]
+    values = [0.167, 0.191]
+    [axes.kp]
+    start = -0.513
+    stop = 3.487
+    count = 201
+    """
+    for row in sweep_atlas(text, tmp_path).limits("kp").rows:
+        assert abs(row.intervals[0].low.value) < 4e-5
+
+
+@pytest.mark.parametrize(
+    "nodes",
+    [
+        [-3, -1, 4, 8.5, 12],
+        [-3, -1, 3.9, 8.5, 12],
+        [-3, -1, 4.3, 8.5, 12],
+        [-1, 4, 12],
+    ],
+)
+def test_an_eigenvalue_that_passes_zero_on_a_coarse_axis_leaves_both_limits_exact(tmp_path, nodes):
+    # the one eigenvalue is 1 - K T: Astrom and Wittenmark 1997, chapter 2 (from memory)
+    text = f"""
+    title = "Beside a deadbeat gain"
+    sample_period = "0.25 s"
+    [plant]
+    kind = "integrator"
+    [controller]
+    kind = "p"
+    [axes.kp]
+    values = {nodes}
+    """
+    (row,) = sweep_atlas(text, tmp_path).limits("kp").rows
+    (interval,) = row.intervals
+    assert interval.low.value == pytest.approx(0, abs=1e-5)
+    assert interval.high.value == pytest.approx(8, abs=1e-5)
+
+
+@pytest.mark.parametrize("angle", [0.0, 0.05, 1.0, math.pi])
+def test_a_node_at_the_floor_does_not_drag_the_limit_beyond_the_boundary(angle):
+    x = np.array([-4.0, -3.0, -2.0, -1.0, 1.5, 2.5, 3.5, 4.5])
+    f = np.log(np.abs(x) / 2)
+    f[3] = -36.0
+    asked = atlas([axis("along", x)], f, np.full(8, angle))
+    (interval,) = asked.limits("along").rows[0].intervals
+    assert interval.high.value == pytest.approx(2.0, abs=0.05)
+
+
+# --- branches of different tolerance nodes -----------------------------------------------------
+
+
+def test_where_the_worst_tolerance_changes_at_the_boundary_each_side_is_continued(tmp_path):
+    # Clark (1976), J. Math. Biol. 3, 381-391 (from memory): -1 is the end for every delay
+    text = f"""
+    title = "Two delays"
+    sample_period = "1 s"
+    [plant]
+    kind = "lag"
+    time_constant = "1 s"
+    [controller]
+    kind = "p"
+    [axes.kp]
+    start = -1.513
+    stop = 1.487
+    count = 201
+    [axes.update]
+    sets = "delay.update"
+    values = [{samples(0, 20)}]
+    """
+    (row,) = sweep_atlas(text, tmp_path).limits("kp").rows
+    low = row.intervals[0].low
+    assert low.between == (pytest.approx(-0.988), pytest.approx(-1.003))
+    assert low.worst == {"update": 0.0}
+    assert abs(low.value + 1) < 3e-4
+
+
+@pytest.mark.parametrize("share", [0.1, 0.5, 0.9])
+@pytest.mark.parametrize("away", [-1.6, -1.1, -0.7, -0.1, 0.05])
+def test_a_line_takes_its_nodes_from_the_tolerance_that_crosses(away, share):
+    end, kink = X[100] + share / 200, X[100] + away / 200
+    steep = np.expm1(5.0 * (X - end))
+    flat = np.expm1(5.0 * (kink - end)) + 0.05 * (X - kink)
+    asked = atlas(
+        [axis("along", X), axis("tol", [1, 2], role="tolerance")], np.stack([steep, flat], axis=1)
+    )
+    high = asked.limits("along").rows[0].intervals[0].high
+    assert high.between == (X[100], X[101])
+    assert abs(high.value - end) < 1e-5
 
 
 # --- how stability is lost ---------------------------------------------------------------------

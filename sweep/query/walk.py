@@ -133,8 +133,8 @@ class Walk:
         first, last = self._window(cell)
         part = slice(first, last + 1)
         angle = np.array([angles[self._grid_node(index)] for index in range(first, last + 1)])
-        x, f = self.axis.coordinates[part], self.worst[part]
-        return find_crossing(x, f, angle, cell - first, STABILITY_THRESHOLD)
+        x, f, which = self.axis.coordinates[part], self.worst[part], self.which[part]
+        return find_crossing(x, f, angle, which, cell - first, STABILITY_THRESHOLD)
 
     def _window(self, cell: int) -> tuple[int, int]:
         """Nodes around a cell that one formula may join, from the first to the last."""
