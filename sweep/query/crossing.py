@@ -58,7 +58,7 @@ REAL_ANGLE = 1e-6
 and an oscillation of over six million samples a cycle is drift to any engineer."""
 
 NEAR_ZERO = -1.0
-"""Below this log_radius a real eigenvalue may pass 0 before the next node; the logarithm is steep."""
+"""Below this log_radius a real eigenvalue may pass 0 on its way to the next node."""
 
 HIGHEST = 50.0
 """A larger log_radius counts as this one, so that its exponential stays far from overflow."""
