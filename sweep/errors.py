@@ -71,8 +71,10 @@ class Problem:
 
     def __str__(self) -> str:
         place = self.path or "the file"
-        text = f"{place}: found {self.found}; expected {self.expected}" if self.found else (
-            f"{place}: {self.expected}"
+        text = (
+            f"{place}: found {self.found}; expected {self.expected}"
+            if self.found
+            else (f"{place}: {self.expected}")
         )
         return f"{text}\n      -> {self.remedy}" if self.remedy else text
 
