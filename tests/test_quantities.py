@@ -14,7 +14,6 @@ from sweep.quantities import (
     format_quantity,
     parse_quantity,
     reciprocal,
-    split_quantity,
     to_float,
 )
 
