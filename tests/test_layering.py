@@ -24,7 +24,7 @@ STANDS_ON = {
     "store": "errors quantities vocabulary grid config identity",
     "compute": "errors quantities vocabulary grid config identity loop measures store",
     "query": "errors quantities vocabulary grid config identity store",
-    "views": "errors quantities vocabulary grid config identity store query loop.response",
+    "views": "errors quantities vocabulary grid config identity store query",
     "cli": "errors quantities vocabulary grid config identity loop measures store compute query "
     "views",
     "__main__": "errors identity cli",
