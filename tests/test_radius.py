@@ -105,6 +105,31 @@ def test_both_paths_agree_within_their_bounds_on_random_loops():
                 assert abs(fast.mode_angle[0] - slow.mode_angle) < 1e-5
 
 
+@pytest.mark.parametrize("delay", [0.0, 2.0])
+def test_a_tiny_radius_keeps_its_bound_too(delay):
+    # without delay close to the deadbeat gain; with delay a lag that is almost at rest, K -> 0
+    structure = LoopStructure("lag", "p", delay_parts=(("update", "samples"),))
+    gains = (
+        -(10.0 ** -np.arange(1.0, 12.0))
+        if delay
+        else 1 / np.expm1(0.7) * (1 + 10.0 ** -np.arange(1.0, 12.0))
+    )
+    values = {
+        "sample_period": 0.7 if not delay else 60.0,
+        "plant.time_constant": 1.0,
+        "plant.gain": 1.0,
+        "controller.kp": 0.0,
+        "delay.update": delay,
+    }
+    block = as_block(values)
+    block["controller.kp"] = gains
+    found = compute_radius(structure, block, (len(gains),))
+    for node, gain in enumerate(gains):
+        roots = eigenvalues(structure, values | {"controller.kp": float(gain)})
+        error = float(abs(mp.mpf(float(found.log_radius[node])) - mp.log(abs(roots[0]))))
+        assert error <= found.bound[node]
+
+
 def test_a_deadbeat_loop_is_stable_and_stored_at_the_floor():
     structure = LoopStructure("integrator", "p")
     values = {"sample_period": 0.25, "plant.gain": 1.0, "controller.kp": 4.0}

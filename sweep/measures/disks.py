@@ -191,11 +191,14 @@ def enclose(
     others = max(degree - 1.0, 1.0)
     standing = spread(0.0)
     largest = _evaluation_noise(degree, delay, weights_a, weights_b, re, im, work)
-    best = spread(-1.0)
+    best, z_re, z_im = spread(-2.0), spread(0.0), spread(0.0)
     for i in range(degree):
         x, y = load(re, i) - load(fix_re, i), load(im, i) - load(fix_im, i)
-        best = maximum(best, 2.0 * x + (x * x + y * y))
-    modulus = square_root(maximum(1.0 + best, spread(0.0)))
+        beyond = 2.0 * x + (x * x + y * y)
+        z_re = where_greater(beyond, best, 1.0 + x, z_re)
+        z_im = where_greater(beyond, best, y, z_im)
+        best = maximum(best, beyond)
+    modulus = square_root(z_re * z_re + z_im * z_im)
     # sqrt is concave: |z_i| - |z| <= (|z_i|^2 - |z|^2) / (2 |z|)
     tangent = 0.5 / maximum(modulus, spread(1e-150))
     beyond_modulus, radius, loose = spread(0.0), spread(0.0), spread(0.0)
@@ -231,7 +234,9 @@ def enclose(
     store(out, 3, modulus)
     if not all_at_most(spread(0.0), standing):
         radius = _component_radius(degree, standing, radius, re, im, work, best)
-    bound = maximum(beyond_modulus, radius) + 4.0 * UNIT_ROUNDOFF * modulus + poison
+    # the roundings of modulus and of |z|^2 - 1, by which magnitudes were compared
+    rounding = 4.0 * UNIT_ROUNDOFF * (modulus + tangent)
+    bound = maximum(beyond_modulus, radius) + rounding + poison
     store(out, 4, bound)
     # what the iteration leaves must also vanish beside the logarithm itself, however small
     digits = RELATIVE_TARGET * maximum(best, 0.0 - best)
