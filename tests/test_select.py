@@ -153,7 +153,7 @@ def test_a_point_says_what_follows_from_its_measures():
     assert answer.stable is True
     log_radius = float(np.float32(-0.4))
     assert answer.derived["decay_time"] == pytest.approx(0.001 / -log_radius)
-    assert answer.derived["frequency"] == pytest.approx(0.5 / (2 * np.pi * 0.001))
+    assert answer.derived["hz"] == pytest.approx(0.5 / (2 * np.pi * 0.001))
     assert answer.derived["dominant_damping"] == pytest.approx(0.4 / np.hypot(0.4, 0.5))
 
 

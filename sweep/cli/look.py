@@ -68,9 +68,9 @@ def compute_now(structure: LoopStructure, answer: PointAnswer) -> dict[str, Any]
 
     Returns
     -------
-    ``modes``, each with ``eigenvalue`` [real, imaginary], ``magnitude``, ``frequency_hz``,
-    ``damping``, ``decay_time_s``; and ``coefficients`` of the polynomials in z, highest power
-    first.
+    ``modes``, each with ``eigenvalue`` [real, imaginary] and ``magnitude``, its frequency ``hz``,
+    its ``damping`` ratio and its ``decay_time`` in s ("inf" when it is not stable); and
+    ``coefficients`` of the polynomials in z, highest power first.
     """
     from sweep.loop.closed_loop import modes, realise
     from sweep.query.answers import plain
@@ -83,9 +83,9 @@ def compute_now(structure: LoopStructure, answer: PointAnswer) -> dict[str, Any]
                 {
                     "eigenvalue": [mode.eigenvalue.real, mode.eigenvalue.imag],
                     "magnitude": mode.magnitude,
-                    "frequency_hz": mode.frequency_hz,
+                    "hz": mode.frequency_hz,
                     "damping": mode.damping,
-                    "decay_time_s": mode.decay_time_s,
+                    "decay_time": mode.decay_time_s,
                 }
                 for mode in modes(structure, values)
             ],

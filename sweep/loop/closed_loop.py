@@ -13,7 +13,7 @@ from sweep.loop.bounded import FloatArray
 from sweep.loop.controllers import realise_controller
 from sweep.loop.sampling import Polynomial, sample_plant
 from sweep.loop.state_space import closed_loop_change
-from sweep.vocabulary import LoopStructure
+from sweep.vocabulary import STABILITY_THRESHOLD, LoopStructure
 
 
 @dataclass(frozen=True, eq=False)
@@ -45,7 +45,7 @@ class Mode:
     damping: float
     """Damping ratio of the continuous mode with the same samples; 1 for an eigenvalue at 0."""
     decay_time_s: float
-    """Time constant of its decay, s; infinite or negative when it does not decay."""
+    """Time constant of its decay, s; +inf when it is not stable, 0 for an eigenvalue at 0."""
 
 
 def realise(structure: LoopStructure, values: Mapping[str, float]) -> Realised:
@@ -103,11 +103,11 @@ def _describe(eigenvalue: complex, period_s: float) -> Mode:
     if magnitude == 0:
         return Mode(eigenvalue, 0.0, 0.0, 1.0, 0.0)
     logarithm = cmath.log(eigenvalue)
-    decay_time_s = -period_s / logarithm.real if logarithm.real else math.inf
+    stable = logarithm.real < STABILITY_THRESHOLD
     return Mode(
         eigenvalue=eigenvalue,
         magnitude=magnitude,
         frequency_hz=abs(logarithm.imag) / (2 * math.pi * period_s),
         damping=-logarithm.real / abs(logarithm) if logarithm else 0.0,
-        decay_time_s=decay_time_s,
+        decay_time_s=-period_s / logarithm.real if stable else math.inf,
     )

@@ -202,13 +202,13 @@ class PointAnswer:
     measures: Mapping[str, float]
     """Stored values; NaN where unknown."""
     derived: Mapping[str, float]
-    """What follows from them: radius, decay_time (s), dominant_damping, frequency (Hz)."""
+    """What follows from them: radius, decay_time (s), dominant_damping, hz."""
     stable: bool | None
     """``None`` when unknown."""
     nominal: tuple[str, ...]
     """Axes that the question did not name, taken at their nominal node."""
-    moved: Mapping[str, Value]
-    """Axes where the nearest node was taken, with what had been asked."""
+    moved: Mapping[str, float]
+    """Axes where the nearest node was taken, with what was asked in the unit of the axis."""
     cautions: tuple[str, ...]
     """Codes of the cautions that apply."""
 
@@ -219,7 +219,11 @@ class PointAnswer:
         return {path: float(v.reshape(-1)[0]) for path, v in self.grid.parameters(block).items()}
 
     def to_json(self) -> dict[str, Any]:
-        """The document that programs rely on."""
+        """The document that programs rely on.
+
+        Values are in SI and named without units, but for ``hz``; coordinates, in ``at`` and
+        ``moved``, are in the unit of their axis.
+        """
         names = ("atlas_id", "at", "measures", "derived", "stable", "nominal", "moved", "cautions")
         document: dict[str, Any] = plain({name: getattr(self, name) for name in names})
         document["nodes"] = 1
@@ -230,7 +234,9 @@ class PointAnswer:
         place = ", ".join(
             f"{name}={show_value(self.grid.axis(name), value)}" for name, value in self.at.items()
         )
-        numbers = ", ".join(f"{name} {value:.6g}" for name, value in self.measures.items())
+        numbers = ", ".join(
+            f"{name} {format_quantity(value, '1')}" for name, value in self.measures.items()
+        )
         verdict = {True: "stable", False: "not stable", None: "unknown"}[self.stable]
         return f"Point {place}, atlas {self.atlas_id[:8]}\n  {verdict}: {numbers}"
 
@@ -263,14 +269,18 @@ class PlaneAnswer:
     """The axis upwards."""
     log_radius: NDArray[np.float32] = field(repr=False)
     """Shape (nodes of y, nodes of x); NaN where unknown."""
+    boundary: NDArray[np.float64] = field(repr=False)
+    """Shape (pieces, 2, 2): the two ends of each straight piece of the stability boundary as (x, y)
+    in stored units, each within one cell; it meets the limits along both axes. Empty when an edge
+    is a row axis, between whose nodes there is nothing."""
     period_s: NDArray[np.float64] = field(repr=False)
     """Sample period, s; broadcasts to the shape of ``log_radius``."""
     at: Mapping[str, Value]
     """The node at which every other axis is held."""
     nominal: tuple[str, ...]
     """Those of them that the question did not name, held at their nominal node."""
-    moved: Mapping[str, Value]
-    """Axes where the nearest node was taken, with what had been asked."""
+    moved: Mapping[str, float]
+    """Axes where the nearest node was taken, with what was asked in the unit of the axis."""
     marks: tuple[Mark, ...]
     """Named designs that lie in the plane."""
     threshold: float

@@ -7,13 +7,15 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, TypeVar
 
 import numpy as np
+from numpy.typing import NDArray
 
 from sweep.errors import QuestionError
 from sweep.grid import Axis, Grid
 from sweep.query.answers import LimitsAnswer, Mark, PlaneAnswer, PointAnswer
+from sweep.query.boundary import find_boundary
 from sweep.query.cautions import AT_A_NODE, BETWEEN_NODES
 from sweep.query.facts import AtlasFacts, read_facts
 from sweep.query.limits import MOST_ROWS, find_limits, resolve_limits
@@ -24,6 +26,7 @@ from sweep.query.select import (
     find_enclosing,
     find_node,
     one_value,
+    read_value,
     resolve_names,
     value_at,
 )
@@ -33,6 +36,9 @@ if TYPE_CHECKING:
     import xarray
 
     from sweep.store.atlas import StoredAtlas
+
+
+Number = TypeVar("Number", np.float32, np.float64)
 
 
 def open_atlas(where: str | Path, shelf: str | Path = "results") -> Atlas:
@@ -237,16 +243,20 @@ class Atlas:
             for axis, node in zip(self.grid.axes, held.node, strict=True)
         )
         edges = (places[up.name], places[right.name])
-        values = np.moveaxis(self.stored.read("log_radius", block), edges, (0, 1))
-        period_s = np.moveaxis(self.grid.parameters(block)["sample_period"], edges, (0, 1))
+        log_radius = _as_plane(self.stored.read("log_radius", block), edges)
+        boundary = np.empty((0, 2, 2))
+        if not (right.is_row_axis or up.is_row_axis):
+            mode_angle = _as_plane(self.stored.read("mode_angle", block), edges)
+            boundary = find_boundary(self.grid, held.node, edges[::-1], log_radius, mode_angle)
         return PlaneAnswer(
             atlas_id=self.atlas_id,
             title=self.title,
             grid=self.grid,
             x=right.name,
             y=up.name,
-            log_radius=values.reshape(values.shape[:2]),
-            period_s=period_s.reshape(period_s.shape[:2]),
+            log_radius=log_radius,
+            boundary=boundary,
+            period_s=_as_plane(self.grid.parameters(block)["sample_period"], edges),
             at=held.at,
             nominal=held.nominal,
             moved=held.moved,
@@ -283,7 +293,7 @@ class Atlas:
     ) -> _Held:
         names = resolve_names(self.grid, asked)
         node = [axis.nominal for axis in self.grid.axes]
-        moved: dict[str, Value] = {}
+        moved: dict[str, float] = {}
         for position, axis in enumerate(self.grid.axes):
             if axis.name not in names:
                 continue
@@ -291,7 +301,7 @@ class Atlas:
             single = one_value(axis.name, value)
             node[position] = find_node(axis, single, name=name, nearest=nearest)
             if nearest and len(find_enclosing(axis, single, name=name).nodes) > 1:
-                moved[axis.name] = single
+                moved[axis.name] = read_value(axis, single, name)
         held = [axis for axis in self.grid.axes if axis.name not in free]
         places = {axis.name: i for i, axis in enumerate(self.grid.axes)}
         return _Held(
@@ -315,6 +325,12 @@ class Atlas:
         return marks
 
 
+def _as_plane(block: NDArray[Number], edges: tuple[int, int]) -> NDArray[Number]:
+    """A block with two axes that count as (upwards, to the right)."""
+    moved = np.moveaxis(block, edges, (0, 1))
+    return moved.reshape(moved.shape[:2])
+
+
 @dataclass(frozen=True)
 class _Held:
     """Axes held at a node."""
@@ -322,7 +338,7 @@ class _Held:
     node: tuple[int, ...]
     at: Mapping[str, Value]
     nominal: tuple[str, ...]
-    moved: Mapping[str, Value]
+    moved: Mapping[str, float]
 
 
 def derive(log_radius: float, mode_angle_rad: float, period_s: float) -> dict[str, float]:
@@ -340,12 +356,13 @@ def derive(log_radius: float, mode_angle_rad: float, period_s: float) -> dict[st
     Returns
     -------
     ``radius``; ``decay_time`` in s, +inf when not stable; ``dominant_damping``, the damping ratio
-    of the dominant eigenvalue; ``frequency`` of the dominant mode in Hz.
+    of the dominant eigenvalue; ``hz``, the frequency of the dominant mode. All are NaN when the
+    measures are.
 
     Examples
     --------
     >>> found = derive(-0.01, 0.1, 0.002)
-    >>> round(found["decay_time"], 12), round(found["frequency"], 3)
+    >>> round(found["decay_time"], 12), round(found["hz"], 3)
     (0.2, 7.958)
     """
     stable = log_radius < STABILITY_THRESHOLD
@@ -355,8 +372,8 @@ def derive(log_radius: float, mode_angle_rad: float, period_s: float) -> dict[st
         "decay_time": math.nan
         if math.isnan(log_radius)
         else _decay_s(log_radius, period_s, stable),
-        "dominant_damping": -log_radius / size if size > 0 else 0.0,
-        "frequency": abs(mode_angle_rad) / (2 * math.pi * period_s),
+        "dominant_damping": -log_radius / size if size != 0 else 0.0,
+        "hz": abs(mode_angle_rad) / (2 * math.pi * period_s),
     }
 
 

@@ -15,7 +15,7 @@ class Caution:
     short: str
     """A few words, for beside a verdict."""
     long: str
-    """A sentence or two, for a report."""
+    """A sentence or two, as an atlas's facts tell it."""
 
 
 CAUTIONS: dict[str, Caution] = {

@@ -9,8 +9,10 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from sweep.config import Case, Design, cases_to_json, designs_to_json
 from sweep.grid import Axis, Grid
 from sweep.query.answers import plain
+from sweep.query.cautions import CAUTIONS
 from sweep.query.select import value_at
 from sweep.vocabulary import CONTROLLERS, PLANTS, LoopStructure
 
@@ -82,10 +84,10 @@ class AtlasFacts:
     """Tiles that hold every measure."""
     tile_shape: tuple[int, ...]
     """Nodes of a tile along each axis."""
-    designs: Mapping[str, Mapping[str, float | str]]
+    designs: tuple[Design, ...]
     """Named designs with their values."""
-    cases: tuple[str, ...]
-    """Names of the cases."""
+    cases: tuple[Case, ...]
+    """Named cases with their tolerances and requirements."""
 
     def to_json(self) -> dict[str, Any]:
         """The document that programs rely on."""
@@ -108,8 +110,9 @@ class AtlasFacts:
             "axes": [_axis_document(axis) for axis in self.grid.axes],
             "fixed": {item.path: item.value for item in self.grid.fixed},
             "measures": [vars(measure) for measure in self.measures],
-            "designs": self.designs,
-            "cases": self.cases,
+            "designs": designs_to_json(self.designs),
+            "cases": cases_to_json(self.cases),
+            "cautions": {code: caution.long for code, caution in CAUTIONS.items()},
         }
         found: dict[str, Any] = plain(document)
         return found
@@ -145,8 +148,8 @@ def read_facts(stored: StoredAtlas) -> AtlasFacts:
         tiles=len(stored.tiling),
         tiles_done=int(np.count_nonzero(stored.tiles_done())),
         tile_shape=stored.tiling.tile_shape,
-        designs={design.name: dict(design.values) for design in stored.designs},
-        cases=tuple(case.name for case in stored.cases),
+        designs=stored.designs,
+        cases=stored.cases,
     )
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from typing import Any
 
@@ -104,8 +105,8 @@ def info_view(facts: AtlasFacts) -> RenderableType:
         ("measures", ", ".join(measure.name for measure in facts.measures)),
         ("computed", f"{facts.tiles_done:,} of {facts.tiles:,} tiles ({share:.0%})"),
         ("nodes", f"{facts.grid.size:,}"),
-        ("designs", ", ".join(facts.designs) or "none"),
-        ("cases", ", ".join(facts.cases) or "none"),
+        ("designs", ", ".join(design.name for design in facts.designs) or "none"),
+        ("cases", ", ".join(case.name for case in facts.cases) or "none"),
         ("folder", facts.path),
         ("atlas id", facts.atlas_id),
         ("physics id", facts.physics_id),
@@ -137,12 +138,12 @@ def point_view(answer: PointAnswer, computed: Mapping[str, Any]) -> RenderableTy
     verdict = {True: "stable", False: "not stable", None: "unknown: not computed yet"}
     style = {True: "bold green", False: "bold red", None: "bold yellow"}[answer.stable]
     derived = answer.derived
-    stored = [(name, f"{value:.6g}") for name, value in answer.measures.items()]
+    stored = [(name, format_quantity(value, "1")) for name, value in answer.measures.items()]
     if answer.stable is not None:
         stored += [
             ("spectral radius", f"{derived['radius']:.9g}"),
             ("decay time", _decay_text(derived["decay_time"])),
-            ("dominant mode", _mode_text(derived["frequency"], derived["dominant_damping"])),
+            ("dominant mode", _mode_text(derived["hz"], derived["dominant_damping"])),
         ]
     parts: list[RenderableType] = [facts_table(place_rows(answer.grid, answer.at, answer.nominal))]
     parts += moved_lines(answer.grid, answer.moved, answer.at)
@@ -186,10 +187,10 @@ def _mode_text(frequency_hz: float, damping: float) -> str:
 
 
 def _decay_text(seconds: float | str) -> str:
-    """A decay time constant; one that is negative or without bound is growth, or none at all."""
-    if isinstance(seconds, str) or not 0 <= seconds < float("inf"):
+    """A decay time constant; without bound, as a number or as in JSON, it is none."""
+    if seconds in ("inf", math.inf):
         return "does not decay"
-    return format_quantity(seconds, "s")
+    return format_quantity(float(seconds), "s")
 
 
 def _modes(computed: Mapping[str, Any]) -> Table:
@@ -203,9 +204,9 @@ def _modes(computed: Mapping[str, Any]) -> Table:
             continue
         table.add_row(
             "pair" if imaginary else "real",
-            format_quantity(mode["frequency_hz"], "Hz"),
+            format_quantity(mode["hz"], "Hz"),
             f"{mode['damping']:.4g}",
-            _decay_text(mode["decay_time_s"]),
+            _decay_text(mode["decay_time"]),
             f"{mode['magnitude']:.9g}",
         )
     return table
