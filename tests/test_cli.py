@@ -298,11 +298,13 @@ def test_limits_for_people_carry_units_ends_and_cautions(capsys, shelf):
 
 def test_a_tile_that_is_missing_is_unknown_and_said_so(capsys, shelf):
     code, document = ask(capsys, shelf, "limits", "half done", "--along", "kp")
-    assert code == 0
+    assert code == 3
     assert document["unknown"] == document["rows"][2]["unknown"] == 42
     assert document["rows"][2]["intervals"] == []
     code, out, _ = run(capsys, "limits", "half done", "--along", "kp", "--shelf", shelf)
-    assert "42 of them unknown" in out
+    assert "42 of them unknown (not computed yet); run its config again" in " ".join(out.split())
+    known = ["limits", "half done", "--along", "kp", "--at", "sample_period=5ms"]
+    assert ask(capsys, shelf, *known)[0] == 0
 
 
 @pytest.mark.parametrize(
@@ -341,12 +343,30 @@ def test_a_point_shows_stored_measures_and_marks_what_is_computed_now(capsys, sh
     assert set(document["measures"]) == {"log_radius", "mode_angle"}
     modes = document["computed_now"]["modes"]
     assert modes == sorted(modes, key=lambda mode: -mode["magnitude"])
-    assert all({"frequency_hz", "damping", "decay_time_s"} <= set(mode) for mode in modes)
+    assert all({"hz", "damping", "decay_time"} <= set(mode) for mode in modes)
     assert document["computed_now"]["coefficients"]["whole_delay"] == 1
     code, out, _ = run(capsys, "point", "bench", "--design", "quick", "--shelf", shelf)
     assert code == 0
     assert "computed now" in out
     assert "damping        0.01 (nominal)" in out
+
+
+def test_a_point_that_is_not_computed_is_unknown_throughout(capsys, shelf):
+    code, document = ask(capsys, shelf, "point", "empty")
+    assert code == 3
+    assert set(document["derived"].values()) == set(document["measures"].values()) == {None}
+    _, out, _ = run(capsys, "point", "empty", "--shelf", shelf)
+    assert "log_radius  unknown" in out
+    assert "nan" not in out
+
+
+def test_a_mode_that_grows_never_decays(capsys, shelf):
+    _, document = ask(capsys, shelf, "point", "bench", "--at", "kp=-1")
+    modes = document["computed_now"]["modes"]
+    assert {mode["decay_time"] for mode in modes if mode["magnitude"] >= 1} == {"inf"}
+    assert all(mode["decay_time"] >= 0 for mode in modes if mode["magnitude"] < 1)
+    _, out, _ = run(capsys, "point", "bench", "--at", "kp=-1", "--shelf", shelf)
+    assert "does not decay" in out
 
 
 def test_a_point_off_a_node_names_the_nearest_and_nearest_takes_it(capsys, shelf):
@@ -355,7 +375,7 @@ def test_a_point_off_a_node_names_the_nearest_and_nearest_takes_it(capsys, shelf
     assert (code, document["error"], document["where"]) == (2, "question", ["kp"])
     assert "kp=0.3" in document["remedy"]
     code, document = ask(capsys, shelf, *at, "--nearest")
-    assert (code, document["at"]["kp"], document["moved"]) == (0, 0.3, {"kp": "0.32"})
+    assert (code, document["at"]["kp"], document["moved"]) == (0, 0.3, {"kp": 0.32})
 
 
 def test_info_tells_the_loop_the_delay_budget_and_the_origin(capsys, shelf):
@@ -372,6 +392,10 @@ def test_info_tells_the_loop_the_delay_budget_and_the_origin(capsys, shelf):
     ):
         assert piece in words
     code, document = ask(capsys, shelf, "info", "half done")
+    design = {"name": "quick", "values": {"sample_period": 0.005, "kp": 0.3}}
+    assert document["designs"] == [design]
+    assert document["cases"] == []
+    assert "A control loop moves things" in document["cautions"]["C9"]
     assert (document["tiles"], document["tiles_done"], document["nodes"]) == (3, 2, 126)
     assert document["delay"] == [
         {"name": "update", "unit": "samples", "low": 1.0, "high": 1.0, "nominal": 1.0}
@@ -411,9 +435,9 @@ def test_a_reader_that_leaves_early_is_no_error(shelf):
 
 
 def test_a_terminal_without_utf8_gets_ascii(shelf):
-    for command in ("info half", "limits half --along kp"):
+    for command, code in (("info half", 0), ("limits half --along kp", 3)):
         done = shell(f"sweep {command} --shelf '{shelf}'", PYTHONIOENCODING="ascii")
-        assert done.returncode == 0, done.stderr
+        assert done.returncode == code, done.stderr
         done.stdout.decode("ascii")
 
 

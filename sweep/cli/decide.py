@@ -62,7 +62,7 @@ def _limits(arguments: argparse.Namespace) -> int:
         from sweep.views.limits_table import limits_view
 
         print_view(limits_view(answer))
-    return INCOMPLETE if answer.unknown == answer.nodes else 0
+    return INCOMPLETE if any(row.unknown and not row.intervals for row in answer.rows) else 0
 
 
 def _rows(text: str) -> int:

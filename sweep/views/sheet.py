@@ -153,12 +153,12 @@ def place_rows(
 
 
 def moved_lines(
-    grid: Grid, moved: Mapping[str, Value], at: Mapping[str, Value]
+    grid: Grid, moved: Mapping[str, float], at: Mapping[str, Value]
 ) -> list[RenderableType]:
     """Axes where the nearest node was taken."""
     return [
         line(
-            f"{name} = {value} lies between nodes: the nearest, "
+            f"{name} = {show_value(grid.axis(name), value)} lies between nodes: the nearest, "
             f"{show_value(grid.axis(name), at[name])}, was taken",
             "yellow",
         )
@@ -170,7 +170,10 @@ def rests_on(nodes: int, unknown: int) -> Text:
     """How many nodes an answer rests on, and how many were unknown."""
     text = f"rests on {nodes:,} nodes"
     if unknown:
-        return line(f"{text}, {unknown:,} of them unknown (not computed yet)", "yellow")
+        return line(
+            f"{text}, {unknown:,} of them unknown (not computed yet); run its config again to compute them",
+            "yellow",
+        )
     return line(text)
 
 
