@@ -97,6 +97,10 @@ class Walk:
             wanted.update((stable, other))
         return [self._grid_node(index) for index in sorted(wanted)]
 
+    def crossing_places(self, angles: Angles) -> list[tuple[int, float]]:
+        """Every boundary as (lower node of its cell, coordinate)."""
+        return [(min(s, o), self._crossing(s, o, angles)) for s, o in self.crossings()]
+
     def intervals(self, angles: Angles) -> tuple[Interval, ...]:
         """The stable stretches with both of their ends."""
         return tuple(

@@ -233,25 +233,26 @@ def _fill(figure: SubFigure, axes: Axes, drawn: _Drawn) -> None:
 
 
 def _draw_boundary(axes: Axes, drawn: _Drawn) -> None:
-    """A contour at the threshold; along rows, which nothing joins, the edges of cells instead."""
-    if not (drawn.stable.any() and (drawn.known & ~drawn.stable).any()):
-        return
+    """The boundary of the plane; along rows, which nothing joins, the edges of cells instead."""
     rows = drawn.x_axis.is_row_axis or drawn.y_axis.is_row_axis
-    if rows or min(drawn.log_radius.shape) < 2:
+    lines: Any = _edges_between(drawn) if rows else _boundary_lines(drawn)
+    if len(lines):
         axes.add_collection(
-            LineCollection(_edges_between(drawn), colors=BOUNDARY, linewidths=1.8, zorder=3)
+            LineCollection(
+                lines, colors=BOUNDARY, linewidths=1.8, capstyle="round", zorder=3, label="boundary"
+            )
         )
-        return
-    axes.contour(
-        drawn.x,
-        drawn.y,
-        np.ma.masked_invalid(drawn.log_radius),
-        levels=[drawn.plane.threshold],
-        colors=[BOUNDARY],
-        linewidths=1.8,
-        linestyles="solid",
-        zorder=3,
-    )
+
+
+def _boundary_lines(drawn: _Drawn) -> FloatArray:
+    """Shape (pieces, 2, 2), in display units; over a single node right across its cell."""
+    sides = (drawn.x_axis, drawn.y_axis)
+    factors = [display_factor(axis.unit, axis.display_unit) for axis in sides]
+    lines: FloatArray = drawn.plane.boundary / np.array(factors)
+    for side, (axis, edges) in enumerate(zip(sides, drawn.edges, strict=True)):
+        if len(axis) == 1:
+            lines[:, :, side] = edges
+    return lines
 
 
 def _edges_between(drawn: _Drawn) -> list[list[tuple[float, float]]]:
