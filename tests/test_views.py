@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+from dataclasses import replace
 from pathlib import Path
 from types import SimpleNamespace
 
@@ -243,6 +244,26 @@ def test_hostile_titles_and_labels_are_drawn_as_they_are(tmp_path):
     gain = axis("kp", [0.0, 1.0])
     asked = atlas([unit, gain], [[-1, 1], [1, -1]], title=HOSTILE + " 云台")
     save_figure(draw_map(asked.plane("unit", "kp")), tmp_path / "map.svg")
+
+
+@pytest.mark.parametrize("edge", ["x", "y"])
+def test_a_long_axis_name_is_said_once_and_stays_inside_the_picture(edge):
+    name = "boards_of_the_second_production_run_2031"
+    unit = replace(rows(name, ["a", "b"], {"plant.gain": [1, 2]}), long_name=f"row of {name}")
+    long_name = "natural frequency of the second mode of the sensor that was fitted"
+    width = axis("a_name_of_forty_letters_as_they_may_have", [1, 2], long_name=long_name)
+    asked = atlas([unit, width, axis("kp", [0.0, 1.0])], np.zeros((2, 2, 2)) - 1)
+    for long in (name, width.name):
+        figure = draw_map(asked.plane(*((long, "kp") if edge == "x" else ("kp", long))))
+        canvas = FigureCanvasAgg(figure)
+        canvas.draw()
+        axes = figure.axes[0]
+        label = (axes.xaxis if edge == "x" else axes.yaxis).label
+        extent = label.get_window_extent(canvas.get_renderer())
+        assert label.get_text().replace(" ", "_").replace("\n", "_").count(long) == 1
+        assert min(extent.x0, extent.y0) >= 0
+        assert extent.x1 <= figure.bbox.x1
+        assert extent.y1 <= figure.bbox.y1
 
 
 def test_planes_with_a_single_node_on_an_edge_are_drawn(tmp_path):

@@ -45,6 +45,8 @@ FOOT_INCHES = 0.85
 DOTS_PER_INCH = 150
 MOST_CELLS = 1500
 """Cells drawn along an edge; more nodes than that are thinned, and the figure says so."""
+LABEL_LETTERS = 48
+"""Letters in a line of an edge's label: what the shorter edge holds."""
 
 UNSTABLE = "#ece7df"
 UNKNOWN = "#ffffff"
@@ -282,13 +284,8 @@ def _draw_marks(axes: Axes, drawn: _Drawn) -> None:
 
 
 def _label_edge(axes: Axes, axis: Axis, values: FloatArray, edge: str) -> None:
-    unit = "" if axis.is_row_axis else display_name(axis.unit, axis.display_unit)
-    words = axis.name.replace("_", " ")
-    long_name = axis.long_name or words
-    name = long_name if long_name.endswith(words) else f"{long_name}, {words}"
-    label = printable(f"{name} ({unit})" if unit else name)
     side = axes.xaxis if edge == "x" else axes.yaxis
-    side.set_label_text(label)
+    side.set_label_text(_edge_label(axis))
     edges = _cell_edges(axis, values)
     (axes.set_xlim if edge == "x" else axes.set_ylim)(edges[0], edges[-1])
     if axis.labels is not None:
@@ -298,6 +295,17 @@ def _label_edge(axes: Axes, axis: Axis, values: FloatArray, edge: str) -> None:
         side.set_major_locator(LogLocator(subs=(1.0, 2.0, 5.0)))
         side.set_major_formatter(FuncFormatter(_number))
         side.set_minor_formatter(NullFormatter())
+
+
+def _edge_label(axis: Axis) -> str:
+    """What an axis is, its name unless that is said already, and its unit; in lines that fit."""
+    unit = "" if axis.is_row_axis else display_name(axis.unit, axis.display_unit)
+    words = axis.name.replace("_", " ")
+    long_name = axis.long_name or words
+    said = long_name.replace("_", " ").endswith(words)
+    name = long_name if said else f"{long_name}, {words}"
+    label = printable(f"{name} ({unit})" if unit else name)
+    return textwrap.fill(label, LABEL_LETTERS)
 
 
 def _name_rows(axes: Axes, labels: Sequence[str], edge: str) -> None:
