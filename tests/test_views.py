@@ -69,6 +69,52 @@ def test_a_limits_table_says_units_once_in_its_heads():
     assert "worst over damping 0.01 to 0.02" in text
 
 
+def ended_by(damping, bus):
+    """Gains 1 to 2 are stable; the places given are the worst at the lower and the upper end."""
+    gain = axis("kp", [0.0, 1.0, 2.0, 3.0])
+    first = axis("damping", [0.01, 0.02], role="tolerance")
+    second = axis("bus", [0.0, 1.0], role="tolerance", unit="samples")
+    values = np.full((4, 2, 2), -0.2)
+    values[0, damping[0], bus[0]] = values[3, damping[1], bus[1]] = 0.2
+    return atlas([gain, first, second], values)
+
+
+def lines_below_ends(text):
+    lines = text.splitlines()
+    (row,) = [number for number, line in enumerate(lines) if "(1|0)" in line]
+    return lines[row + 1].strip()
+
+
+def test_a_tolerance_that_decides_every_end_is_said_once_and_others_below_each_end():
+    text = shown(limits_view(ended_by((1, 1), (0, 1)).limits("kp")))
+    assert lines_below_ends(text).split("  ")[0] == "bus 0 samples"
+    assert lines_below_ends(text).endswith("bus 1 sample")
+    assert "damping 0.02: the worst at every end" in text
+    both = shown(limits_view(ended_by((0, 1), (1, 0)).limits("kp")))
+    assert lines_below_ends(both).startswith("damping 0.01, bus 1 sample ")
+    assert lines_below_ends(both).endswith("damping 0.02, bus 0 samples")
+    assert "at every end" not in both
+
+
+def test_nothing_is_said_to_decide_where_there_is_no_choice():
+    asked = ended_by((1, 1), (0, 1))
+    alone = asked.limits("kp", at={"bus": 1.0}, over={"damping": 0.02})
+    for answer in (asked.limits("kp", nominal=True), alone):
+        assert "worst at every end" not in shown(limits_view(answer))
+        assert "below" not in shown(limits_view(answer))
+
+
+def test_a_limits_table_with_deciding_tolerances_keeps_to_the_paper():
+    many = [axis(f"tolerance_number_{i}", [1.0, 2.0], role="tolerance") for i in range(3)]
+    values = np.full((4, 2, 2, 2), -0.2)
+    values[0, 0, 1, 0] = values[3, 1, 0, 1] = 0.2
+    asked = atlas([axis("kp", [0.0, 1.0, 2.0, 3.0]), *many], values)
+    text = shown(limits_view(asked.limits("kp")), width=108)
+    assert max(map(len, text.splitlines())) <= 108
+    for name in (one.name for one in many):
+        assert text.count(f"{name} 1") == 2, "in the box, and at one of the ends"
+
+
 def test_the_half_sample_is_mentioned_wherever_a_delay_is_shown_and_only_there():
     delay = axis("bus", [0.0, 1.0], sets="delay.bus", unit="samples", role="tolerance")
     gain = axis("kp", [0.0, 1.0], sets="controller.kp")

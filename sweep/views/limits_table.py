@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+import textwrap
+from collections.abc import Iterable, Mapping, Sequence
 
 import numpy as np
 from rich.console import Group, RenderableType
 from rich.table import Table
+from rich.text import Text
 
 from sweep.grid import Axis
 from sweep.quantities import display_factor, display_name, format_quantity
@@ -25,6 +27,9 @@ from sweep.views.sheet import (
 )
 
 ENDS = "ends: how stability is lost (last stable node|first other node)"
+WORST_BELOW = "; below, the worst tolerances there"
+WORST_LETTERS = 34
+"""Letters in a line below an end: as wide as the end itself may be."""
 
 
 def limits_view(answer: LimitsAnswer) -> RenderableType:
@@ -40,7 +45,12 @@ def limits_view(answer: LimitsAnswer) -> RenderableType:
     if shared:
         parts.append(facts_table(place_rows(answer.grid, shared, named)))
     parts += [line(text) for text in _box_lines(answer)]
-    parts += [line(""), _limits_table(answer, axis), line(ENDS, "dim"), line("")]
+    same, differing = _deciding(answer)
+    parts += [line(""), _limits_table(answer, axis, differing)]
+    parts.append(line(ENDS + (WORST_BELOW if differing else ""), "dim"))
+    if same:
+        parts.append(line(f"{_place_text(answer, same)}: the worst at every end"))
+    parts.append(line(""))
     if answer.rows_in_all > len(answer.rows):
         parts.append(
             line(
@@ -56,7 +66,36 @@ def limits_view(answer: LimitsAnswer) -> RenderableType:
     return Group(*parts)
 
 
-def _limits_table(answer: LimitsAnswer, axis: Axis) -> Table:
+def _deciding(answer: LimitsAnswer) -> tuple[dict[str, Value], list[str]]:
+    """Axes of the box that are worst at one node for every end, with it; axes that are not.
+
+    An axis of the box with a single node decides nothing.
+    """
+    ends = [
+        end
+        for row in answer.rows
+        for interval in row.intervals
+        for end in (interval.low, interval.high)
+        if end.worst
+    ]
+    same: dict[str, Value] = {}
+    differing: list[str] = []
+    for name, nodes in {**answer.over, **answer.bracketed}.items() if ends else ():
+        found = {end.worst[name] for end in ends}
+        if len(found) > 1:
+            differing.append(name)
+        elif len(set(nodes)) > 1:
+            same[name] = found.pop()
+    return same, differing
+
+
+def _place_text(answer: LimitsAnswer, place: Mapping[str, Value]) -> str:
+    return ", ".join(
+        f"{name} {show_value(answer.grid.axis(name), value)}" for name, value in place.items()
+    )
+
+
+def _limits_table(answer: LimitsAnswer, axis: Axis, differing: Sequence[str]) -> Table:
     listed = [answer.grid.axis(name) for name in answer.listed]
     heads = [_head(item.name, item) for item in listed]
     table = plain_table(*heads, _head("from", axis), _head("to", axis), "lower end", "upper end")
@@ -64,26 +103,35 @@ def _limits_table(answer: LimitsAnswer, axis: Axis) -> Table:
         table.columns[column].justify = "right"
     for row in answer.rows:
         place = [_number(item, row.at[item.name]) for item in listed]
-        for found in _interval_lines(row, axis):
-            table.add_row(*cells(*place, *found))
+        for numbers, ends in _interval_lines(answer, row, axis, differing):
+            table.add_row(*cells(*place, *numbers), *ends)
             place = [""] * len(listed)
     return table
 
 
-def _interval_lines(row: LimitsRow, axis: Axis) -> list[tuple[str, str, str, str]]:
+def _interval_lines(
+    answer: LimitsAnswer, row: LimitsRow, axis: Axis, differing: Sequence[str]
+) -> Iterable[tuple[tuple[str, str], tuple[Text, Text]]]:
+    """For each interval its two numbers and its two ends."""
     if not row.intervals:
         found = "unknown" if row.unknown == row.nodes else "none stable"
         found += "" if row.unknown in (0, row.nodes) else ", some unknown"
-        return [("", "", found, "")]
-    return [
-        (
-            _number(axis, interval.low.value),
-            _number(axis, interval.high.value),
-            _end_text(interval.low, axis),
-            _end_text(interval.high, axis),
+        yield ("", ""), (line(found), line(""))
+    for interval in row.intervals:
+        low, high = interval.low, interval.high
+        yield (
+            (_number(axis, low.value), _number(axis, high.value)),
+            (_end_cell(answer, low, axis, differing), _end_cell(answer, high, axis, differing)),
         )
-        for interval in row.intervals
-    ]
+
+
+def _end_cell(answer: LimitsAnswer, end: End, axis: Axis, differing: Sequence[str]) -> Text:
+    """How an interval ends, and below it where the axes that differ are at their worst."""
+    cell = line(_end_text(end, axis))
+    place = {name: end.worst[name] for name in differing if name in end.worst}
+    for part in textwrap.wrap(_place_text(answer, place), WORST_LETTERS):
+        cell.append("\n").append_text(line(f"  {part}", "dim"))
+    return cell
 
 
 def _end_text(end: End, axis: Axis) -> str:
