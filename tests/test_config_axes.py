@@ -258,3 +258,31 @@ def test_more_than_1e13_nodes_in_all_are_refused():
     text = text.replace('step = "0.5 ms"', "count = 5_000")
     found = problems(text.replace("[axes.damping]\nvalues =", rest))
     assert "1e+13 nodes in all" in found["axes"].expected
+
+
+def test_a_delay_without_a_unit_that_is_too_long_is_told_that_it_is_in_seconds():
+    problem = problems(swap(('update = "1 sample"', "update = 1.5")))["delay"]
+    assert "without a unit is in seconds" in problem.remedy
+    assert '"1.5 samples"' in problem.remedy
+    assert "delay.update" in problem.remedy
+    written = problems(swap(('update = "1 sample"', 'update = "1.5 s"')))["delay"]
+    assert written.remedy.startswith("shorten the delays")
+
+
+@pytest.mark.parametrize("name", ["hold", "zoh", "half_sample", "zoh_delay", "halfsample"])
+def test_a_delay_part_that_is_called_like_the_hold_is_noted(name):
+    (note,) = read(swap(("update =", f"{name} ="))).notes
+    assert f"delay.{name}" in note
+    assert "half sample is in the model already" in note
+
+
+@pytest.mark.parametrize("name", ["update", "threshold", "half", "sample"])
+def test_other_delay_parts_are_not_taken_for_the_hold(name):
+    assert read(swap(("update =", f"{name} ="))).notes == ()
+
+
+def test_what_is_missing_at_the_top_is_said_in_a_clean_sentence():
+    text = BASE[: BASE.index("[axes.sample_period]")] + BASE[BASE.index("[axes.kp]") :]
+    text = text.replace('sample_period = "2 ms"\n', "")
+    remedy = problems(text)["sample_period"].remedy
+    assert "at the top, before any section, or sweep it" in remedy

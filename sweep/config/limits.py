@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 
 import numpy as np
 
@@ -16,6 +16,8 @@ MAX_GRID = 10**13
 """Most nodes of one sweep."""
 
 _SLACK = 1e-9
+
+_HOLD_WORDS = frozenset({"hold", "zoh", "halfsample"})
 
 _HUGE = 1e150
 """Clips seconds and rates that are absurd anyway, so that their product stays finite."""
@@ -32,7 +34,9 @@ def check_size(grid: Grid, findings: Findings) -> None:
         findings.add("axes", f"{shape} = {grid.size:.3g} nodes", expected, "take coarser axes")
 
 
-def check_delay(grid: Grid, units: dict[str, str], findings: Findings) -> None:
+def check_delay(
+    grid: Grid, units: dict[str, str], findings: Findings, bare: Sequence[str] = ()
+) -> None:
     """Refuse a grid with a node whose delay is longer than `MAX_DELAY_SAMPLES` samples.
 
     Parameters
@@ -43,17 +47,36 @@ def check_delay(grid: Grid, units: dict[str, str], findings: Findings) -> None:
         Unit of every delay part by dotted path: ``s`` or ``samples``.
     findings
         Where it is noted.
+    bare
+        Those delay parts that were given without a unit, which may have been meant in samples.
     """
     longest, period_s = find_longest_delay(grid, units)
     if longest > MAX_DELAY_SAMPLES + _SLACK:
         at = format_quantity(period_s, "s")
         names = ", ".join(sorted(units))
+        remedy = "shorten the delays, or start the sample period higher"
+        if bare:
+            remedy = (
+                f"{', '.join(bare)}: a number without a unit is in seconds; write "
+                '"1.5 samples" where samples are meant'
+            )
         findings.add(
             "delay",
             f"{longest:.6g} samples in all ({names}) at a sample period of {at}",
             f"at most {MAX_DELAY_SAMPLES} samples of delay at any node",
-            "shorten the delays, or start the sample period higher",
+            remedy,
         )
+
+
+def note_hold(units: Iterable[str], notes: list[str]) -> None:
+    """Note every delay part whose name says that it is the hold's half sample."""
+    for path in units:
+        words = path.removeprefix("delay.").split("_")
+        if _HOLD_WORDS.intersection(words) or "".join(words) == "halfsample":
+            notes.append(
+                f"{path}: the hold's own half sample is in the model already; "
+                "if that is what this part stands for, leave it out"
+            )
 
 
 def find_longest_delay(grid: Grid, units: dict[str, str]) -> tuple[float, float]:

@@ -15,7 +15,7 @@ from sweep.config.document import (
 )
 from sweep.config.drafts import AxisDraft, draft_axes
 from sweep.config.findings import Findings
-from sweep.config.limits import check_delay, check_names, check_size
+from sweep.config.limits import check_delay, check_names, check_size, note_hold
 from sweep.config.loop import LoopDraft, read_loop
 from sweep.config.model import Config
 from sweep.config.parameters import LoopValues, check_given_once
@@ -87,8 +87,9 @@ def _check(document: Document, folder: Path, source: str) -> Config:
     if not len(findings):
         check_size(grid, findings)
         check_names(grid.axes, grid.fixed, findings)
-        check_delay(grid, values.delay_units, findings)
+        check_delay(grid, values.delay_units, findings, values.bare_delays)
     notes: list[str] = []
+    note_hold(values.delay_units, notes)
     question = Question({draft.name: draft for draft in drafts}, built, findings, notes)
     designs = read_designs(sound.get("designs", {}), question)
     cases = read_cases(sound.get("cases", {}), question)

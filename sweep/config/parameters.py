@@ -17,6 +17,7 @@ from sweep.config.reading import (
     delay_target,
     find_delay_unit,
     find_display_unit,
+    is_bare_delay,
 )
 from sweep.config.shapes import describe_parameter
 from sweep.grid import FixedParameter
@@ -36,7 +37,7 @@ def check_given_once(loop: LoopDraft, drafts: Sequence[AxisDraft], findings: Fin
     excused = loop.misspelt | _claimed_by_broken_axes(loop, drafts)
     for path in sorted(loop.required - places.keys() - excused):
         section, _, name = path.rpartition(".")
-        where = f"in [{section}]" if section else "at the top, before any section,"
+        where = f"in [{section}]" if section else "at the top, before any section"
         remedy = f"write `{name}` {where}, or sweep it in [axes.{name}]"
         findings.add(path, "nothing", describe_parameter(loop.targets[path].spec), remedy)
 
@@ -85,6 +86,15 @@ class LoopValues:
         given = _all_given(self._loop, self._drafts)
         paths = sorted({path for path, _ in given if path.startswith("delay.")})
         return {path: find_delay_unit(value for _, value in self._given(path)) for path in paths}
+
+    @property
+    def bare_delays(self) -> list[str]:
+        """Delay parts with a value other than 0 that has no unit, by dotted path."""
+        return [
+            path
+            for path in self.delay_units
+            if any(is_bare_delay(value) for _, value in self._given(path))
+        ]
 
     def _given(self, path: str) -> Iterator[tuple[str, Any]]:
         """Every value of a parameter with its place."""

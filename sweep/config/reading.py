@@ -92,6 +92,15 @@ def find_delay_unit(values: Iterable[object]) -> str:
     return next((unit for unit in units if unit), "s")
 
 
+def is_bare_delay(value: object) -> bool:
+    """Whether a delay is a number other than 0 without a unit, and so counts in seconds."""
+    try:
+        quantity = split_quantity(value)
+    except QuantityError:
+        return False
+    return not quantity.unit and quantity.number != 0
+
+
 def _delay_unit(value: object) -> str | None:
     try:
         quantity = split_quantity(value)
