@@ -205,7 +205,10 @@ def _unit_remedy(written: str, unit: str) -> str:
     if close:
         return f'"{close[0]}" was probably meant'
     if written == "periods":
-        return "periods are natural periods of the plant, and only a sample period is given in them"
+        return (
+            "periods are those of the plant's natural_frequency, where it has one, and only a "
+            f"sample period is given in them; write it in {_listed(spellings) or 'numbers'}"
+        )
     if not spellings:
         return "write the number without a unit"
     return f"write it in {_listed(spellings)}"
@@ -221,6 +224,18 @@ def describe_unit(unit: str, *, periods: bool = False, decibels: bool = False) -
     names += ["periods"] * periods + ["dB"] * (decibels and unit == "1")
     example = _EXAMPLES.get(unit, f"a number in {unit}")
     return f"{example} ({', '.join(names)})" if names else example
+
+
+def is_in_periods(text: str) -> bool:
+    """Whether a text is a number of natural periods of the plant.
+
+    >>> is_in_periods("0.04periods"), is_in_periods("5 ms")
+    (True, False)
+    """
+    try:
+        return split_quantity(text).unit == "periods"
+    except QuantityError:
+        return False
 
 
 def reciprocal(value: Decimal) -> Decimal:
@@ -315,7 +330,7 @@ def is_scale(unit: str, display_unit: str) -> bool:
 
 
 def _listed(names: list[str]) -> str:
-    return names[0] if len(names) == 1 else f"{', '.join(names[:-1])} or {names[-1]}"
+    return "".join(names) if len(names) < 2 else f"{', '.join(names[:-1])} or {names[-1]}"
 
 
 def _shown(value: object) -> str:

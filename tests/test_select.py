@@ -118,7 +118,30 @@ def test_rows_are_named_by_label_whatever_the_label_holds():
     assert find_span(UNIT, "A, left").nodes == (0,)
     assert find_span(UNIT, ["B", "C:1"]).nodes == (1, 2)
     with pytest.raises(QuestionError, match="no such row"):
+        find_span(UNIT, "B:D")
+    with pytest.raises(QuestionError, match="rows are not ordered") as caught:
         find_span(UNIT, "B:C:1")
+    assert "unit=B,unit=C:1" in caught.value.remedy
+
+
+@pytest.mark.parametrize("at", ["0.1periods", "0.1 period"])
+def test_a_sample_period_may_be_asked_in_natural_periods_of_the_nominal_plant(at):
+    period = axis("sample_period", [0.001, 0.002, 0.005], unit="s", role="tolerance")
+    hz = axis("plant_hz", [40, 50, 60], sets="plant.natural_frequency", unit="Hz", nominal=1)
+    asked = atlas([period, hz], np.zeros((3, 3)))
+    assert asked.point({"sample_period": at}).at["sample_period"] == 0.002
+    fixed = atlas([period], np.zeros(3) - 1, fixed={"plant.natural_frequency": 50.0})
+    assert fixed.point({"sample_period": at}).at["sample_period"] == 0.002
+    answer = asked.limits("plant_hz", over={"sample_period": "1ms:" + at})
+    assert answer.over["sample_period"] == (0.001, 0.002)
+
+
+def test_natural_periods_of_a_plant_without_any_are_refused_with_what_to_write():
+    period = axis("sample_period", [0.001, 0.002], unit="s")
+    with pytest.raises(QuestionError, match="found") as caught:
+        atlas([period], [-1, -1]).point({"sample_period": "0.1periods"})
+    assert "natural_frequency, where it has one" in caught.value.remedy
+    assert "ms" in caught.value.remedy
 
 
 def test_ordered_rows_take_a_range_of_labels():

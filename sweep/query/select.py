@@ -6,12 +6,19 @@ import difflib
 import re
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
+from decimal import Decimal
 
 import numpy as np
 
 from sweep.errors import QuantityError, QuestionError
 from sweep.grid import Axis, Grid
-from sweep.quantities import format_quantity, parse_quantity, reciprocal, to_float
+from sweep.quantities import (
+    format_quantity,
+    is_in_periods,
+    parse_quantity,
+    reciprocal,
+    to_float,
+)
 
 Value = float | str
 """A coordinate, in the unit of the stored axis, or the label of a row."""
@@ -232,8 +239,28 @@ def resolve_names(grid: Grid, asked: Mapping[str, Asked]) -> dict[str, tuple[str
                 where=[axis.name],
                 remedy="give it once",
             )
-        found[axis.name] = (name, value)
+        in_seconds = axis.sets == ("sample_period",) and name != "sample_rate"
+        found[axis.name] = (name, _periods_to_seconds(grid, value) if in_seconds else value)
     return found
+
+
+def _periods_to_seconds(grid: Grid, asked: Asked) -> Asked:
+    """What is asked in natural periods of the plant at its nominal nodes, as numbers in s."""
+    if isinstance(asked, float | int):
+        return asked
+    pieces = asked.split(":") if isinstance(asked, str) else list(asked)
+    block = tuple(slice(axis.nominal, axis.nominal + 1) for axis in grid.axes)
+    natural_hz = grid.parameters(block).get("plant.natural_frequency")
+    if natural_hz is None or not any(isinstance(p, str) and is_in_periods(p) for p in pieces):
+        return asked
+    period_s = reciprocal(Decimal(repr(float(natural_hz.reshape(-1)[0]))))
+    numbers = [
+        to_float(parse_quantity(piece, "s", natural_period_s=period_s))
+        if isinstance(piece, str) and is_in_periods(piece)
+        else piece
+        for piece in pieces
+    ]
+    return numbers[0] if isinstance(asked, str) and len(numbers) == 1 else numbers
 
 
 def one_value(axis: str, asked: Asked) -> float | str:
@@ -325,6 +352,14 @@ def _find_rows(axis: Axis, asked: Sequence[float | str]) -> tuple[int, ...]:
         if axis.ordered and colon and str(item) not in (axis.labels or ()):
             ends = sorted((_find_row(axis, first.strip()), _find_row(axis, last.strip())))
             nodes.update(range(ends[0], ends[1] + 1))
+        elif {first.strip(), last.strip()} <= set(axis.labels or ()):
+            raise QuestionError(
+                f"reading {axis.name} = {item}: its rows are not ordered, so that none lies "
+                "between two others",
+                where=[axis.name],
+                remedy=f"name each row: {axis.name}={first.strip()},{axis.name}={last.strip()}; or "
+                f"write ordered = true in [axes.{axis.name}]",
+            )
         else:
             nodes.add(_find_row(axis, item))
     return tuple(sorted(nodes))
