@@ -9,10 +9,10 @@
     │   ├── QuestionError        a question that the atlas cannot be asked
     │   └── ResourceError        the disk (or another resource) will not hold the answer
     ├── AtlasError          3    the atlas cannot give the answer
-    │   ├── DamagedAtlas         stored bytes that are not what was written
-    │   └── IncompleteAtlas      too few nodes are computed to answer
+    │   └── DamagedAtlas         stored bytes that are not what was written
     └── Interrupted         130  stopped on request; running again resumes
 
+An answer in which too little is computed is printed and ends with 3 too, and is not an error.
 Exit code 0 is success and 1 is kept for a requirement that is not met, which is an answer and not
 an error.
 """
@@ -130,12 +130,6 @@ class DamagedAtlas(AtlasError):
     """Stored bytes that are not what was written."""
 
     kind = "damaged"
-
-
-class IncompleteAtlas(AtlasError):
-    """Too few nodes are computed to answer."""
-
-    kind = "incomplete"
 
 
 class Interrupted(SweepError):

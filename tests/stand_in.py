@@ -156,6 +156,18 @@ def whole(config: Config, measure: str = "log_radius"):
     return values_of(config.grid.parameters(), config.grid.shape, (measure,))[measure]
 
 
+def write_tile(atlas, tile, values):
+    """Store some measures of one tile as a run does."""
+    for measure, block in values.items():
+        atlas.objects.write(tile, measure, block)
+
+
+def drop_tile(atlas, index, measures=("log_radius", "mode_angle")):
+    """Forget a tile, so that the next run computes it."""
+    for measure in measures:
+        atlas.objects.drop(measure, index)
+
+
 def objects_of(folder: Path) -> dict[str, bytes]:
     """Every stored object of every measure, by path relative to the atlas."""
     paths = [p for name in MEASURES for p in folder.glob(f"{name}/c.*")]

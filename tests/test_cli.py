@@ -6,11 +6,12 @@ import json
 import os
 import subprocess
 import sys
-from datetime import time
+from datetime import datetime, time, timedelta
 from pathlib import Path
 
 import numpy as np
 import pytest
+import stand_in
 
 from sweep.__main__ import main
 from sweep.cli.parser import COMMANDS
@@ -58,7 +59,8 @@ def shelf(tmp_path_factory):
         for tile in list(atlas.tiling)[:tiles]:
             line = np.abs(kp - 0.05) - 0.42 + 0.01 * tile.index[0]
             values = np.broadcast_to(line[:, None] + [0.0, -0.1], tile.shape)
-            atlas.write_tile(
+            stand_in.write_tile(
+                atlas,
                 tile,
                 {
                     "log_radius": values.astype(np.float32),
@@ -256,6 +258,43 @@ def test_a_run_that_stops_in_time_is_done_and_one_that_is_interrupted_is_not(
     }
 
 
+def test_a_run_that_only_takes_over_labels_says_so(capsys, tmp_path):
+    path, shelf = tmp_path / "bench.toml", tmp_path / "shelf"
+    path.write_text(CONFIG)
+    run(capsys, "run", path, "--shelf", shelf)
+    _, out, _ = run(capsys, "run", path, "--shelf", shelf)
+    assert "Nothing to do" in out
+    assert "taken over" not in out
+    path.write_text(CONFIG.replace("Bench", "Second bench"))
+    code, out, _ = run(capsys, "run", path, "--shelf", shelf)
+    assert code == 0
+    assert "title, labels, designs and cases were taken over" in " ".join(out.split())
+    assert "Nothing to do" not in out
+
+
+def test_a_run_with_an_end_says_when_that_is(capsys, tmp_path):
+    path = tmp_path / "bench.toml"
+    path.write_text(CONFIG)
+    later = (datetime.now() + timedelta(hours=5)).replace(second=0, microsecond=0)  # noqa: DTZ005
+    command = ["run", path, "--until", f"{later:%H:%M}", "--shelf", tmp_path / "shelf"]
+    code, out, err = run(capsys, *command, "--json")
+    assert code == 0
+    assert datetime.fromisoformat(json.loads(out)["until"]).replace(tzinfo=None) == later
+    assert f"stops by {later:%H:%M}, in 4 h 59 min" in err.splitlines()[0]
+    assert json.loads(run(capsys, *command[:2], *command[-2:], "--json")[1])["until"] is None
+
+
+@pytest.mark.parametrize("command", ["plan", "run"])
+def test_a_shelf_that_is_a_file_is_refused_by_plan_and_run_alike(capsys, tmp_path, command):
+    path, file = tmp_path / "bench.toml", tmp_path / "file"
+    path.write_text(CONFIG)
+    file.write_text("precious")
+    for shelf in (file, file / "below"):
+        code, document = ask(capsys, shelf, command, path)
+        assert (code, document["where"]) == (2, [str(file)])
+        assert "expected a folder, found the file" in document["message"]
+
+
 def test_a_config_with_mistakes_lists_them_all_and_writes_nothing(capsys, tmp_path):
     path = tmp_path / "bad.toml"
     path.write_text(CONFIG.replace("40 Hz", "-40 Hz").replace('"p"', '"q"'))
@@ -326,7 +365,9 @@ def test_a_damaged_tile_ends_with_three_and_names_it(capsys, tmp_path):
     config = parse_config(CONFIG, folder=tmp_path, source="test")
     atlas = create_atlas(tmp_path / "bench.zarr", config, (1, 21, 2))
     tile = atlas.tiling.tile((0, 0, 0))
-    atlas.write_tile(tile, dict.fromkeys(config.measures, np.zeros(tile.shape, np.float32)))
+    stand_in.write_tile(
+        atlas, tile, dict.fromkeys(config.measures, np.zeros(tile.shape, np.float32))
+    )
     broken = atlas.objects.path("log_radius", tile.index)
     data = bytearray(broken.read_bytes())
     data[len(data) // 4] ^= 1
@@ -334,6 +375,7 @@ def test_a_damaged_tile_ends_with_three_and_names_it(capsys, tmp_path):
     code, document = ask(capsys, tmp_path, "limits", "bench", "--along", "kp")
     assert (code, document["error"]) == (3, "damaged")
     assert document["where"] == [str(broken.relative_to(atlas.path))]
+    assert "(the bytes do not fit their checksum)" in document["message"]
 
 
 def test_a_point_shows_stored_measures_and_marks_what_is_computed_now(capsys, shelf):
@@ -376,6 +418,15 @@ def test_a_point_off_a_node_names_the_nearest_and_nearest_takes_it(capsys, shelf
     assert "kp=0.3" in document["remedy"]
     code, document = ask(capsys, shelf, *at, "--nearest")
     assert (code, document["at"]["kp"], document["moved"]) == (0, 0.3, {"kp": 0.32})
+
+
+def test_what_is_no_atlas_and_no_shelf_is_called_that(capsys, shelf, tmp_path):
+    code, document = ask(capsys, tmp_path / "nothing", "info", "bench")
+    assert (code, document["where"]) == (2, [str(tmp_path / "nothing")])
+    assert "there is no such folder" in document["message"]
+    code, document = ask(capsys, shelf, "info", tmp_path)
+    assert (code, document["where"]) == (2, [str(tmp_path)])
+    assert "found another folder" in document["message"]
 
 
 def test_info_tells_the_loop_the_delay_budget_and_the_origin(capsys, shelf):

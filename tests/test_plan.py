@@ -86,7 +86,7 @@ def test_an_atlas_keeps_its_tile_shape_and_the_plan_says_so(tmp_path):
     run_sweep(stand_in.flat(), tmp_path, tile_shape=(16, 8), compute=stand_in.compute)
     plan = planned(stand_in.flat(), tmp_path, tile_shape=(4, 4))
     assert plan.tile_shape == (16, 8)
-    assert any("keeps the tile shape (16, 8)" in note for note in plan.notes)
+    assert any("keeps the tile shape 16x8" in note for note in plan.notes)
 
 
 def test_a_plan_that_the_disk_will_not_hold_says_so_and_the_run_refuses(tmp_path, monkeypatch):
@@ -137,3 +137,14 @@ def test_the_work_of_a_hundred_thousand_tiles_is_made_one_by_one(tmp_path):
     assert next(tasks).tile.index == (0, 0)
     assert next(tasks).tile.index == (0, 1)
     assert survey.pending_nodes == 1_000_000
+
+
+def test_a_tile_shape_that_makes_very_many_tiles_is_noted_and_allowed(tmp_path):
+    grid = stand_in.flat(400, 300)
+    many = survey_sweep(grid, tmp_path, (1, 1))
+    assert "120,000 tiles" in many.notes[0]
+    usual = survey_sweep(grid, tmp_path)
+    shape = "x".join(map(str, usual.shards.tile_shape))
+    assert f"{shape} makes {len(usual.tiling)} " in many.notes[0]
+    assert survey_sweep(grid, tmp_path, (2, 1)).notes == ()
+    assert usual.notes == ()

@@ -28,6 +28,7 @@ from sweep.compute.task import TileTask, compute_tile
 from sweep.errors import DamagedAtlas, InputError, QuestionError, ResourceError, SweepError
 from sweep.store.atlas import create_atlas, open_stored
 from sweep.store.shards import TileObjects
+from sweep.store.shelf import Shelf
 from sweep.vocabulary import MEASURES, MeasureSpec
 
 
@@ -108,8 +109,8 @@ def test_only_missing_tiles_are_computed(tmp_path):
     whole = run(stand_in.small(), tmp_path)
     before = stand_in.objects_of(whole.atlas)
     atlas = open_stored(whole.atlas)
-    atlas.drop_tile((1, 2, 0, 0, 0))
-    atlas.drop_tile((2, 0, 1, 0, 0))
+    stand_in.drop_tile(atlas, (1, 2, 0, 0, 0))
+    stand_in.drop_tile(atlas, (2, 0, 1, 0, 0))
     kernel = stand_in.Recording()
     report = run(stand_in.small(), tmp_path, compute=kernel)
     assert sorted(shape for shape, _ in kernel.calls) == [(3, 16, 1, 2, 3), (5, 11, 2, 2, 3)]
@@ -120,7 +121,7 @@ def test_only_missing_tiles_are_computed(tmp_path):
 
 def test_only_the_missing_measure_of_a_tile_is_computed(tmp_path):
     whole = run(stand_in.small(), tmp_path)
-    open_stored(whole.atlas).drop_tile((0, 0, 0, 0, 0), ["mode_angle"])
+    stand_in.drop_tile(open_stored(whole.atlas), (0, 0, 0, 0, 0), ["mode_angle"])
     kernel = stand_in.Recording()
     run(stand_in.small(), tmp_path, compute=kernel)
     assert kernel.calls == [((5, 16, 2, 2, 3), ("mode_angle",))]
@@ -182,7 +183,7 @@ def test_events_arrive_in_order_and_count_up_to_the_end(tmp_path):
 
 def test_a_resumed_run_starts_counting_where_the_last_one_ended(tmp_path):
     whole = run(stand_in.small(), tmp_path)
-    open_stored(whole.atlas).drop_tile((0, 0, 0, 0, 0))
+    stand_in.drop_tile(open_stored(whole.atlas), (0, 0, 0, 0, 0))
     ears = Ears()
     run(stand_in.small(), tmp_path, listener=ears)
     started, stored = ears.of(SweepStarted)[0], ears.of(TileStored)[0]
@@ -244,7 +245,7 @@ def test_a_tile_that_does_not_reach_the_disk_has_failed_and_is_not_done(tmp_path
     def lost(_objects, _measure, _index):
         raise OSError(errno.EIO, "Input/output error")
 
-    monkeypatch.setattr(TileObjects, "settle", lost)
+    monkeypatch.setattr(TileObjects, "flush", lost)
     with pytest.raises(SweepError, match="Input/output error"):
         run(stand_in.small(), tmp_path)
     monkeypatch.undo()
@@ -253,10 +254,13 @@ def test_a_tile_that_does_not_reach_the_disk_has_failed_and_is_not_done(tmp_path
     assert run(stand_in.small(), tmp_path).complete
 
 
-def test_a_shelf_that_cannot_be_made_is_refused(tmp_path):
-    (tmp_path / "file").write_text("text")
+def test_a_shelf_that_cannot_be_made_is_refused(tmp_path, monkeypatch):
+    def refuse(*_arguments):
+        raise PermissionError(errno.EACCES, "Permission denied")
+
+    monkeypatch.setattr(Shelf, "open_or_create", refuse)
     with pytest.raises(ResourceError, match="preparing the atlas") as caught:
-        run(stand_in.small(), tmp_path / "file" / "shelf")
+        run(stand_in.small(), tmp_path / "shelf")
     assert "may write" in caught.value.remedy
 
 

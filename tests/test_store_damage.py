@@ -23,7 +23,7 @@ def atlas(tmp_path):
     atlas = create_atlas(tmp_path / "a.zarr", config, (16, 8))
     for measure in config.measures:
         for tile in atlas.tiling:
-            atlas.write_tile(tile, {measure: stand_in.whole(config, measure)[tile.block]})
+            stand_in.write_tile(atlas, tile, {measure: stand_in.whole(config, measure)[tile.block]})
     return atlas
 
 
@@ -101,10 +101,10 @@ def test_leftovers_of_killed_writers_are_removed_and_objects_are_not(atlas):
     assert stand_in.objects_of(atlas.path) == before
 
 
-def test_a_settled_object_stays_as_it_is_and_an_absent_one_is_passed_over(atlas):
+def test_a_flushed_object_stays_as_it_is_and_an_absent_one_is_passed_over(atlas):
     before = stand_in.objects_of(atlas.path)
-    atlas.objects.settle("log_radius", (1, 2))
-    atlas.objects.settle("log_radius", (9, 9))
+    atlas.objects.flush("log_radius", (1, 2))
+    atlas.objects.flush("log_radius", (9, 9))
     assert stand_in.objects_of(atlas.path) == before
 
 
@@ -114,12 +114,14 @@ def test_a_damaged_tile_is_simply_written_again(atlas, index):
     whole = path.read_bytes()
     path.write_bytes(b"\xff" * len(whole))
     tile = atlas.tiling.tile(index)
-    atlas.write_tile(tile, {"log_radius": stand_in.whole(stand_in.flat(40, 30))[tile.block]})
+    stand_in.write_tile(
+        atlas, tile, {"log_radius": stand_in.whole(stand_in.flat(40, 30))[tile.block]}
+    )
     assert path.read_bytes() == whole
 
 
 def test_a_dropped_tile_is_unknown_again(atlas):
-    atlas.drop_tile((0, 1))
+    stand_in.drop_tile(atlas, (0, 1))
     assert not atlas.complete
     assert np.isnan(atlas.read("mode_angle", (slice(0, 16), slice(8, 16)))).all()
 

@@ -80,7 +80,7 @@ def test_a_tile_shape_is_clipped_to_the_grid():
 def test_a_tile_shape_that_does_not_fit_is_refused_with_one_that_does(shape):
     with pytest.raises(QuestionError, match="one for each of the axes a0, a1, a2") as caught:
         check_tile_shape(shape, grid(20, 30, 9))
-    assert caught.value.remedy == "give a shape such as 20,30,9"
+    assert caught.value.remedy == "give a shape such as 20x30x9"
 
 
 def test_tiles_too_many_to_count_are_refused():

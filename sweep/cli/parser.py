@@ -16,7 +16,6 @@ GROUPS = {
     "make": "make an atlas",
     "look": "look into one",
     "decide": "decide with it",
-    "keep": "keep and hand over",
 }
 """What one wants, in the order of a working week."""
 

@@ -6,6 +6,7 @@ Nothing here prints. Events arrive in the thread that called `run_sweep`, one at
 from __future__ import annotations
 
 from dataclasses import dataclass
+from datetime import datetime
 from pathlib import Path
 from typing import Any, Literal, Protocol
 
@@ -31,6 +32,10 @@ class SweepStarted:
     """Nodes in all."""
     nodes_done: int
     """Nodes that were stored before this run."""
+    until: datetime | None = None
+    """Local time by which the run stops; `None` when it goes on to the end."""
+    until_in_s: float = 0.0
+    """How far ahead that is, s."""
 
 
 @dataclass(frozen=True)
@@ -107,6 +112,8 @@ class RunReport:
     """Whether titles, labels, designs or cases of an existing atlas were rewritten."""
     stopped: StopReason = ""
     """Why it stopped before the last tile; empty when it did not."""
+    until: datetime | None = None
+    """Local time by which it was to stop; `None` when it was not told one."""
     notes: tuple[str, ...] = ()
     """Things that the user should know."""
     nodes_adopted: int = 0
@@ -170,6 +177,7 @@ class RunReport:
             "complete": self.complete,
             "interrupted": self.interrupted,
             "stopped_by_until": self.stopped_by_until,
+            "until": None if self.until is None else self.until.isoformat(),
             "notes": list(self.notes),
         }
 
@@ -192,7 +200,7 @@ class Listener(Protocol):
         """Take one event; called in the thread of `run_sweep`, so be quick."""
 
 
-class Deaf:
+class SilentListener:
     """A listener that does nothing."""
 
     def notify(self, event: Event) -> None:

@@ -16,7 +16,8 @@ import time
 from collections.abc import Callable, Iterable
 from concurrent.futures import ThreadPoolExecutor
 from contextlib import suppress
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
+from datetime import datetime
 from datetime import time as time_of_day
 from functools import partial
 from pathlib import Path
@@ -31,10 +32,10 @@ from sweep.compute.plan import (
     refuse_if_too_large,
 )
 from sweep.compute.progress import (
-    Deaf,
     KernelsReady,
     Listener,
     RunReport,
+    SilentListener,
     SweepFinished,
     SweepStarted,
     SweepStopping,
@@ -135,21 +136,24 @@ def run_sweep(
         When the atlas that the shelf has for this config cannot be read.
     """
     began = time.perf_counter()
-    folder, ears, count = Path(shelf_folder), listener or Deaf(), checked_workers(workers)
+    folder, count = Path(shelf_folder), checked_workers(workers)
+    listener = listener or SilentListener()
+    deadline_s = None if until is None else next_occurrence_s(until, time.time())
     survey = survey_sweep(config, folder, tile_shape)
     kernel = _kernel_if_needed(survey, folder, compute)
     survey, relabelled = _opened(survey, folder, tile_shape)
-    ears.notify(_started(survey, count))
+    listener.notify(_started(survey, count, deadline_s))
     gate = Gate()
-    if until is not None and survey.pending.size:
+    if deadline_s is not None and survey.pending.size:
         tile_s = probe_tiles(survey, kernel).slowest_s
-        gate = Gate(next_occurrence_s(until, time.time()), tile_s)
+        gate = Gate(deadline_s, tile_s)
     start_seconds = time.perf_counter() - began
     if survey.pending.size:
-        ears.notify(KernelsReady(start_seconds))
-    tally = _compute_all(survey, survey.spec(kernel), count, gate, ears)
+        listener.notify(KernelsReady(start_seconds))
+    tally = _compute_all(survey, survey.spec(kernel), count, gate, listener)
     report = _report(survey, tally, gate, count, start_seconds, relabelled=relabelled)
-    ears.notify(SweepFinished(report))
+    report = replace(report, until=_local_time(deadline_s))
+    listener.notify(SweepFinished(report))
     return report
 
 
@@ -240,7 +244,7 @@ def _opened(
     return fresh, survey.atlas is not None and labelled is not atlas
 
 
-def _started(survey: Survey, workers: int) -> SweepStarted:
+def _started(survey: Survey, workers: int, deadline_s: float | None = None) -> SweepStarted:
     tiles, nodes = len(survey.tiling), survey.config.grid.size
     return SweepStarted(
         title=survey.config.title,
@@ -250,28 +254,35 @@ def _started(survey: Survey, workers: int) -> SweepStarted:
         tiles_done=tiles - survey.pending.size,
         nodes=nodes,
         nodes_done=nodes - survey.pending_nodes,
+        until=_local_time(deadline_s),
+        until_in_s=0.0 if deadline_s is None else deadline_s - time.time(),
     )
 
 
+def _local_time(since_epoch_s: float | None) -> datetime | None:
+    """A moment by the local clock, with its offset from UTC."""
+    return None if since_epoch_s is None else datetime.fromtimestamp(since_epoch_s).astimezone()
+
+
 def _compute_all(
-    survey: Survey, spec: SweepSpec, workers: int, gate: Gate, ears: Listener
+    survey: Survey, spec: SweepSpec, workers: int, gate: Gate, listener: Listener
 ) -> Tally:
     tally = Tally()
     before = _started(survey, workers)
     first_tile = time.perf_counter()
 
     def on_outcome(outcome: Outcome) -> None:
-        outcome = _settled(survey, spec, outcome)
+        outcome = _brought_to_disk(survey, spec, outcome)
         if isinstance(outcome, TileResult):
             gate.learn(outcome.seconds)
             tally.add(outcome, time.perf_counter() - first_tile)
-            ears.notify(_stored(before, tally, outcome))
+            listener.notify(_stored(before, tally, outcome))
         elif isinstance(outcome, TileFailure):
             tally.failures.append(outcome)
             gate.close("failed")
         if gate.reason and not tally.told:
             tally.told = True
-            ears.notify(SweepStopping(gate.reason))
+            listener.notify(SweepStopping(gate.reason))
 
     with interrupts_close(gate), suppress(KeyboardInterrupt):
         execute(
@@ -282,13 +293,13 @@ def _compute_all(
     return tally
 
 
-def _settled(survey: Survey, spec: SweepSpec, outcome: Outcome) -> Outcome:
+def _brought_to_disk(survey: Survey, spec: SweepSpec, outcome: Outcome) -> Outcome:
     """Bring a stored tile to the disk; one that does not get there is dropped and has failed."""
     if not isinstance(outcome, TileResult):
         return outcome
     try:
         for measure in outcome.measures:
-            spec.objects.settle(measure, outcome.index)
+            spec.objects.flush(measure, outcome.index)
     except OSError as cause:
         for measure in outcome.measures:
             spec.objects.drop(measure, outcome.index)

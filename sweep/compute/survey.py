@@ -18,7 +18,7 @@ from sweep.identity import atlas_id
 from sweep.store.atlas import StoredAtlas
 from sweep.store.shards import ShardFormat, TileObjects
 from sweep.store.shelf import Shelf
-from sweep.store.tiles import check_tile_shape, choose_tile_shape
+from sweep.store.tiles import MANY_TILES, check_tile_shape, choose_tile_shape, shape_text
 from sweep.vocabulary import MEASURES
 
 
@@ -80,9 +80,16 @@ class Survey:
 def survey_sweep(
     config: Config, shelf_folder: Path, tile_shape: tuple[int, ...] | None = None
 ) -> Survey:
-    """Compare a config with the shelf: one walk over the names of the stored objects."""
+    """Compare a config with the shelf: one walk over the names of the stored objects.
+
+    Raises
+    ------
+    QuestionError
+        When the shelf is a file, or the tile shape does not fit the grid.
+    """
     identity = atlas_id(config.structure, config.grid)
     shelf = Shelf(shelf_folder)
+    shelf.check()
     atlas = shelf.find_by_id(identity)
     if atlas is None:
         chosen = choose_tile_shape(config.grid)
@@ -90,7 +97,8 @@ def survey_sweep(
         tiling = Tiling(config.grid.shape, shape)
         missing = {name: np.ones(tiling.counts, np.bool_) for name in config.measures}
         path = shelf.place_for(config.title, identity)
-        return Survey(config, identity, None, path, ShardFormat.for_tile(shape), missing)
+        shards, notes = ShardFormat.for_tile(shape), _many_tiles(len(tiling), config.grid, chosen)
+        return Survey(config, identity, None, path, shards, missing, notes)
     _check_measure_versions(config, atlas)
     missing = {name: ~atlas.done_mask(name) for name in config.measures}
     notes = _kept_shape(atlas, tile_shape, config.grid)
@@ -114,7 +122,17 @@ def _kept_shape(
     wanted, kept = check_tile_shape(tile_shape, grid), atlas.tiling.tile_shape
     if wanted == kept:
         return ()
-    return (f"the atlas keeps the tile shape {kept} that it was made with; {wanted} was asked for",)
+    text = f"the atlas keeps the tile shape {shape_text(kept)} that it was made with; "
+    return (f"{text}{shape_text(wanted)} was asked for",)
+
+
+def _many_tiles(tiles: int, grid: Grid, chosen: tuple[int, ...]) -> tuple[str, ...]:
+    """A word about a tile shape that makes many times the tiles of the usual one."""
+    usual = len(Tiling(grid.shape, chosen))
+    if tiles <= MANY_TILES or tiles < 10 * usual:
+        return ()
+    text = f"this tile shape cuts the grid into {tiles:,} tiles, each a file for every measure; "
+    return (f"{text}{shape_text(chosen)} makes {usual:,} and runs faster",)
 
 
 def _check_measure_versions(config: Config, atlas: StoredAtlas) -> None:

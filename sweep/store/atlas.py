@@ -1,4 +1,4 @@
-"""One atlas on disk: made, opened, read, and filled tile by tile."""
+"""One atlas on disk: made, opened, read, and relabelled."""
 
 from __future__ import annotations
 
@@ -16,7 +16,6 @@ from numpy.typing import NDArray
 
 from sweep.config import Config
 from sweep.errors import DamagedAtlas, QuestionError, SweepError
-from sweep.grid import Tile
 from sweep.identity import PROGRAM_VERSION
 from sweep.store.arrays import Objects, group_objects, open_arrays, open_dataset
 from sweep.store.layout import (
@@ -113,33 +112,9 @@ class StoredAtlas(AtlasContents):
         return mask
 
     @property
-    def done_share(self) -> float:
-        """Share of the tiles, 0 to 1, that hold every stored measure."""
-        return float(self.tiles_done().mean())
-
-    @property
     def complete(self) -> bool:
         """Whether every tile holds every stored measure."""
         return bool(self.tiles_done().all())
-
-    def write_tile(self, tile: Tile, values: Mapping[str, Measured]) -> int:
-        """Store the measures of one tile; returns the bytes written.
-
-        Raises
-        ------
-        ValueError
-            When a shape is not the tile's: a tile is written whole or not at all.
-        """
-        for name, block in values.items():
-            if block.shape != tile.shape or tile != self.tiling.tile(tile.index):
-                raise ValueError(f"{name} has shape {block.shape}; {tile} has {tile.shape}")
-        return sum(self.objects.write(tile, name, block) for name, block in values.items())
-
-    def drop_tile(self, index: tuple[int, ...], measures: Iterable[str] | None = None) -> None:
-        """Forget a tile of some measures (all when left out), so that the next run computes it."""
-        names = [spec.name for spec in self.measures] if measures is None else measures
-        for name in names:
-            self.objects.drop(name, index)
 
     def add_measures(self, config: Config) -> StoredAtlas:
         """Make room for those measures of ``config`` that the atlas does not hold yet."""
@@ -264,7 +239,7 @@ def open_stored(path: Path | str) -> StoredAtlas:
     return StoredAtlas(path=folder, **known)
 
 
-def read_card(folder: Path) -> Mapping[str, Any] | None:
+def read_cover(folder: Path) -> Mapping[str, Any] | None:
     """The attributes of the group at ``folder``, or `None` when it is no atlas at all."""
     path = folder / "zarr.json"
     try:
@@ -280,7 +255,7 @@ def read_card(folder: Path) -> Mapping[str, Any] | None:
 
 
 def _read_attributes(folder: Path) -> Mapping[str, Any]:
-    attributes = read_card(folder)
+    attributes = read_cover(folder)
     if attributes is None:
         found = "no such folder" if not folder.exists() else "something else"
         raise QuestionError(
@@ -320,12 +295,12 @@ def _differs(path: Path, data: bytes) -> bool:
         stored = path.read_bytes()
         if path.name != "zarr.json" or stored == data:
             return stored != data
-        return _said(stored) != _said(data)
+        return _attributes_of(stored) != _attributes_of(data)
     except (FileNotFoundError, ValueError, KeyError, TypeError, AttributeError):
         return True
 
 
-def _said(data: bytes) -> tuple[Any, dict[str, Any]]:
+def _attributes_of(data: bytes) -> tuple[Any, dict[str, Any]]:
     """Attributes of a group or array, and of the arrays that a group repeats."""
     node = json.loads(data)
     members = node.get("consolidated_metadata", {}).get("metadata", {})
@@ -334,4 +309,6 @@ def _said(data: bytes) -> tuple[Any, dict[str, Any]]:
 
 def _one_line(cause: BaseException) -> str:
     text = " ".join(str(cause).split())
+    if "checksum" in text.lower():
+        return "the bytes do not fit their checksum"
     return text[:200] or type(cause).__name__

@@ -9,7 +9,7 @@ to the disk is decided here. The format is zarr's own (``sharding_indexed``, ind
 crc32c on every chunk and on the index) and everything is read back by zarr alone; a test compares
 what zarr reads with what was written.
 
-An object is published by rename, so that a killed process leaves whole objects only, and settled
+An object is published by rename, so that a killed process leaves whole objects only, and flushed
 (fsync) a moment later by the thread that waits for results: 1 to 3 ms of waiting in which the
 workers go on. A power cut between the two can leave the newest names without their bytes; the
 size and the checksums tell.
@@ -156,7 +156,7 @@ class TileObjects:
         publish(self.path(measure, tile.index), parts)
         return sum(map(len, parts))
 
-    def settle(self, measure: str, index: tuple[int, ...]) -> None:
+    def flush(self, measure: str, index: tuple[int, ...]) -> None:
         """Bring an object that was written to the disk, so that it outlives a power cut."""
         with suppress(FileNotFoundError), self.path(measure, index).open("rb+") as file:
             os.fsync(file.fileno())

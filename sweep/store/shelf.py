@@ -11,7 +11,7 @@ from pathlib import Path
 
 from sweep.config import Config
 from sweep.errors import DamagedAtlas, QuestionError
-from sweep.store.atlas import StoredAtlas, create_atlas, open_stored, read_card
+from sweep.store.atlas import StoredAtlas, create_atlas, open_stored, read_cover
 from sweep.store.layout import SHORT_ID, folder_name
 from sweep.store.shards import PARTIAL
 
@@ -47,11 +47,28 @@ class Shelf:
             return ()
         entries = []
         for path in sorted(self.folder.iterdir()):
-            card = None if PARTIAL.fullmatch(path.name) else read_card(path)
-            if card is not None:
-                title, identity = str(card.get("title", "")), str(card.get("atlas_id", ""))
+            cover = None if PARTIAL.fullmatch(path.name) else read_cover(path)
+            if cover is not None:
+                title, identity = str(cover.get("title", "")), str(cover.get("atlas_id", ""))
                 entries.append(ShelfEntry(path, title, identity))
         return tuple(entries)
+
+    def check(self) -> None:
+        """Make sure that the shelf is a folder, or can become one.
+
+        Raises
+        ------
+        QuestionError
+            When a file stands in its place, or in that of a folder above it.
+        """
+        above = (self.folder, *self.folder.absolute().parents)
+        standing = next(place for place in above if place.exists())
+        if not standing.is_dir():
+            raise QuestionError(
+                f"using {self.folder} as the shelf: expected a folder, found the file {standing}",
+                where=[str(standing)],
+                remedy="name a folder with --shelf; it need not exist yet",
+            )
 
     def find_by_id(self, atlas_id: str) -> StoredAtlas | None:
         """The atlas with this full id, opened; `None` when it is not here.
@@ -85,6 +102,7 @@ class Shelf:
         for path in (Path(text), self.folder / text):
             if str(text).strip() and _is_there(path / "zarr.json"):
                 return path
+        self.check()
         entries = self.list()
         wanted = str(text).strip().casefold()
         matches = [e for e in entries if wanted and wanted in _names(e)]
@@ -138,6 +156,20 @@ class Shelf:
     def _not_one(
         self, text: str, matches: Sequence[ShelfEntry], entries: Sequence[ShelfEntry]
     ) -> QuestionError:
+        if not matches and text.strip() and _is_there(Path(text)):
+            return QuestionError(
+                f"opening the atlas {text}: expected a folder that `sweep run` made, found "
+                f"{'another folder' if Path(text).is_dir() else 'a file'}",
+                where=[text],
+                remedy="give the folder of an atlas, usually results/NAME.zarr, or run its config",
+            )
+        if not self.folder.is_dir():
+            return QuestionError(
+                f"looking for the atlas {text!r} on the shelf {self.folder}: there is no such "
+                "folder",
+                where=[str(self.folder)],
+                remedy="say with --shelf where the atlases are, or run a config first",
+            )
         shown = (matches or entries)[:_MOST_CANDIDATES]
         listed = "; ".join(map(str, shown)) or "nothing"
         found = f"{len(matches)} atlases match" if matches else "no atlas matches"
@@ -153,7 +185,7 @@ class Shelf:
 
 def _is_there(path: Path) -> bool:
     try:
-        return path.is_file()
+        return path.exists()
     except (OSError, ValueError):
         return False  # a text that no path can be, such as a very long one
 

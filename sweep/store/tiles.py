@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Iterable
 
 from sweep.errors import QuestionError
 from sweep.grid import Grid, Tiling
@@ -19,6 +20,8 @@ MOST_NODES_IN_A_TILE = 2**26
 """Each worker holds a tile whole; this many are 256 MB per measure."""
 MOST_TILES = 100_000_000
 """Each is a file of its own, and nine bytes of a run's memory."""
+MANY_TILES = 100_000
+"""Past this many, names and fixed costs are felt; said when another shape makes far fewer."""
 MOST_CHUNKS_IN_A_TILE = 2**12
 """Chunks have a fixed cost; a tile with a large prime edge would fall into slivers."""
 
@@ -79,10 +82,11 @@ def check_tile_shape(tile_shape: tuple[int, ...], grid: Grid) -> tuple[int, ...]
         When it has another rank than the grid, a number below 1, too many nodes to be held, an
         edge that falls into slivers only, or would make too many tiles to keep count of.
     """
-    remedy = f"give a shape such as {','.join(map(str, choose_tile_shape(grid)))}"
+    asked = shape_text(tile_shape)
+    remedy = f"give a shape such as {shape_text(choose_tile_shape(grid))}"
     if len(tile_shape) != len(grid.shape) or min(tile_shape, default=0) < 1:
         raise QuestionError(
-            f"the tile shape {tile_shape} does not fit the grid: expected {len(grid.shape)} whole "
+            f"the tile shape {asked} does not fit the grid: expected {len(grid.shape)} whole "
             f"numbers of at least 1, one for each of the axes {', '.join(grid.names)}",
             remedy=remedy,
         )
@@ -90,24 +94,33 @@ def check_tile_shape(tile_shape: tuple[int, ...], grid: Grid) -> tuple[int, ...]
     nodes = math.prod(clipped)
     if nodes > MOST_NODES_IN_A_TILE:
         raise QuestionError(
-            f"the tile shape {tile_shape} has {nodes:,} nodes; at most {MOST_NODES_IN_A_TILE:,} "
+            f"the tile shape {asked} has {nodes:,} nodes; at most {MOST_NODES_IN_A_TILE:,} "
             "are allowed, since each worker holds one tile whole",
             remedy=remedy,
         )
     if nodes // math.prod(inner_chunk_shape(clipped)) > MOST_CHUNKS_IN_A_TILE:
         raise QuestionError(
-            f"the tile shape {tile_shape} cannot be cut into chunks of 64 to 256 kB: "
+            f"the tile shape {asked} cannot be cut into chunks of 64 to 256 kB: "
             "expected numbers with small divisors",
             remedy=remedy,
         )
     tiles = len(Tiling(grid.shape, clipped))
     if tiles > MOST_TILES:
         raise QuestionError(
-            f"the tile shape {tile_shape} cuts the grid into {tiles:,} tiles; at most "
+            f"the tile shape {asked} cuts the grid into {tiles:,} tiles; at most "
             f"{MOST_TILES:,} are allowed, since each is a file",
             remedy=remedy,
         )
     return clipped
+
+
+def shape_text(tile_shape: Iterable[int]) -> str:
+    """A tile shape as it is written on the command line.
+
+    >>> shape_text((16, 64, 8))
+    '16x64x8'
+    """
+    return "x".join(map(str, tile_shape))
 
 
 def _tile_budget(nodes: int) -> int:

@@ -8,6 +8,7 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from datetime import datetime
 from typing import Protocol, TextIO
 
 from rich.console import Console
@@ -86,6 +87,8 @@ class BarTeller:
             case SweepStarted():
                 self._nodes = event.nodes
                 self._show("compiling", event.nodes_done, "")
+                if event.until is not None:
+                    self._bar.console.print(until_text(event.until, event.until_in_s))
             case KernelsReady():
                 self._bar.update(self._task, description="computing")
             case TileStored():
@@ -123,9 +126,10 @@ class LineTeller:
                 self._nodes = event.nodes
                 if event.tiles_done < event.tiles:
                     left = event.tiles - event.tiles_done
+                    until = until_text(event.until, event.until_in_s) if event.until else ""
                     self._tell(
                         f"{printable(event.title)}: {left:,} of {event.tiles:,} tiles to compute, "
-                        f"{event.workers} at once"
+                        f"{event.workers} at once" + (f"; {until}" if until else "")
                     )
             case TileStored() if self._clock() - self._told >= LINE_EVERY_S:
                 share = event.nodes_done / max(1, self._nodes)
@@ -145,6 +149,15 @@ class LineTeller:
             self._stream.flush()
         except BrokenPipeError:
             self._stream = None
+
+
+def until_text(until: datetime, ahead_s: float) -> str:
+    """When a run stops.
+
+    >>> until_text(datetime(2031, 3, 5, 6, 30), 33_120.0)
+    'stops by 06:30, in 9 h 12 min'
+    """
+    return f"stops by {until:%H:%M}, in {seconds_text(ahead_s)}"
 
 
 def pace_text(event: TileStored, nodes: int) -> str:

@@ -31,6 +31,8 @@ from sweep.views.sheet import (
     title_line,
 )
 
+_TAKEN_OVER = "The config's title, labels, designs and cases were taken over"
+
 
 def plan_view(document: Mapping[str, Any], grid: Grid, title: str) -> RenderableType:
     """What running a config would take.
@@ -69,10 +71,14 @@ def run_view(document: Mapping[str, Any]) -> RenderableType:
     computed, done = document["nodes_computed"], document["tiles_done"]
     if computed == 0 and done == document["tiles"]:
         first = "Nothing to do: every node is on the shelf already."
+        if document.get("relabelled"):
+            first = f"Nothing to compute: every node is on the shelf already. {_TAKEN_OVER}."
     elif done == document["tiles"]:
         first = "Done: every node is computed."
     else:
         first = "Stopped in good order; run the same command again to go on."
+    if computed and document.get("relabelled"):
+        first += f" {_TAKEN_OVER}."
     facts = [
         ("atlas", str(document["atlas"])),
         ("tiles", f"{done:,} of {document['tiles']:,} done"),
