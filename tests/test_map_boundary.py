@@ -197,6 +197,6 @@ def test_without_a_limit_there_is_no_line(value):
 def test_a_plane_of_forty_thousand_nodes_is_answered_within_seconds():
     kp, kd = axis("kp", np.linspace(0, 1, 200)), axis("kd", np.linspace(0, 1, 200))
     values = np.sin(20 * kp.coordinates)[:, None] * np.sin(23 * kd.coordinates)[None] - 0.1
-    start = time.monotonic()
+    start = time.process_time()
     assert len(atlas([kp, kd], values).plane("kp", "kd").boundary) > 1000
-    assert time.monotonic() - start < 6.0
+    assert time.process_time() - start < 6.0
