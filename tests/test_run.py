@@ -14,6 +14,7 @@ import pytest
 import stand_in
 
 from sweep.compute import plan as planning
+from sweep.compute import survey as surveying
 from sweep.compute.gate import Gate, next_occurrence_s
 from sweep.compute.progress import (
     KernelsReady,
@@ -437,3 +438,10 @@ def test_a_probed_tile_is_not_stored(tmp_path):
     result = compute_tile(task, survey.spec(stand_in.compute), store=False)
     assert result.bytes > 0
     assert list(tmp_path.iterdir()) == []
+
+
+def test_a_run_notes_a_tile_shape_that_makes_very_many_tiles_and_goes_on(tmp_path, monkeypatch):
+    monkeypatch.setattr(surveying, "MANY_TILES", 50)
+    report = run(stand_in.flat(40, 30), tmp_path, tile_shape=(4, 4))
+    assert report.complete
+    assert [note for note in report.notes if "80 tiles" in note]

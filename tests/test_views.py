@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import io
 from dataclasses import replace
+from datetime import datetime
 from pathlib import Path
 from types import SimpleNamespace
 
@@ -379,7 +380,7 @@ def test_a_terminal_gets_a_bar_and_a_file_gets_lines():
     for stream in (screen, paper):
         with progress_listener(stream) as listener:
             for event in (
-                STARTED,
+                replace(STARTED, until=datetime(2031, 3, 5, 6, 30), until_in_s=33_120.0),  # noqa: DTZ001
                 KernelsReady(3.0),
                 stored(4),
                 SweepStopping("until"),
@@ -390,3 +391,5 @@ def test_a_terminal_gets_a_bar_and_a_file_gets_lines():
     assert "1,000 nodes" in screen.getvalue()
     assert "the time is up" in screen.getvalue()
     assert paper.getvalue().startswith("Bench: 10 of 10 tiles")
+    for stream in (screen, paper):
+        assert "stops by 06:30, in 9 h 12 min" in stream.getvalue()

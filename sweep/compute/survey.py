@@ -102,6 +102,8 @@ def survey_sweep(
     _check_measure_versions(config, atlas)
     missing = {name: ~atlas.done_mask(name) for name in config.measures}
     notes = _kept_shape(atlas, tile_shape, config.grid)
+    if tile_shape is not None and not notes:
+        notes = _many_tiles(len(atlas.tiling), config.grid, choose_tile_shape(config.grid))
     return Survey(config, identity, atlas, atlas.path, atlas.shards, missing, notes)
 
 
