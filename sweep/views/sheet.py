@@ -171,7 +171,8 @@ def rests_on(nodes: int, unknown: int) -> Text:
     text = f"rests on {nodes:,} nodes"
     if unknown:
         return line(
-            f"{text}, {unknown:,} of them unknown (not computed yet); run its config again to compute them",
+            f"{text}, {unknown:,} of them unknown (not computed yet); "
+            "run its config again to compute them",
             "yellow",
         )
     return line(text)
