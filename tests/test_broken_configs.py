@@ -345,3 +345,10 @@ def test_any_value_in_any_place_gives_a_config_or_a_list_of_mistakes(data):
         if not document:
             break
     assert all(one.found and one.expected and one.remedy for one in find_problems(document))
+
+
+def test_a_null_in_a_stored_config_is_refused_where_it_stands():
+    document = tomllib.loads(BASE)
+    name = next(iter(document["axes"]))
+    document["axes"][name]["count"] = None
+    assert [one.path for one in find_problems(document)] == [f"axes.{name}.count"]

@@ -167,6 +167,10 @@ def _check_values(document: Document, source: str) -> None:
             for key, item in items:
                 if isinstance(item, dict | list):
                     below.append(((*path, key), item))
+                elif item is None:
+                    # JSON has a null and TOML has none: no later step expects it
+                    place = key_path(*path, key)
+                    findings.add(place, describe(item), "a value", "leave the key out")
                 elif isinstance(item, int) and item.bit_length() > _MAX_BITS:
                     remedy = "give a number of magnitude below 1e300"
                     expected = "a finite number that double precision can hold"
