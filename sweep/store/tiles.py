@@ -12,7 +12,7 @@ NODES_PER_INNER_CHUNK = 2**15
 """Float32 nodes in an inner chunk: 128 kB; decoding one costs a reader a fixed 0.1 to 0.5 ms."""
 MOST_NODES_PER_INNER_CHUNK = 2**16
 """256 kB; a point read decodes one whole inner chunk."""
-SMALLEST_TILE, USUAL_TILE, LARGEST_TILE = 2**16, 2**18, 2**20
+SMALLEST_TILE, USUAL_TILE, LARGEST_TILE = 2**16, 2**19, 2**20
 """Nodes in a tile that is chosen: what `kill -9` loses, against the fixed cost of a tile."""
 LONGEST_GAIN_RUN = 128
 """Nodes; the kernel walks along a gain axis, and past this a longer walk gains nothing."""
