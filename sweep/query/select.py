@@ -293,7 +293,7 @@ def gain_changes_structure(grid: Grid, axis: Axis) -> tuple[int, ...]:
 
 def _has_filter(grid: Grid) -> bool:
     path = "controller.derivative_filter"
-    swept = [axis.values_of(path).max() for axis in grid.axes if path in axis.sets]
+    swept = [float(axis.values_of(path).max()) for axis in grid.axes if path in axis.sets]
     return max([*swept, *(item.value for item in grid.fixed if item.path == path), 0.0]) > 0.0
 
 
