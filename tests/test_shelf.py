@@ -2,6 +2,7 @@
 
 import dataclasses
 import threading
+from pathlib import Path
 
 import pytest
 import stand_in
@@ -40,6 +41,21 @@ def test_an_atlas_is_found_by_its_id_whatever_its_folder_is_called(shelf):
     shelf.find_by_id(identity(config)).path.rename(moved)
     assert shelf.find_by_id(identity(config)).path == moved
     assert put(shelf, config).path == moved
+
+
+def test_an_atlas_that_another_run_publishes_at_the_last_moment_is_found(tmp_path, monkeypatch):
+    """The rival takes the name between the look at the folder and the renaming."""
+    config, shelf, rename = stand_in.flat(4, 3), Shelf(tmp_path / "shelf"), Path.rename
+
+    def late(partial, folder):
+        monkeypatch.setattr(Path, "rename", rename)
+        rivals.append(create_atlas(folder, config, config.grid.shape))
+        return rename(partial, folder)
+
+    rivals = []
+    monkeypatch.setattr(Path, "rename", late)
+    assert put(shelf, config).path == rivals[0].path
+    assert [path.name for path in shelf.folder.iterdir()] == [rivals[0].path.name]
 
 
 def test_nothing_is_found_on_a_shelf_that_does_not_exist(tmp_path):

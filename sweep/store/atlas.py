@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import errno
 import json
+import os
 import shutil
 import uuid
 from collections.abc import Iterable, Mapping, Sequence
@@ -34,6 +36,8 @@ if TYPE_CHECKING:
 
 _UNREADABLE = (ValueError, KeyError, TypeError, IndexError, AttributeError, RuntimeError, OSError)
 """What zarr, numpy and json raise when stored bytes are not what they should be."""
+_NAME_IS_TAKEN = {errno.EEXIST, errno.ENOTEMPTY, errno.ENOTDIR}
+"""How systems word it that a folder cannot be renamed to a name that is in use."""
 _MOST_METADATA_BYTES = 256 * 2**20
 """A group's metadata holds the config, tables of rows included, and is never near this."""
 
@@ -206,10 +210,12 @@ def create_atlas(folder: Path, config: Config, tile_shape: tuple[int, ...]) -> S
     try:
         write_new_folder(partial, objects)
         if folder.exists():
-            raise FileExistsError(folder)
-        partial.rename(folder)
-    except OSError:
+            raise FileExistsError(errno.EEXIST, os.strerror(errno.EEXIST), str(folder))
+        partial.rename(folder)  # refuses as well, should another run take the name just now
+    except OSError as cause:
         shutil.rmtree(partial, ignore_errors=True)
+        if cause.errno in _NAME_IS_TAKEN:
+            raise FileExistsError(errno.EEXIST, os.strerror(errno.EEXIST), str(folder)) from cause
         raise
     return open_stored(folder)
 
