@@ -1,0 +1,29 @@
+"""Answers: frozen records that print themselves for people and write themselves for programs."""
+
+from __future__ import annotations
+
+from sweep.query.answers.limits import (
+    CrossingKind,
+    End,
+    EndKind,
+    Interval,
+    LimitsAnswer,
+    LimitsRow,
+)
+from sweep.query.answers.plain import plain, show_value
+from sweep.query.answers.plane import Mark, PlaneAnswer
+from sweep.query.answers.point import PointAnswer
+
+__all__ = [
+    "CrossingKind",
+    "End",
+    "EndKind",
+    "Interval",
+    "LimitsAnswer",
+    "LimitsRow",
+    "Mark",
+    "PlaneAnswer",
+    "PointAnswer",
+    "plain",
+    "show_value",
+]
