@@ -2,10 +2,9 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any, Literal
+from typing import Any
 
 import numpy as np
 
@@ -14,10 +13,11 @@ from sweep.config.drafts import AxisDraft
 from sweep.config.findings import Findings, below, describe, key_path, listed, suggest
 from sweep.config.model import Case, Design, Range, Requirement
 from sweep.config.reading import check_name
+from sweep.config.requirement import read_requirement
 from sweep.config.shapes import CaseShape, MeasuresShape, check_shape
 from sweep.errors import QuantityError
 from sweep.grid import Axis
-from sweep.quantities import describe_unit, format_quantity, parse_quantity, to_float
+from sweep.quantities import format_quantity
 from sweep.vocabulary import ALWAYS_COMPUTED, DERIVED, MEASURES
 
 _BILLIONTH = 1e-9
@@ -239,34 +239,12 @@ def _read_requirements(
 ) -> tuple[Requirement, ...]:
     requirements = []
     for name, value in data.items():
-        requirement = parse_requirement(name, value, below(f"{place}.require", name), findings)
-        if requirement is not None:
-            requirements.append(requirement)
+        try:
+            requirements.append(read_requirement(name, value))
+        except QuantityError as error:
+            where = below(f"{place}.require", name)
+            findings.add(where, error.found, error.expected, error.remedy)
     return tuple(requirements)
-
-
-def parse_requirement(
-    name: str, value: object, place: str, findings: Findings
-) -> Requirement | None:
-    """Read one requirement such as ``max_decay_time`` = ``"80 ms"``; notes what is wrong."""
-    sense, _, quantity = name.partition("_")
-    spec = DERIVED.get(quantity) or MEASURES.get(quantity)
-    if sense not in ("max", "min") or spec is None:
-        names = [f"{s}_{q}" for q in (*DERIVED, *MEASURES) for s in ("max", "min")]
-        remedy = suggest(name, names) or "name a measure after max_ or min_"
-        findings.add(place, describe(name), f"a requirement: {listed(names)}", remedy)
-        return None
-    try:
-        limit = to_float(parse_quantity(value, spec.unit))
-    except QuantityError as error:
-        findings.add(place, error.found, error.expected, error.remedy)
-        return None
-    chosen: Literal["max", "min"] = "max" if sense == "max" else "min"
-    if quantity == "decay_time" and not (math.isfinite(limit) and limit > 0):
-        expected = f"{spec.long_name}: {describe_unit(spec.unit)}, above 0"
-        findings.add(place, describe(value), expected, "give a positive time")
-        return None
-    return Requirement(quantity, chosen, limit)
 
 
 def read_measures(
