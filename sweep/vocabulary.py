@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Literal
 
 
 @dataclass(frozen=True)
@@ -131,13 +132,17 @@ class MeasureSpec:
     """What it is, in the trade's words."""
     version: int = 1
     """Raised whenever the same node gives another value."""
+    better: Literal["low", "high", ""] = "low"
+    """Whether less or more of it is better; empty when neither is."""
 
 
 MEASURES: dict[str, MeasureSpec] = {
     measure.name: measure
     for measure in (
         MeasureSpec("log_radius", "1", "natural logarithm of the spectral radius"),
-        MeasureSpec("mode_angle", "rad", "argument of the dominant eigenvalue, per sample"),
+        MeasureSpec(
+            "mode_angle", "rad", "argument of the dominant eigenvalue, per sample", better=""
+        ),
     )
 }
 
@@ -155,7 +160,9 @@ DERIVED: dict[str, MeasureSpec] = {
     for measure in (
         MeasureSpec("radius", "1", "spectral radius"),
         MeasureSpec("decay_time", "s", "decay time constant, -T / log_radius"),
-        MeasureSpec("dominant_damping", "1", "damping ratio of the dominant eigenvalue"),
+        MeasureSpec(
+            "dominant_damping", "1", "damping ratio of the dominant eigenvalue", better="high"
+        ),
     )
 }
 """What follows from stored measures and coordinates, and may be named in a requirement."""

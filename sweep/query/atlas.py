@@ -17,6 +17,7 @@ from sweep.grid import Axis, Grid
 from sweep.query.answers import LimitsAnswer, Mark, PlaneAnswer, PointAnswer
 from sweep.query.boundary import find_boundary
 from sweep.query.cautions import AT_A_NODE, BETWEEN_NODES
+from sweep.query.derived import derive
 from sweep.query.facts import AtlasFacts, read_facts
 from sweep.query.limits import MOST_ROWS, find_limits, resolve_limits
 from sweep.query.select import (
@@ -339,43 +340,3 @@ class _Held:
     at: Mapping[str, Value]
     nominal: tuple[str, ...]
     moved: Mapping[str, float]
-
-
-def derive(log_radius: float, mode_angle_rad: float, period_s: float) -> dict[str, float]:
-    """What follows from the stored measures of one node.
-
-    Parameters
-    ----------
-    log_radius
-        Logarithm of the spectral radius; NaN when unknown.
-    mode_angle_rad
-        Argument of the dominant eigenvalue, rad per sample.
-    period_s
-        Sample period, s.
-
-    Returns
-    -------
-    ``radius``; ``decay_time`` in s, +inf when not stable; ``dominant_damping``, the damping ratio
-    of the dominant eigenvalue; ``hz``, the frequency of the dominant mode. All are NaN when the
-    measures are.
-
-    Examples
-    --------
-    >>> found = derive(-0.01, 0.1, 0.002)
-    >>> round(found["decay_time"], 12), round(found["hz"], 3)
-    (0.2, 7.958)
-    """
-    stable = log_radius < STABILITY_THRESHOLD
-    size = math.hypot(log_radius, mode_angle_rad)
-    return {
-        "radius": math.exp(log_radius),
-        "decay_time": math.nan
-        if math.isnan(log_radius)
-        else _decay_s(log_radius, period_s, stable),
-        "dominant_damping": -log_radius / size if size != 0 else 0.0,
-        "hz": abs(mode_angle_rad) / (2 * math.pi * period_s),
-    }
-
-
-def _decay_s(log_radius: float, period_s: float, stable: bool) -> float:
-    return -period_s / log_radius if stable else math.inf
