@@ -14,16 +14,17 @@ MODULES = sorted(PACKAGE.rglob("*.py"))
 
 STANDS_ON = {
     "errors": "",
+    "places": "",
     "quantities": "errors",
     "vocabulary": "errors quantities",
     "grid": "errors quantities vocabulary",
     "config": "errors quantities vocabulary grid",
     "identity": "errors quantities vocabulary grid config",
     "loop": "errors quantities vocabulary grid config identity",
-    "measures": "errors quantities vocabulary grid config identity loop",
+    "measures": "errors places quantities vocabulary grid config identity loop",
     "store": "errors quantities vocabulary grid config identity",
     "compute": "errors quantities vocabulary grid config identity loop measures store",
-    "query": "errors quantities vocabulary grid config identity store",
+    "query": "errors places quantities vocabulary grid config identity store",
     "views": "errors quantities vocabulary grid config identity store query",
     "cli": "errors quantities vocabulary grid config identity loop measures store compute query "
     "views",

@@ -13,6 +13,8 @@ import tempfile
 from pathlib import Path
 from types import ModuleType
 
+from sweep.places import user_cache
+
 _SOURCES = (
     "kernel_cache.py",
     "lanes.py",
@@ -28,8 +30,7 @@ def kernel_folder() -> Path:
     here = Path(__file__).parent
     text = b"".join((here / name).read_bytes() for name in _SOURCES)
     name = f"kernels-{hashlib.sha256(text).hexdigest()[:16]}"
-    user_cache = os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache"
-    folder = Path(user_cache) / "sampled-loop-atlas" / name
+    folder = user_cache() / name
     try:
         folder.mkdir(parents=True, exist_ok=True)
         with tempfile.TemporaryFile(dir=folder):
