@@ -1,0 +1,370 @@
+"""The largest axis-aligned box of nodes that all meet.
+
+A box is a slab along all axes but two, and a rectangle in the plane of those two. For one slab the
+nodes that meet throughout it make a plane, and the largest rectangle in the plane comes from one
+pass over its rows. Which slab is best is found by branch and bound: of all slabs that reach from
+somewhere in a..b to somewhere in c..d (b <= c), each contains b..c, so that its rectangle is no
+larger than that of b..c, and its length is at most d - a + 1. The product bounds the whole block of
+slabs; the most promising block is halved until it is one slab. With three axes there are n (n+1)/2
+slabs at most, n being the nodes of the shortest axis, so that even a mask of noise is searched
+exactly in seconds.
+
+References
+----------
+A. H. Land, A. G. Doig, An automatic method of solving discrete programming problems, Econometrica
+28 (1960), 497-520: branch and bound.
+"""
+
+from __future__ import annotations
+
+import heapq
+import itertools
+import math
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+BUDGET = 20_000
+"""Planes searched by default before a box over more than three axes is only bounded."""
+
+BATCH_BYTES = 1 << 22
+"""Planes are searched together, as many as fill this with two bytes per node."""
+
+Span = tuple[int, int, int, int]
+"""(a, b, c, d): slabs from a..b to c..d along one axis; with b > c, a = c and b = d, all within."""
+Block = tuple[Span, ...]
+"""A span for each axis outside the plane."""
+Mask = NDArray[np.bool_]
+Counts = NDArray[np.unsignedinteger]
+
+
+@dataclass(frozen=True)
+class Box:
+    """An axis-aligned box of nodes."""
+
+    low: tuple[int, ...]
+    """First node along each axis."""
+    high: tuple[int, ...]
+    """Last node along each axis; part of the box."""
+    nodes: int
+    """Nodes in the box."""
+    exact: bool
+    """Whether it is proven that no box holds more."""
+    at_most: int
+    """No box holds more nodes than this; ``nodes`` when ``exact``."""
+
+
+def find_largest_box(
+    meets: Mask,
+    *,
+    around: tuple[int, ...] | None = None,
+    single: Sequence[int] = (),
+    budget: int = BUDGET,
+) -> Box | None:
+    """The axis-aligned box of nodes that all meet and that holds the most nodes.
+
+    Parameters
+    ----------
+    meets
+        Any number of axes: whether each node meets.
+    around
+        Index of a node that the box must contain.
+    single
+        Positions of the axes along which the box holds exactly one node, such as unordered rows.
+    budget
+        Planes to search when more than three axes have several nodes among those that meet; with
+        up to three the search always ends with a proof.
+
+    Returns
+    -------
+    Of equal boxes the one whose lower corner, then whose upper corner, comes first in C order. When
+    the budget ran out it is the best box seen, ``at_most`` bounds what was not searched, and of
+    equal boxes another might come first. ``None`` where no node meets, or ``around`` does not.
+
+    Raises
+    ------
+    ValueError
+        When ``around`` is not a node of ``meets``, or ``single`` not a set of its axes.
+
+    Examples
+    --------
+    >>> find_largest_box(np.array([[True, True, False], [True, True, True]]))
+    Box(low=(0, 0), high=(1, 1), nodes=4, exact=True, at_most=4)
+    """
+    if not set(single) <= set(range(meets.ndim)):
+        raise ValueError(f"single axes {tuple(single)} expected within 0 to {meets.ndim - 1}")
+    if around is not None:
+        meets = _seen_from(meets, around, single)
+    ends = _ends(meets)
+    if ends is None:
+        return None
+    low, high = ends
+    trimmed = meets[tuple(slice(a, b + 1) for a, b in zip(low, high, strict=True))]
+    through = None if around is None else [p - a for p, a in zip(around, low, strict=True)]
+    search = _Search(trimmed, through, single)
+    search.run(budget if sum(n > 1 for n in trimmed.shape) > 3 else None)
+    first, last = search.first_box()
+    return Box(
+        tuple(int(a + i) for a, i in zip(low, first, strict=True)),
+        tuple(int(a + i) for a, i in zip(low, last, strict=True)),
+        search.most,
+        search.at_most == search.most,
+        search.at_most,
+    )
+
+
+def _seen_from(meets: Mask, node: tuple[int, ...], single: Sequence[int]) -> Mask:
+    """The nodes that span with ``node`` a box of meeting nodes.
+
+    A box within them and ``node`` span together a box within them as well, so the largest box
+    among them contains ``node`` without being asked to.
+    """
+    inside = len(node) == meets.ndim and all(
+        0 <= i < n for i, n in zip(node, meets.shape, strict=False)
+    )
+    if not inside:
+        raise ValueError(f"node {node} expected within a grid of {meets.shape}")
+    seen = meets.copy()
+    for axis, place in enumerate(node):
+        lines = np.moveaxis(seen, axis, 0)
+        np.logical_and.accumulate(lines[place:], axis=0, out=lines[place:])
+        backward = lines[place::-1]
+        np.logical_and.accumulate(backward, axis=0, out=backward)
+        if axis in single:
+            lines[:place] = lines[place + 1 :] = False
+    return seen
+
+
+def _ends(meets: Mask) -> tuple[list[int], list[int]] | None:
+    """First and last meeting node along each axis; ``None`` when there is none."""
+    if not meets.any():
+        return None
+    low, high = [], []
+    for axis in range(meets.ndim):
+        others = tuple(other for other in range(meets.ndim) if other != axis)
+        found = np.flatnonzero(meets.any(axis=others))
+        low.append(int(found[0]))
+        high.append(int(found[-1]))
+    return low, high
+
+
+class _Search:
+    """Branch and bound over the slabs of one mask; the plane is that of its two longest axes."""
+
+    def __init__(self, meets: Mask, through: Sequence[int] | None, single: Sequence[int]) -> None:
+        ranked = sorted(range(meets.ndim), key=lambda axis: (axis not in single, meets.shape[axis]))
+        free = [axis for axis in ranked if axis not in single]
+        self.plane = free[-2:]
+        self.outer = [axis for axis in ranked if axis not in self.plane]
+        self.single = [axis in single for axis in self.outer]
+        shape = [meets.shape[axis] for axis in self.outer]
+        area = [meets.shape[axis] for axis in self.plane]
+        area = [1] * (2 - len(area)) + area
+        self.ndim = meets.ndim
+        self.table = _count_failing(
+            meets.transpose(*self.outer, *self.plane).reshape(*shape, *area), len(shape)
+        )
+        self.batch = max(1, min(64, BATCH_BYTES // (2 * math.prod(area))))
+        self.most = 0
+        self.at_most = 0
+        self.searched = 0
+        self.best: list[Block] = []
+        self._heap: list[tuple[int, int, Block, int]] = []
+        places = [None if through is None else through[axis] for axis in self.outer]
+        self._root = tuple(
+            (0, n - 1, 0, n - 1) if p is None else (0, p, p, n - 1)
+            for n, p in zip(shape, places, strict=True)
+        )
+
+    def run(self, budget: int | None) -> None:
+        """Search until nothing unsearched can be as large as the best, or the budget is spent."""
+        self._try([self._root])
+        while self._promising() and (budget is None or self.searched < budget or not self.best):
+            fresh: list[Block] = []
+            for _ in range(self.batch):
+                if not self._promising():
+                    break
+                _, _, block, area = heapq.heappop(self._heap)
+                same: list[Block] = []
+                for part, is_fresh in _parts(block, self.single):
+                    (fresh if is_fresh else same).append(part)
+                self._wait(same, [area] * len(same))
+            self._try(fresh)
+        self.at_most = max(self.most, -self._heap[0][0] if self._heap else 0)
+
+    def first_box(self) -> tuple[tuple[int, ...], tuple[int, ...]]:
+        """Of the best boxes the one that comes first, as its first and its last node."""
+        found = min(self._first_of(chosen) for chosen in self._batches(self.best))
+        return tuple(found[: self.ndim]), tuple(found[self.ndim :])
+
+    def _promising(self) -> bool:
+        return bool(self._heap) and -self._heap[0][0] >= self.most
+
+    def _try(self, blocks: Sequence[Block]) -> None:
+        """Search the common slab of each block; as a box it may be the best."""
+        areas = self._rectangles(blocks)
+        for block, area in zip(blocks, areas, strict=True):
+            if all(b <= c for _, b, c, _ in block):
+                held = area * math.prod(c - b + 1 for _, b, c, _ in block)
+                if held > self.most:
+                    self.most, self.best = held, []
+                if held == self.most:
+                    self.best.append(tuple((b, b, c, c) for _, b, c, _ in block))
+        self._wait(blocks, areas)
+
+    def _wait(self, blocks: Sequence[Block], areas: Sequence[int]) -> None:
+        """Queue the blocks that are more than one slab, with a bound for all their boxes."""
+        for block, area in zip(blocks, areas, strict=True):
+            if all(a == b and c == d for a, b, c, d in block):
+                continue
+            bound = area * math.prod(
+                1 if one else d - a + 1
+                for (a, _, _, d), one in zip(block, self.single, strict=True)
+            )
+            if bound >= self.most:
+                heapq.heappush(self._heap, (-bound, -len(self._heap), block, area))
+
+    def _batches(self, blocks: Sequence[Block]) -> Iterator[Sequence[Block]]:
+        return (blocks[i : i + self.batch] for i in range(0, len(blocks), self.batch))
+
+    def _rectangles(self, blocks: Sequence[Block]) -> list[int]:
+        """The largest rectangle in the plane of each block."""
+        self.searched += len(blocks)
+        areas: list[int] = []
+        for chosen in self._batches(blocks):
+            best: Counts | int = 0
+            for height, width, _ in _walk(self._planes(chosen)):
+                best = np.maximum(best, height * width)
+            areas += np.max(best, axis=0).tolist()
+        return areas
+
+    def _planes(self, blocks: Sequence[Block]) -> Mask:
+        """Shape (rows, columns, blocks): nodes of the plane that a box of the block might hold."""
+        return np.stack([_plane(self.table, block) for block in blocks], axis=-1)
+
+    def _first_of(self, slabs: Sequence[Block]) -> list[int]:
+        """The first of all largest boxes in some slabs of the best: lower corner, upper corner."""
+        starts = np.array([[a for a, *_ in block] for block in slabs], dtype=np.intp)
+        stops = np.array([[d for *_, d in block] for block in slabs], dtype=np.intp)
+        areas = self.most // (stops - starts + 1).prod(axis=1, dtype=np.intp)
+        corners = []
+        for row, (height, width, left) in enumerate(_walk(self._planes(slabs))):
+            at = np.nonzero(height * width == areas)
+            corners.append(
+                np.stack(
+                    [
+                        at[1],
+                        row + 1 - height[at].astype(np.intp),
+                        np.full(len(at[1]), row),
+                        left[at],
+                        left[at].astype(np.intp) + width[at] - 1,
+                    ],
+                    axis=1,
+                )
+            )
+        found = np.concatenate(corners)
+        slab = found[:, 0]
+        ends = np.zeros((2, self.ndim, len(found)), dtype=np.intp)
+        ends[0, self.outer], ends[1, self.outer] = starts[slab].T, stops[slab].T
+        for position, axis in enumerate(reversed(self.plane)):
+            ends[:, axis] = found[:, 3 - 2 * position : 5 - 2 * position].T
+        keys = ends.reshape(2 * self.ndim, len(found))
+        return keys[:, np.lexsort(keys[::-1])[0]].tolist() if self.ndim else []
+
+
+def _count_failing(meets: Mask, outer: int) -> Counts:
+    """For each node of the plane, failing nodes before each place along the outer axes."""
+    size = math.prod(meets.shape[:outer])
+    kind = next(k for k in (np.uint8, np.uint16, np.uint32) if size <= np.iinfo(k).max)
+    table: Counts = np.zeros([n + (i < outer) for i, n in enumerate(meets.shape)], dtype=kind)
+    inner = table[(slice(1, None),) * outer]
+    np.logical_not(meets, out=inner, casting="unsafe")
+    for axis in range(outer):
+        np.cumsum(inner, axis=axis, dtype=kind, out=inner)
+    return table
+
+
+def _plane(table: Counts, block: Block) -> Mask:
+    """Nodes that meet throughout the common slab; along an open span, at some node of it.
+
+    With open spans the condition is a necessary one: as many meeting nodes as one slab needs.
+    """
+    ends = [(min(b, c), max(b, c) + 1) for _, b, c, _ in block]
+    size = math.prod(stop - start for start, stop in ends)
+    needed = math.prod(c - b + 1 for _, b, c, _ in block if b <= c)
+    failing = np.zeros(table.shape[len(block) :], dtype=table.dtype)
+    for corner in itertools.product((0, 1), repeat=len(block)):
+        counts = table[tuple(end[side] for end, side in zip(ends, corner, strict=True))]
+        step = np.add if (len(block) - sum(corner)) % 2 == 0 else np.subtract
+        step(failing, counts, out=failing)
+    return failing <= size - needed
+
+
+def _parts(block: Block, single: Sequence[bool]) -> Iterator[tuple[Block, bool]]:
+    """The block in parts, and of each whether its common slab is another than the block's."""
+    slack = [(b > c, (d - a + 1) / (1 if b > c else c - b + 1)) for a, b, c, d in block]
+    axis = slack.index(max(slack))
+    for span, fresh in _halves(block[axis], single[axis]):
+        yield (*block[:axis], span, *block[axis + 1 :]), fresh
+
+
+def _halves(span: Span, single: bool) -> Iterator[tuple[Span, bool]]:
+    a, b, c, d = span
+    if b > c:
+        m = (a + b) // 2
+        yield ((m, m, m, m) if single else (a, m, m, b)), True
+        if a < m:
+            yield (a, m - 1, a, m - 1), True
+        yield (m + 1, b, m + 1, b), True
+    elif b - a >= d - c:
+        m = (a + b) // 2
+        yield (a, m, c, d), True
+        yield (m + 1, b, c, d), False
+    else:
+        m = (c + d) // 2
+        yield (a, b, c, m), False
+        yield (a, b, m + 1, d), True
+
+
+def _walk(planes: Mask) -> Iterator[tuple[Counts, Counts, Counts]]:
+    """Row by row, the rectangle that hangs from each node as far up as its column is whole.
+
+    Every rectangle that cannot grow is among them: some column of it ends at its upper edge.
+
+    Parameters
+    ----------
+    planes
+        Shape (rows, columns, planes).
+
+    Yields
+    ------
+    Its height, its width and its first column, each of shape (columns, planes); the height is 0 at
+    a node that does not meet. The arrays are overwritten by the next row.
+    """
+    rows, columns, _ = planes.shape
+    kind = np.uint16 if (rows + 1) * (columns + 1) < 1 << 16 else np.uint32
+    whole = np.negative(planes.view(np.uint8).astype(kind))
+    left, right = _gaps(whole)
+    height, first, after = (np.zeros(planes.shape[1:], dtype=kind) for _ in range(3))
+    for row in range(rows):
+        np.maximum(first, left[row], out=first)
+        np.maximum(after, right[row], out=after)
+        height += 1
+        height &= whole[row]
+        yield height, columns - first - after, first
+        first &= whole[row]
+        after &= whole[row]
+
+
+def _gaps(whole: Counts) -> tuple[Counts, Counts]:
+    """Columns up to the nearest gap on the left, and on the right, of each node in its row."""
+    columns = whole.shape[1]
+    place = np.arange(1, columns + 1, dtype=whole.dtype)[:, None]
+    left, right = ~whole & place, ~whole & place[::-1]
+    for column in range(1, columns):
+        np.maximum(left[:, column], left[:, column - 1], out=left[:, column])
+    for column in range(columns - 2, -1, -1):
+        np.maximum(right[:, column], right[:, column + 1], out=right[:, column])
+    return left, right
