@@ -7,6 +7,7 @@ import os
 import pickle
 import subprocess
 import sys
+import zipfile
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 
@@ -20,6 +21,7 @@ import sweep.query.memo as memo_module
 from sweep.errors import InputError
 from sweep.places import user_cache
 from sweep.query.memo import Memo, array_text, text_array
+from sweep.query.memo_entry import HEAD_BYTES, MAGIC, digest
 
 ANSWER = {
     "worst": np.linspace(-1, 1, 300).reshape(3, 100).astype(np.float32),
@@ -106,7 +108,7 @@ def test_answers_of_another_program_or_layout_are_not_found(memo, monkeypatch):
     monkeypatch.setattr(memo_module, "_program", lambda: "another")
     assert memo.key({"q": 1}) != key
     monkeypatch.undo()
-    monkeypatch.setattr(memo_module, "_VERSION", 2)
+    monkeypatch.setattr(memo_module, "LAYOUT", 2)
     assert memo.key({"q": 1}) != key
 
 
@@ -132,7 +134,7 @@ def damages():
     yield "empty", lambda data: data[:0]
     yield "a foreign file", lambda data: b"notes of somebody else\n" * len(data)
     yield "something appended", lambda data: data + b"\0"
-    yield "a bare npz", lambda data: data[memo_module._HEAD_BYTES :]
+    yield "a bare npz", lambda data: data[HEAD_BYTES:]
     for cut in (1, 7, 8, 39, 40, 41, 200):
         yield f"cut to {cut}", lambda data, cut=cut: data[:cut]
     yield "the last byte gone", lambda data: data[:-1]
@@ -190,8 +192,8 @@ def planted_payloads(mark):
 
 def sealed(key, payload):
     """An entry that passes every checksum."""
-    file = io.BytesIO(bytes(memo_module._HEAD_BYTES) + payload)
-    return memo_module._MAGIC + memo_module._digest(file, key) + payload
+    file = io.BytesIO(bytes(HEAD_BYTES) + payload)
+    return MAGIC + digest(file, key) + payload
 
 
 def test_a_planted_pickle_is_never_loaded(memo, tmp_path):
@@ -213,7 +215,7 @@ def test_a_sealed_entry_of_other_things_is_removed(memo):
     np.save(array, np.arange(3))
     key, path = kept(memo)
     zipped = io.BytesIO()
-    with memo_module.zipfile.ZipFile(zipped, "w") as file:
+    with zipfile.ZipFile(zipped, "w") as file:
         file.writestr("letter.txt", "hello")
     for payload in (array.getvalue(), zipped.getvalue(), b"", b"PK\x03\x04 and no more"):
         path.write_bytes(sealed(key, payload))

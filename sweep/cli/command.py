@@ -29,7 +29,7 @@ class Command:
     name: str
     """What is typed."""
     group: str
-    """What one wants with it: make, look or decide."""
+    """What one wants with it: make, look, decide or keep."""
     summary: str
     """One line for the list of commands."""
     description: str

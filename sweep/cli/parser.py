@@ -7,15 +7,21 @@ import shutil
 import textwrap
 from collections.abc import Sequence
 
-from sweep.cli import decide, look, make
+from sweep.cli import decide, keep, look, make
 from sweep.cli.command import Command, Parser
 
-COMMANDS: tuple[Command, ...] = (*make.COMMANDS, *look.COMMANDS, *decide.COMMANDS)
+COMMANDS: tuple[Command, ...] = (
+    *make.COMMANDS,
+    *look.COMMANDS,
+    *decide.COMMANDS,
+    *keep.COMMANDS,
+)
 
 GROUPS = {
     "make": "make an atlas",
     "look": "look into one",
     "decide": "decide with it",
+    "keep": "keep what you have",
 }
 """What one wants, in the order of a working week."""
 

@@ -1,11 +1,7 @@
 """Answers kept on disk, so that the same question of the same tiles is reduced only once.
 
-A *memo* is a folder in the user's cache, never in an atlas. One file is one entry, named after its
-key::
-
-    8 bytes   what it is, and the version of this layout
-    32 bytes  SHA-256 of the key and of all that follows
-    the rest  arrays as numpy.savez writes them, not compressed
+A *memo* is a folder in the user's cache, never in an atlas; one file is one entry, named after
+its key, as `sweep.query.memo_entry` writes it.
 
 The key is a SHA-256 of the question, of the stored tiles that it rests on (`fingerprint`) and of
 the program that answered it: an entry that is found is right, however old it is. What is damaged,
@@ -19,18 +15,14 @@ whole, by rename, and two who make the same one make equal ones.
 from __future__ import annotations
 
 import hashlib
-import hmac
 import os
 import re
 import time
 import uuid
-import zipfile
-import zlib
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import suppress
 from dataclasses import dataclass
 from functools import cache
-from io import BufferedRandom, BufferedReader
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -40,33 +32,18 @@ from numpy.typing import NDArray
 from sweep.errors import InputError
 from sweep.identity import PROGRAM_VERSION, canonical_text
 from sweep.places import user_cache
+from sweep.query.memo_entry import LAYOUT, Arrays, read_entry, write_entry
 
 if TYPE_CHECKING:
     from sweep.store.atlas import StoredAtlas
 
-Arrays = dict[str, NDArray[Any]]
-
 DEFAULT_LIMIT_BYTES = 10**9
 """What a memo may hold when nobody says otherwise."""
 
-_VERSION = 1
-_MAGIC = b"sweepm" + _VERSION.to_bytes(2, "little")
-_HEAD_BYTES = len(_MAGIC) + hashlib.sha256().digest_size
 _ENTRY = re.compile(r"[0-9a-f]{64}\.memo")
 _PARTIAL = re.compile(r"[0-9a-f]{64}\.[0-9a-f]{32}\.partial")
 _LEFTOVER_SECONDS = 3600.0
 _ANSWERING = ("query", "store", "grid.py", "vocabulary.py")
-_UNREADABLE = (
-    ValueError,
-    EOFError,
-    KeyError,
-    NotImplementedError,
-    MemoryError,
-    RuntimeError,
-    zipfile.BadZipFile,
-    zlib.error,
-)
-"""What reading arrays raises on bytes that `numpy.savez` did not write."""
 
 
 @dataclass(frozen=True)
@@ -139,7 +116,7 @@ class Memo:
         ValueError, TypeError
             For what `sweep.identity.canonical_text` cannot write, such as NaN.
         """
-        whole = {"memo": _VERSION, "program": _program(), "question": question}
+        whole = {"memo": LAYOUT, "program": _program(), "question": question}
         return hashlib.sha256(canonical_text(whole).encode()).hexdigest()
 
     def get(self, key: str) -> Arrays | None:
@@ -153,7 +130,7 @@ class Memo:
         path = self._path(key)
         try:
             with path.open("rb") as file:
-                arrays = _read_entry(file, key)
+                arrays = read_entry(file, key)
         except OSError:
             return None
         with suppress(OSError):
@@ -191,7 +168,7 @@ class Memo:
         try:
             self.folder.mkdir(parents=True, exist_ok=True)
             with partial.open("x+b") as file:
-                size = _write_entry(file, key, arrays)
+                size = write_entry(file, key, arrays)
             if 4 * size <= self.limit_bytes:
                 partial.replace(self._path(key))
         except OSError:
@@ -333,43 +310,6 @@ def text_array(text: str) -> NDArray[np.uint8]:
 def array_text(array: NDArray[Any]) -> str:
     """The text that `text_array` made into an array."""
     return array.tobytes().decode()
-
-
-def _write_entry(file: BufferedRandom, key: str, arrays: Mapping[str, NDArray[Any]]) -> int:
-    """Write head and arrays; returns the size in bytes."""
-    file.write(bytes(_HEAD_BYTES))
-    np.savez(file, allow_pickle=False, **arrays)
-    size = file.seek(0, os.SEEK_END)
-    head = _MAGIC + _digest(file, key)
-    file.seek(0)
-    file.write(head)
-    return size
-
-
-def _read_entry(file: BufferedReader, key: str) -> Arrays | None:
-    """The arrays of an entry; `None` unless every byte is as it was written under this key.
-
-    The bytes are hashed where they lie and then read straight into the arrays: a large entry takes
-    its own size in memory, once.
-    """
-    head = file.read(_HEAD_BYTES)
-    if head[: len(_MAGIC)] != _MAGIC:
-        return None
-    if not hmac.compare_digest(head[len(_MAGIC) :], _digest(file, key)):
-        return None
-    file.seek(_HEAD_BYTES)
-    try:
-        with np.load(file, allow_pickle=False) as opened:
-            arrays = {name: opened[name] for name in opened.files}
-    except _UNREADABLE:
-        return None
-    return arrays if all(isinstance(array, np.ndarray) for array in arrays.values()) else None
-
-
-def _digest(file: BufferedRandom | BufferedReader, key: str) -> bytes:
-    """SHA-256 of the key and of the file from behind its head to its end."""
-    file.seek(_HEAD_BYTES)
-    return hashlib.file_digest(file, lambda: hashlib.sha256(key.encode())).digest()
 
 
 def _scan(folder: Path, name: re.Pattern[str]) -> Iterator[_Kept]:
