@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 import math
+import time
 
 import hypothesis.extra.numpy as hnp
 import numpy as np
@@ -73,6 +74,95 @@ def test_a_spent_budget_leaves_a_box_that_meets_and_a_bound_that_holds(question,
     assert found.nodes == nodes_in(zip(found.low, found.high, strict=True))
     assert found.nodes <= wanted[0] <= found.at_most
     assert found.exact == (found.nodes == found.at_most)
+
+
+def banded_mask(shape, seed=0):
+    """Like a sampled loop's stable region: bands that fold, islands, ragged edges, specks."""
+    rng = np.random.default_rng(seed)
+    period = np.linspace(0.05, 1, shape[0])[:, None, None]
+    gain = np.linspace(0, 1, shape[1])[:, None]
+    slope = np.linspace(0, 1, shape[2])
+    fold = np.cos(6.4 * np.pi * period) + 0.4 * np.sin(9 * period * (1 + gain))
+    level = slope * (0.6 + 0.5 * fold) - 0.75 * gain * period * (1 + 0.5 * fold)
+    level += 0.12 - 0.45 * slope**2 * period * (1.6 + fold)
+    meets = level + 0.005 * rng.standard_normal(shape) > 0.02
+    for _ in range(int(meets.size**0.25)):
+        reach = int(rng.integers(1, 6))
+        middle = [int(rng.integers(n)) for n in shape]
+        meets[tuple(slice(max(0, at - reach), at + reach) for at in middle)] ^= True
+    return meets & (rng.random(shape) > 1e-4)
+
+
+def largest_by_sums(meets):
+    """Nodes in the largest box of three axes, from the sums of all boxes."""
+    sums = np.zeros([n + 1 for n in meets.shape], dtype=int)
+    sums[1:, 1:, 1:] = meets.cumsum(0).cumsum(1).cumsum(2)
+    for axis in range(3):
+        first, last = np.triu_indices(sums.shape[axis], 1)
+        sums = np.take(sums, last, axis) - np.take(sums, first, axis)
+    lengths = [np.subtract(*np.triu_indices(n + 1, 1)[::-1]) for n in meets.shape]
+    size = lengths[0][:, None, None] * lengths[1][:, None] * lengths[2]
+    return int(size[sums == size].max(initial=0))
+
+
+@pytest.mark.parametrize("seed", range(12))
+def test_bands_islands_and_ragged_edges_give_what_the_sums_of_all_boxes_give(seed):
+    shape = [(13, 14, 12), (9, 11, 20), (24, 9, 7)][seed % 3]
+    meets = banded_mask(shape, seed) if seed < 8 else random_mask(shape, seed)
+    found = find_largest_box(meets)
+    assert meets[within(found.low, found.high)].all()
+    assert found.nodes == largest_by_sums(meets)
+
+
+def random_mask(shape, seed):
+    rng = np.random.default_rng(seed)
+    return rng.random(shape) < [0.5, 0.9, 0.99, 0.999][seed % 4]
+
+
+def test_the_order_of_the_axes_changes_nothing_but_which_of_equal_boxes_comes_first():
+    meets = banded_mask((30, 31, 25), 3)
+    nodes = {
+        find_largest_box(meets.transpose(order)).nodes for order in itertools.permutations(range(3))
+    }
+    assert len(nodes) == 1
+
+
+def test_three_axes_are_searched_to_the_end_whatever_the_budget():
+    assert find_largest_box(banded_mask((30, 31, 25), 4), budget=0).exact
+
+
+def test_a_mask_of_real_size_is_searched_to_the_end(capsys):
+    meets = banded_mask((198, 201, 161))
+    start = time.thread_time()
+    found = find_largest_box(meets)
+    spent = time.thread_time() - start
+    with capsys.disabled():
+        print(f"\n{meets.shape}: {spent:.2f} s, largest box {found.nodes} nodes")
+    assert found.exact
+    assert meets[within(found.low, found.high)].all()
+    around = np.pad(meets, 1)
+    for axis, beside in itertools.product(range(3), (-1, 1)):
+        face = list(within(np.add(found.low, 1), np.add(found.high, 1)))
+        face[axis] = found.low[axis] if beside < 0 else found.high[axis] + 2
+        assert not around[tuple(face)].all()
+
+
+def test_a_count_of_256_failing_nodes_is_not_taken_for_none():
+    meets = np.ones((16, 17, 20, 20), dtype=bool)
+    meets[:, :16, 5, 5] = False
+    found = find_largest_box(meets)
+    assert (found.low, found.high) == ((0, 0, 6, 0), (15, 16, 19, 19))
+
+
+@pytest.mark.parametrize("shape", [(254, 256), (255, 255), (256, 256), (300, 1, 300), (70_000,)])
+def test_an_area_above_two_bytes_is_counted_in_full(shape):
+    assert find_largest_box(np.ones(shape, dtype=bool)).nodes == math.prod(shape)
+
+
+def test_positions_may_be_numpy_numbers():
+    found = find_largest_box(np.ones((2, 3), dtype=bool), around=tuple(np.array([1, 2])))
+    assert {type(i) for i in (*found.low, *found.high, found.nodes, found.at_most)} == {int}
+    assert type(found.exact) is bool
 
 
 def test_nothing_that_meets_has_no_box():

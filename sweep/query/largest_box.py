@@ -29,8 +29,10 @@ from numpy.typing import NDArray
 BUDGET = 20_000
 """Planes searched by default before a box over more than three axes is only bounded."""
 
-BATCH_BYTES = 1 << 22
-"""Planes are searched together, as many as fill this with two bytes per node."""
+MOST_TOGETHER = 64
+"""Planes searched in one pass, which spreads its fixed cost."""
+BATCH_NODES = 1 << 21
+"""Nodes of all the planes in one pass, which bounds its memory to some 20 MB."""
 
 Span = tuple[int, int, int, int]
 """(a, b, c, d): slabs from a..b to c..d along one axis; with b > c, a = c and b = d, all within."""
@@ -102,7 +104,7 @@ def find_largest_box(
         return None
     low, high = ends
     trimmed = meets[tuple(slice(a, b + 1) for a, b in zip(low, high, strict=True))]
-    through = None if around is None else [p - a for p, a in zip(around, low, strict=True)]
+    through = None if around is None else [int(p) - a for p, a in zip(around, low, strict=True)]
     search = _Search(trimmed, through, single)
     search.run(budget if sum(n > 1 for n in trimmed.shape) > 3 else None)
     first, last = search.first_box()
@@ -155,44 +157,48 @@ class _Search:
 
     def __init__(self, meets: Mask, through: Sequence[int] | None, single: Sequence[int]) -> None:
         ranked = sorted(range(meets.ndim), key=lambda axis: (axis not in single, meets.shape[axis]))
-        free = [axis for axis in ranked if axis not in single]
-        self.plane = free[-2:]
+        self.ndim = meets.ndim
+        self.plane = [axis for axis in ranked if axis not in single][-2:]
         self.outer = [axis for axis in ranked if axis not in self.plane]
         self.single = [axis in single for axis in self.outer]
-        shape = [meets.shape[axis] for axis in self.outer]
-        area = [meets.shape[axis] for axis in self.plane]
-        area = [1] * (2 - len(area)) + area
-        self.ndim = meets.ndim
-        self.table = _count_failing(
-            meets.transpose(*self.outer, *self.plane).reshape(*shape, *area), len(shape)
-        )
-        self.batch = max(1, min(64, BATCH_BYTES // (2 * math.prod(area))))
-        self.most = 0
-        self.at_most = 0
+        self.table = _count_failing(meets.transpose(*self.outer, *self.plane), len(self.outer))
+        area = math.prod(self.table.shape[len(self.outer) :])
+        self.together = max(1, min(MOST_TOGETHER, BATCH_NODES // area))
         self.searched = 0
+        self.most = 0
         self.best: list[Block] = []
-        self._heap: list[tuple[int, int, Block, int]] = []
-        places = [None if through is None else through[axis] for axis in self.outer]
-        self._root = tuple(
-            (0, n - 1, 0, n - 1) if p is None else (0, p, p, n - 1)
-            for n, p in zip(shape, places, strict=True)
+        self.waiting: list[tuple[int, Block, int]] = []
+        self.root = tuple(
+            (0, meets.shape[axis] - 1, 0, meets.shape[axis] - 1)
+            if through is None
+            else (0, through[axis], through[axis], meets.shape[axis] - 1)
+            for axis in self.outer
         )
+
+    @property
+    def at_most(self) -> int:
+        """No box holds more nodes."""
+        return max(self.most, -self.waiting[0][0] if self.waiting else 0)
 
     def run(self, budget: int | None) -> None:
         """Search until nothing unsearched can be as large as the best, or the budget is spent."""
-        self._try([self._root])
+        self._try([self.root])
         while self._promising() and (budget is None or self.searched < budget or not self.best):
-            fresh: list[Block] = []
-            for _ in range(self.batch):
-                if not self._promising():
-                    break
-                _, _, block, area = heapq.heappop(self._heap)
-                same: list[Block] = []
-                for part, is_fresh in _parts(block, self.single):
-                    (fresh if is_fresh else same).append(part)
-                self._wait(same, [area] * len(same))
-            self._try(fresh)
-        self.at_most = max(self.most, -self._heap[0][0] if self._heap else 0)
+            self._try(self._halve_first())
+
+    def _halve_first(self) -> list[Block]:
+        """Halve the most promising blocks; those of the parts whose common slab is a new one."""
+        fresh: list[Block] = []
+        for _ in range(self.together):
+            if not self._promising():
+                break
+            _, block, area = heapq.heappop(self.waiting)
+            for part, is_fresh in _parts(block, self.single):
+                if is_fresh:
+                    fresh.append(part)
+                else:
+                    self._wait(part, area)
+        return fresh
 
     def first_box(self) -> tuple[tuple[int, ...], tuple[int, ...]]:
         """Of the best boxes the one that comes first, as its first and its last node."""
@@ -200,87 +206,82 @@ class _Search:
         return tuple(found[: self.ndim]), tuple(found[self.ndim :])
 
     def _promising(self) -> bool:
-        return bool(self._heap) and -self._heap[0][0] >= self.most
+        return bool(self.waiting) and -self.waiting[0][0] >= self.most
 
     def _try(self, blocks: Sequence[Block]) -> None:
         """Search the common slab of each block; as a box it may be the best."""
-        areas = self._rectangles(blocks)
+        self.searched += len(blocks)
+        areas = itertools.chain.from_iterable(map(self._areas, self._batches(blocks)))
         for block, area in zip(blocks, areas, strict=True):
-            if all(b <= c for _, b, c, _ in block):
-                held = area * math.prod(c - b + 1 for _, b, c, _ in block)
-                if held > self.most:
-                    self.most, self.best = held, []
-                if held == self.most:
+            if not any(_is_open(span) for span in block):
+                nodes = area * math.prod(c - b + 1 for _, b, c, _ in block)
+                if nodes > self.most:
+                    self.most, self.best = nodes, []
+                if nodes == self.most:
                     self.best.append(tuple((b, b, c, c) for _, b, c, _ in block))
-        self._wait(blocks, areas)
+            self._wait(block, area)
 
-    def _wait(self, blocks: Sequence[Block], areas: Sequence[int]) -> None:
-        """Queue the blocks that are more than one slab, with a bound for all their boxes."""
-        for block, area in zip(blocks, areas, strict=True):
-            if all(a == b and c == d for a, b, c, d in block):
-                continue
-            bound = area * math.prod(
-                1 if one else d - a + 1
-                for (a, _, _, d), one in zip(block, self.single, strict=True)
-            )
-            if bound >= self.most:
-                heapq.heappush(self._heap, (-bound, -len(self._heap), block, area))
+    def _wait(self, block: Block, area: int) -> None:
+        """Queue a block of more than one slab, with a bound for all its boxes."""
+        if all(a == b and c == d for a, b, c, d in block):
+            return
+        lengths = (
+            1 if one else d - a + 1 for (a, _, _, d), one in zip(block, self.single, strict=True)
+        )
+        bound = area * math.prod(lengths)
+        if bound >= self.most:
+            heapq.heappush(self.waiting, (-bound, block, area))
 
     def _batches(self, blocks: Sequence[Block]) -> Iterator[Sequence[Block]]:
-        return (blocks[i : i + self.batch] for i in range(0, len(blocks), self.batch))
-
-    def _rectangles(self, blocks: Sequence[Block]) -> list[int]:
-        """The largest rectangle in the plane of each block."""
-        self.searched += len(blocks)
-        areas: list[int] = []
-        for chosen in self._batches(blocks):
-            best: Counts | int = 0
-            for height, width, _ in _walk(self._planes(chosen)):
-                best = np.maximum(best, height * width)
-            areas += np.max(best, axis=0).tolist()
-        return areas
+        return (blocks[i : i + self.together] for i in range(0, len(blocks), self.together))
 
     def _planes(self, blocks: Sequence[Block]) -> Mask:
         """Shape (rows, columns, blocks): nodes of the plane that a box of the block might hold."""
         return np.stack([_plane(self.table, block) for block in blocks], axis=-1)
 
+    def _areas(self, blocks: Sequence[Block]) -> list[int]:
+        """The largest rectangle in the plane of each block."""
+        best: Counts | int = 0
+        for height, width, _ in _hang(self._planes(blocks)):
+            best = np.maximum(best, height * width)
+        return [int(area) for area in np.max(best, axis=0)]
+
     def _first_of(self, slabs: Sequence[Block]) -> list[int]:
         """The first of all largest boxes in some slabs of the best: lower corner, upper corner."""
-        starts = np.array([[a for a, *_ in block] for block in slabs], dtype=np.intp)
-        stops = np.array([[d for *_, d in block] for block in slabs], dtype=np.intp)
-        areas = self.most // (stops - starts + 1).prod(axis=1, dtype=np.intp)
-        corners = []
-        for row, (height, width, left) in enumerate(_walk(self._planes(slabs))):
-            at = np.nonzero(height * width == areas)
-            corners.append(
-                np.stack(
-                    [
-                        at[1],
-                        row + 1 - height[at].astype(np.intp),
-                        np.full(len(at[1]), row),
-                        left[at],
-                        left[at].astype(np.intp) + width[at] - 1,
-                    ],
-                    axis=1,
-                )
-            )
-        found = np.concatenate(corners)
-        slab = found[:, 0]
-        ends = np.zeros((2, self.ndim, len(found)), dtype=np.intp)
-        ends[0, self.outer], ends[1, self.outer] = starts[slab].T, stops[slab].T
-        for position, axis in enumerate(reversed(self.plane)):
-            ends[:, axis] = found[:, 3 - 2 * position : 5 - 2 * position].T
-        keys = ends.reshape(2 * self.ndim, len(found))
-        return keys[:, np.lexsort(keys[::-1])[0]].tolist() if self.ndim else []
+        ends = np.array(
+            [([a for a, *_ in slab], [d for *_, d in slab]) for slab in slabs], dtype=np.intp
+        )
+        areas = self.most // (ends[:, 1] - ends[:, 0] + 1).prod(axis=1, dtype=np.intp)
+        place, rectangles = _find_rectangles(self._planes(slabs), areas)
+        corners = np.empty((len(place), 2, self.ndim), dtype=np.intp)
+        corners[:, :, self.outer] = ends[place]
+        corners[:, :, self.plane] = rectangles[:, :, 2 - len(self.plane) :]
+        keys = corners.reshape(len(place), 2 * self.ndim)
+        return min(keys.tolist())
 
 
 def _count_failing(meets: Mask, outer: int) -> Counts:
-    """For each node of the plane, failing nodes before each place along the outer axes."""
-    size = math.prod(meets.shape[:outer])
-    kind = next(k for k in (np.uint8, np.uint16, np.uint32) if size <= np.iinfo(k).max)
-    table: Counts = np.zeros([n + (i < outer) for i, n in enumerate(meets.shape)], dtype=kind)
+    """For each node of the plane, failing nodes before each place along the outer axes.
+
+    Parameters
+    ----------
+    meets
+        The outer axes first, then up to two axes of the plane.
+    outer
+        How many axes are outer ones.
+
+    Returns
+    -------
+    One place more along each outer axis, and a plane of two axes.
+    """
+    shape, missing = meets.shape, 2 + outer - meets.ndim
+    size = math.prod(shape[:outer])
+    kind = next(k for k in (np.uint8, np.uint16, np.uint32, np.uint64) if size <= np.iinfo(k).max)
+    table: Counts = np.zeros(
+        (*(n + 1 for n in shape[:outer]), *([1] * missing), *shape[outer:]), dtype=kind
+    )
     inner = table[(slice(1, None),) * outer]
-    np.logical_not(meets, out=inner, casting="unsafe")
+    np.logical_not(meets.reshape(inner.shape), out=inner, casting="unsafe")
     for axis in range(outer):
         np.cumsum(inner, axis=axis, dtype=kind, out=inner)
     return table
@@ -302,17 +303,23 @@ def _plane(table: Counts, block: Block) -> Mask:
     return failing <= size - needed
 
 
+def _is_open(span: Span) -> bool:
+    """Whether its slabs have no part in common."""
+    _, b, c, _ = span
+    return b > c
+
+
 def _parts(block: Block, single: Sequence[bool]) -> Iterator[tuple[Block, bool]]:
     """The block in parts, and of each whether its common slab is another than the block's."""
-    slack = [(b > c, (d - a + 1) / (1 if b > c else c - b + 1)) for a, b, c, d in block]
+    slack = [(b > c, (d - a + 1) / max(1, c - b + 1)) for a, b, c, d in block]
     axis = slack.index(max(slack))
-    for span, fresh in _halves(block[axis], single[axis]):
-        yield (*block[:axis], span, *block[axis + 1 :]), fresh
+    for span, is_fresh in _halves(block[axis], single[axis]):
+        yield (*block[:axis], span, *block[axis + 1 :]), is_fresh
 
 
 def _halves(span: Span, single: bool) -> Iterator[tuple[Span, bool]]:
     a, b, c, d = span
-    if b > c:
+    if _is_open(span):
         m = (a + b) // 2
         yield ((m, m, m, m) if single else (a, m, m, b)), True
         if a < m:
@@ -328,7 +335,34 @@ def _halves(span: Span, single: bool) -> Iterator[tuple[Span, bool]]:
         yield (a, b, m + 1, d), True
 
 
-def _walk(planes: Mask) -> Iterator[tuple[Counts, Counts, Counts]]:
+def _find_rectangles(
+    planes: Mask, areas: NDArray[np.intp]
+) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
+    """Every rectangle of a plane's largest area.
+
+    Parameters
+    ----------
+    planes
+        Shape (rows, columns, planes).
+    areas
+        Shape (planes,): nodes of the largest rectangle of each plane.
+
+    Returns
+    -------
+    For each rectangle, some of them named more than once, its plane, shape (n,), and its corners,
+    shape (n, 2, 2): first and last node along rows and columns.
+    """
+    found, corners = [], []
+    for row, (height, width, before) in enumerate(_hang(planes)):
+        at = np.nonzero(height * width == areas)
+        high, wide, left = (part[at].astype(np.intp) for part in (height, width, before))
+        found.append(at[1])
+        last = np.full_like(high, row)
+        corners.append(np.stack([last + 1 - high, left, last, left + wide - 1], axis=1))
+    return np.concatenate(found), np.concatenate(corners).reshape(-1, 2, 2)
+
+
+def _hang(planes: Mask) -> Iterator[tuple[Counts, Counts, Counts]]:
     """Row by row, the rectangle that hangs from each node as far up as its column is whole.
 
     Every rectangle that cannot grow is among them: some column of it ends at its upper edge.
@@ -340,21 +374,21 @@ def _walk(planes: Mask) -> Iterator[tuple[Counts, Counts, Counts]]:
 
     Yields
     ------
-    Its height, its width and its first column, each of shape (columns, planes); the height is 0 at
-    a node that does not meet. The arrays are overwritten by the next row.
+    Its height, its width and the columns before it, each of shape (columns, planes); the height is
+    0 at a node that does not meet. The first and the last are overwritten for the next row.
     """
     rows, columns, _ = planes.shape
     kind = np.uint16 if (rows + 1) * (columns + 1) < 1 << 16 else np.uint32
     whole = np.negative(planes.view(np.uint8).astype(kind))
     left, right = _gaps(whole)
-    height, first, after = (np.zeros(planes.shape[1:], dtype=kind) for _ in range(3))
+    height, before, after = (np.zeros(planes.shape[1:], dtype=kind) for _ in range(3))
     for row in range(rows):
-        np.maximum(first, left[row], out=first)
+        np.maximum(before, left[row], out=before)
         np.maximum(after, right[row], out=after)
         height += 1
         height &= whole[row]
-        yield height, columns - first - after, first
-        first &= whole[row]
+        yield height, columns - before - after, before
+        before &= whole[row]
         after &= whole[row]
 
 
