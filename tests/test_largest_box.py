@@ -151,7 +151,7 @@ def test_a_count_of_256_failing_nodes_is_not_taken_for_none():
     meets = np.ones((16, 17, 20, 20), dtype=bool)
     meets[:, :16, 5, 5] = False
     found = find_largest_box(meets)
-    assert (found.low, found.high) == ((0, 0, 6, 0), (15, 16, 19, 19))
+    assert (found.low, found.high) == ((0, 0, 0, 6), (15, 16, 19, 19))
 
 
 @pytest.mark.parametrize("shape", [(254, 256), (255, 255), (256, 256), (300, 1, 300), (70_000,)])
