@@ -75,7 +75,7 @@ def find_crossing(
     x: FloatArray,
     f: FloatArray,
     angle: FloatArray,
-    which: NDArray[np.int64],
+    which: NDArray[np.integer],
     cell: int,
     threshold: float,
 ) -> float:
@@ -143,7 +143,7 @@ class _Branches:
     """Shape (n,), log_radius."""
     angle: FloatArray
     """Shape (n,), rad; NaN where unknown, which is taken to continue any branch."""
-    which: NDArray[np.int64]
+    which: NDArray[np.integer]
     """Shape (n,), the worst tolerance node."""
 
     def join(self, a: int, b: int) -> bool:

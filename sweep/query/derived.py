@@ -49,7 +49,9 @@ def _decay_time(measures: Mapping[str, Block], period_s: Block) -> Block:
 
 def _dominant_damping(measures: Mapping[str, Block], _period_s: Block) -> Block:
     log_radius = measures["log_radius"].astype(np.float64)
-    size = np.hypot(log_radius, measures["mode_angle"].astype(np.float64))
+    angle = measures["mode_angle"].astype(np.float64)
+    # neither square can overflow or vanish: both numbers were float32
+    size = np.sqrt(log_radius * log_radius + angle * angle)
     ratio: Block = -log_radius / np.where(size == 0.0, 1.0, size)
     return ratio
 

@@ -15,21 +15,24 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from typing import TypeVar
 
 import numpy as np
+from numpy.typing import NDArray
 
 from sweep.errors import QuestionError
 from sweep.grid import Axis, Grid
 from sweep.query.answers import LimitsAnswer, LimitsRow
+from sweep.query.blocks import Indices, Readable, read_nodes
 from sweep.query.cautions import BETWEEN_NODES, OVER_A_BOX
-from sweep.query.reduce import Indices, Readable, WorstLines, read_nodes, worst_over_box
+from sweep.query.extremes import Extreme, find_extremes
+from sweep.query.scope import Scope, box_ends, box_span, check_one_purpose, fixed_span
 from sweep.query.select import (
     Asked,
     Span,
     Value,
     find_axis,
-    find_enclosing,
-    find_span,
     gain_changes_structure,
     one_value,
     read_value,
@@ -37,6 +40,8 @@ from sweep.query.select import (
     value_at,
 )
 from sweep.query.walk import LimitsQuestion, Walk
+
+Number = TypeVar("Number", np.float64, np.int32)
 
 MOST_ROWS = 200
 """Rows that an answer lists unless it is asked for more."""
@@ -65,7 +70,9 @@ def resolve_limits(
     _check_can_be_walked(axis)
     fixed, ranges = resolve_names(grid, at), resolve_names(grid, over)
     listed = tuple(find_axis(grid, name).name for name in each)
-    _check_one_purpose(axis.name, fixed, ranges, listed)
+    check_one_purpose(
+        [("--along", (axis.name,)), ("--at", fixed), ("--over", ranges), ("--each", listed)]
+    )
     spans: list[Indices] = []
     box: list[int] = []
     between: dict[str, float] = {}
@@ -76,12 +83,12 @@ def resolve_limits(
         span = Span(everything)
         if other.name in fixed:
             name, asked = fixed[other.name]
-            span = _fixed_span(grid, other, one_value(other.name, asked), name)
+            span = fixed_span(grid, other, name, asked)
             if span.widened:
                 between[other.name] = read_value(other, one_value(other.name, asked), name)
                 box.append(position)
         elif other.name in ranges:
-            span = _box_span(other, *ranges[other.name])
+            span = box_span(other, *ranges[other.name])
             box.append(position)
             widened += [other.name] * span.widened
         elif other.name == axis.name or other.name in listed:
@@ -138,7 +145,10 @@ def find_limits(
         rows=tuple(rows[:most_rows]),
         rows_in_all=math.prod(sizes),
         listed=listed,
-        over={grid.axes[axis].name: _box_ends(question, axis) for axis in tolerances},
+        over={
+            grid.axes[axis].name: box_ends(grid.axes[axis], question.spans[axis])
+            for axis in tolerances
+        },
         widened=question.widened,
         bracketed={
             name: _pair(grid.axis(name), question.spans[grid.names.index(name)])
@@ -158,52 +168,6 @@ def _check_can_be_walked(axis: Axis) -> None:
             remedy=f"list its rows with --each {axis.name}, or say `ordered = true` in the config "
             "where neighbours mean something",
         )
-
-
-def _check_one_purpose(
-    along: str, fixed: Mapping[str, object], ranges: Mapping[str, object], listed: Sequence[str]
-) -> None:
-    purposes = [("--along", (along,)), ("--at", fixed), ("--over", ranges), ("--each", listed)]
-    seen: dict[str, str] = {}
-    for option, names in purposes:
-        for name in names:
-            if name in seen:
-                raise QuestionError(
-                    f"asking about {name}: it is named by {seen[name]} and by {option}",
-                    where=[name],
-                    remedy="name it for one purpose",
-                )
-            seen[name] = option
-
-
-def _fixed_span(grid: Grid, axis: Axis, asked: float | str, name: str) -> Span:
-    span = find_enclosing(axis, asked, name=name)
-    breaks = set(gain_changes_structure(grid, axis)) if span.widened else set()
-    if breaks.intersection(span.nodes):
-        raise QuestionError(
-            f"fixing {axis.name} = {asked}: it lies between nodes, and at the one where "
-            f"{axis.name} is 0 the term is absent, which says nothing about its neighbours",
-            where=[axis.name],
-            remedy=f"ask at a node, or sweep {axis.name} more finely",
-        )
-    return span
-
-
-def _box_span(axis: Axis, name: str, asked: Asked) -> Span:
-    if axis.role != "tolerance":
-        raise QuestionError(
-            f"taking the worst over {axis.name}: it is a design axis, which the engineer chooses",
-            where=[axis.name],
-            remedy=f"fix it with --at {axis.name}=VALUE or list it with --each {axis.name}",
-        )
-    return find_span(axis, asked, name=name)
-
-
-def _box_ends(question: LimitsQuestion, position: int) -> tuple[Value, ...]:
-    axis, nodes = question.grid.axes[position], question.spans[position]
-    if axis.is_row_axis:
-        return tuple(value_at(axis, int(node)) for node in nodes)
-    return _pair(axis, nodes)
 
 
 def _pair(axis: Axis, nodes: Indices) -> tuple[Value, Value]:
@@ -229,7 +193,7 @@ def _rows(stored: Readable, question: LimitsQuestion, cut: tuple[slice, ...]) ->
     spans = list(question.spans)
     for axis, part in zip(question.rest, cut, strict=True):
         spans[axis] = spans[axis][part]
-    lines = worst_over_box(stored, "log_radius", spans, question.along, question.box)
+    lines = _worst_lines(stored, question, spans)
     shape = [len(spans[axis]) for axis in question.rest]
     places = [np.unravel_index(row, shape) for row in range(len(lines.worst))]
     picked = [
@@ -239,8 +203,41 @@ def _rows(stored: Readable, question: LimitsQuestion, cut: tuple[slice, ...]) ->
     return _lines_to_rows(stored, question, lines, picked)
 
 
+@dataclass(frozen=True)
+class _WorstLines:
+    """The worst case over the box along every line; shape (rows, n)."""
+
+    worst: NDArray[np.float64]
+    """Largest log_radius; NaN where a node of the box is unknown."""
+    which: NDArray[np.int32]
+    """Flat index into the box of the node where it is reached."""
+    unknown: NDArray[np.int32]
+    """Unknown nodes in the box."""
+
+
+def _worst_lines(
+    stored: Readable, question: LimitsQuestion, spans: Sequence[Indices]
+) -> _WorstLines:
+    scope = Scope(question.grid, tuple(spans), question.box, {})
+    largest = Extreme("log_radius", "max")
+    (found,) = find_extremes(stored, scope, [largest])
+    along = scope.free.index(question.along)
+    worst = found.worst[largest].astype(np.float64)
+    worst[found.unknown > 0] = np.nan
+    return _WorstLines(
+        worst=_as_lines(worst, along),
+        which=_as_lines(found.which[largest], along),
+        unknown=_as_lines(found.unknown, along),
+    )
+
+
+def _as_lines(values: NDArray[Number], along: int) -> NDArray[Number]:
+    """An array over the designs as (rows, nodes along one of its axes)."""
+    return np.moveaxis(values, along, -1).reshape(-1, values.shape[along])
+
+
 def _lines_to_rows(
-    stored: Readable, question: LimitsQuestion, lines: WorstLines, picked: list[dict[int, int]]
+    stored: Readable, question: LimitsQuestion, lines: _WorstLines, picked: list[dict[int, int]]
 ) -> list[LimitsRow]:
     grid = question.grid
     axis = grid.axes[question.along]

@@ -11,8 +11,8 @@ from numpy.typing import NDArray
 
 from sweep.grid import Axis, Grid
 from sweep.query.answers import CrossingKind, End, EndKind, Interval
+from sweep.query.blocks import Indices
 from sweep.query.crossing import REACH, find_crossing, is_real
-from sweep.query.reduce import Indices
 from sweep.query.select import Value, value_at
 from sweep.vocabulary import STABILITY_THRESHOLD
 
@@ -62,7 +62,7 @@ class Walk:
     """Its nodes where a gain of exactly 0 changes the loop's structure."""
     worst: FloatArray
     """Shape (n,): largest log_radius over the box; NaN where unknown."""
-    which: NDArray[np.int64]
+    which: NDArray[np.integer]
     """Shape (n,): flat index into the box of the node where it is reached."""
     place: Mapping[int, int]
     """Node of every axis that is neither asked along nor in the box, by position."""
