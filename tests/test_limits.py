@@ -225,7 +225,8 @@ def test_only_the_rows_that_are_listed_are_read():
     assert sum(asked.stored.nodes_read) < 6 * len(x)
 
 
-def test_no_block_larger_than_a_tile_is_read_for_a_worst_case():
+def test_a_worst_case_reads_every_node_once_in_blocks_of_bounded_size(monkeypatch):
+    monkeypatch.setattr("sweep.query.blocks.NODES_AT_ONCE", 2 * 4 * 3)
     shape = (5, 11, 8)
     asked = atlas(
         [axis("gain", range(5)), axis("along", range(11)), axis("tol", range(8), role="tolerance")],
