@@ -77,11 +77,19 @@ def read_entry(file: BufferedReader, key: str) -> Arrays | None:
         return None
     file.seek(HEAD_BYTES)
     try:
-        with np.load(file, allow_pickle=False) as opened:
-            arrays = {name: opened[name] for name in opened.files}
+        return _read_arrays(file)
     except _UNREADABLE:
         return None
-    return arrays if all(isinstance(array, np.ndarray) for array in arrays.values()) else None
+
+
+def _read_arrays(file: BufferedReader) -> Arrays:
+    opened = np.load(file, allow_pickle=False)
+    if not isinstance(opened, np.lib.npyio.NpzFile):
+        raise zipfile.BadZipFile("one array where a set of them is expected")
+    arrays = {name: opened[name] for name in opened.files}
+    if not all(isinstance(array, np.ndarray) for array in arrays.values()):
+        raise zipfile.BadZipFile("a member that is no array")
+    return arrays
 
 
 def digest(file: BufferedRandom | BufferedReader, key: str) -> bytes:

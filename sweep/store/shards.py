@@ -188,10 +188,10 @@ class TileObjects:
         """
         facts = []
         for file in self._files(measure):
-            if self._index(file.name) is not None:
+            if _OBJECT.fullmatch(file.name):
                 # a tile may be dropped since its name was read
                 with suppress(FileNotFoundError):
-                    s = Path(file.path).stat()
+                    s = file.stat()
                     facts.append((file.name, s.st_size, s.st_ino, s.st_mtime_ns, s.st_ctime_ns))
         return hashlib.sha256(repr(sorted(facts)).encode()).hexdigest()
 
