@@ -50,7 +50,7 @@ CONFINED = {
     "pydantic": {"config"},
     "tomllib": {"config"},
     "xarray": {"store", "query", "views"},
-    "scipy": {"loop", "measures"},
+    "scipy": {"loop", "measures", "query"},
     "joblib": {"compute", "query"},
 }
 """Library -> the rooms that may know it."""

@@ -103,6 +103,45 @@ def add_place(parser: argparse.ArgumentParser, *, unnamed: str) -> None:
     )
 
 
+def add_over(parser: argparse.ArgumentParser) -> None:
+    """Declare ``--case`` and ``--over``: the tolerance box."""
+    parser.add_argument(
+        "--case",
+        metavar="NAME",
+        default="",
+        help="a case that is stored in the atlas: its tolerances, and what it requires; --over "
+        "and --require come on top of it",
+    )
+    parser.add_argument(
+        "--over",
+        metavar="AXIS=LOW:HIGH,...",
+        action="append",
+        default=[],
+        help="the tolerances to survive, such as damping=0.005:0.02,bus=0:0.5; tolerance axes that "
+        "are not named count over their full range; rows: unit=A,unit=B",
+    )
+
+
+def add_require(parser: argparse.ArgumentParser) -> None:
+    """Declare ``--require`` and ``--shake``: what a design must meet, and how far it may move."""
+    parser.add_argument(
+        "--require",
+        metavar="BOUND=VALUE,...",
+        action="append",
+        default=[],
+        help="bounds to meet, max_ or min_ before a measure, such as max_decay_time=80ms; being "
+        "stable is always required",
+    )
+    parser.add_argument(
+        "--shake",
+        metavar="AXIS=REACH,...",
+        action="append",
+        default=[],
+        help="how far design axes may move by themselves, such as kp=10%%,sample_period=2%%: the "
+        "worst neighbour counts",
+    )
+
+
 def add_nearest(parser: argparse.ArgumentParser) -> None:
     """Declare ``--nearest``."""
     parser.add_argument(

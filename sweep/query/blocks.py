@@ -23,6 +23,11 @@ class Readable(Protocol):
     """What a question needs of a stored atlas."""
 
     @property
+    def atlas_id(self) -> str:
+        """SHA-256 of everything that decides its numbers."""
+        ...
+
+    @property
     def grid(self) -> Grid:
         """Axes and fixed parameters."""
         ...

@@ -88,15 +88,43 @@ def find_extremes(
     QuestionError
         When there are more designs than can be held.
     """
+    plan = plan_reduction(scope, wanted)
+    reduced = reduce_boxes(stored, scope, list(dict.fromkeys(plan.values())), boxes)
+    return [derive_extremes(scope, plan, found) for found in reduced]
+
+
+def plan_reduction(scope: Scope, wanted: Iterable[Extreme]) -> dict[Extreme, Extreme]:
+    """What is wanted -> what is reduced for it: a stored measure where that comes to the same."""
+    return {item: _reduced_instead(item, scope) for item in dict.fromkeys(wanted)}
+
+
+def reduce_boxes(
+    stored: Readable,
+    scope: Scope,
+    reduced: Sequence[Extreme],
+    boxes: Sequence[Places] | None = None,
+) -> list[Extremes]:
+    """As `find_extremes`, for quantities that are reduced as they are."""
     _check_size(scope)
-    asked = list(dict.fromkeys(wanted))
-    plan = {extreme: _reduced_instead(extreme, scope) for extreme in asked}
-    work = _Work(stored, scope, list(dict.fromkeys(plan.values())), boxes)
+    work = _Work(stored, scope, reduced, boxes)
     totals = [_Total(scope, work.reduced) for _ in work.boxes]
     for part in _run(work.reduce, cut_by_tile(stored.tiling, scope.spans, scope.box)):
         for number, piece in part:
             totals[number].fold(piece)
-    return [_answer(scope, plan, total) for total in totals]
+    return [Extremes(total.worst, total.which, total.unknown) for total in totals]
+
+
+def derive_extremes(scope: Scope, plan: Mapping[Extreme, Extreme], found: Extremes) -> Extremes:
+    """What was reduced, turned into what was wanted; see `plan_reduction`."""
+    worst = {}
+    for wanted, reduced in plan.items():
+        values = found.worst[reduced]
+        if wanted != reduced:
+            period_s = design_period_s(scope) if FORMULAS[wanted.quantity].uses_period else _ONE
+            values = values_of(wanted.quantity, {reduced.quantity: values}, period_s)
+        worst[wanted] = values
+    which = {wanted: found.which[reduced] for wanted, reduced in plan.items()}
+    return Extremes(worst, which, found.unknown)
 
 
 def design_period_s(scope: Scope) -> NDArray[np.float64]:
@@ -157,7 +185,7 @@ class _Work:
         self,
         stored: Readable,
         scope: Scope,
-        reduced: list[Extreme],
+        reduced: Sequence[Extreme],
         boxes: Sequence[Places] | None,
     ) -> None:
         self.stored, self.scope, self.reduced = stored, scope, reduced
@@ -268,19 +296,6 @@ class _Total:
             np.copyto(held_id, found_id, where=worse)
         if piece.unknown is not None:
             self.unknown[piece.target] += piece.unknown
-
-
-def _answer(scope: Scope, plan: Mapping[Extreme, Extreme], total: _Total) -> Extremes:
-    """What was reduced, turned into what was wanted."""
-    worst = {}
-    for wanted, reduced in plan.items():
-        found = total.worst[reduced]
-        if wanted != reduced:
-            period_s = design_period_s(scope) if FORMULAS[wanted.quantity].uses_period else _ONE
-            found = values_of(wanted.quantity, {reduced.quantity: found}, period_s)
-        worst[wanted] = found
-    which = {wanted: total.which[reduced] for wanted, reduced in plan.items()}
-    return Extremes(worst, which, total.unknown)
 
 
 def _run(work: Callable[[Cut], _Parts], cuts: list[Cut]) -> Iterator[_Parts]:

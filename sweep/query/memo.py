@@ -24,7 +24,7 @@ from contextlib import suppress
 from dataclasses import dataclass
 from functools import cache
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -32,10 +32,8 @@ from numpy.typing import NDArray
 from sweep.errors import InputError
 from sweep.identity import PROGRAM_VERSION, canonical_text
 from sweep.places import user_cache
+from sweep.query.blocks import Readable
 from sweep.query.memo_entry import LAYOUT, Arrays, read_entry, write_entry
-
-if TYPE_CHECKING:
-    from sweep.store.atlas import StoredAtlas
 
 DEFAULT_LIMIT_BYTES = 10**9
 """What a memo may hold when nobody says otherwise."""
@@ -189,7 +187,7 @@ class Memo:
 
     def recall(
         self,
-        stored: StoredAtlas,
+        stored: Readable,
         measures: Sequence[str],
         question: Mapping[str, object],
         compute: Callable[[], Arrays],
@@ -272,7 +270,7 @@ class Memo:
             return []
 
 
-def fingerprint(stored: StoredAtlas, measures: Sequence[str]) -> str:
+def fingerprint(stored: Readable, measures: Sequence[str]) -> str:
     """What an answer rests on: the atlas's id and the stored objects of some measures.
 
     It changes when a tile is added, repaired or removed. It does not change with what the id leaves

@@ -49,6 +49,8 @@ class Scope:
     """Design axes fixed at a value; between two nodes it is the value asked."""
     bracketed: tuple[str, ...] = ()
     """Those of them that lie between two nodes."""
+    shaken: tuple[str, ...] = ()
+    """Those of them that take in neighbours, as far as they are shaken."""
     widened: tuple[str, ...] = ()
     """Tolerance axes with a bound between nodes, where the next node outward was taken in."""
 
@@ -60,7 +62,8 @@ class Scope:
     @property
     def tolerances(self) -> tuple[int, ...]:
         """Positions of the axes of the tolerance box."""
-        return tuple(i for i in self.box if self.grid.axes[i].name not in self.bracketed)
+        fixed = (*self.bracketed, *self.shaken)
+        return tuple(i for i in self.box if self.grid.axes[i].name not in fixed)
 
     @property
     def design_shape(self) -> tuple[int, ...]:
@@ -85,9 +88,9 @@ class Scope:
         }
 
     def brackets(self) -> dict[str, tuple[Value, Value]]:
-        """Design axes fixed between two nodes, with both."""
+        """Design axes fixed at a value that takes in several nodes, with the outermost two."""
         found = {}
-        for name in self.bracketed:
+        for name in (*self.bracketed, *self.shaken):
             axis, nodes = self.grid.axis(name), self.spans[self.grid.names.index(name)]
             found[name] = value_at(axis, int(nodes[0])), value_at(axis, int(nodes[-1]))
         return found
