@@ -122,6 +122,17 @@ def add_over(parser: argparse.ArgumentParser) -> None:
     )
 
 
+def add_within(parser: argparse.ArgumentParser) -> None:
+    """Declare ``--within``."""
+    parser.add_argument(
+        "--within",
+        metavar="AXIS=LOW:HIGH,...",
+        action="append",
+        default=[],
+        help="keep a design axis to a range, such as sample_period=5ms:10ms",
+    )
+
+
 def add_require(parser: argparse.ArgumentParser) -> None:
     """Declare ``--require`` and ``--shake``: what a design must meet, and how far it may move."""
     parser.add_argument(
