@@ -5,12 +5,14 @@ from __future__ import annotations
 import itertools
 import math
 import time
+from unittest import mock
 
 import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from sweep.query import largest_box
 from sweep.query.largest_box import find_largest_box
 
 
@@ -49,10 +51,11 @@ def questions(draw):
     return meets, around, tuple(sorted(single))
 
 
-@given(questions())
-def test_it_is_the_box_that_exhaustive_search_finds(question):
+@given(questions(), st.sampled_from([1, 2, 64]))
+def test_it_is_the_box_that_exhaustive_search_finds(question, together):
     meets, around, single = question
-    found = find_largest_box(meets, around=around, single=single)
+    with mock.patch.object(largest_box, "MOST_TOGETHER", together):
+        found = find_largest_box(meets, around=around, single=single)
     wanted = largest_by_trial(meets, around, single)
     if wanted is None:
         assert found is None

@@ -168,12 +168,14 @@ class _Search:
         self.most = 0
         self.best: list[Block] = []
         self.waiting: list[tuple[int, Block, int]] = []
-        self.root = tuple(
-            (0, meets.shape[axis] - 1, 0, meets.shape[axis] - 1)
-            if through is None
-            else (0, through[axis], through[axis], meets.shape[axis] - 1)
-            for axis in self.outer
-        )
+        last = [meets.shape[axis] - 1 for axis in self.outer]
+        if through is None:
+            self.root = tuple((0, n, 0, n) for n in last)
+        else:
+            self.root = tuple(
+                (0, through[axis], through[axis], n)
+                for axis, n in zip(self.outer, last, strict=True)
+            )
 
     @property
     def at_most(self) -> int:
@@ -225,10 +227,8 @@ class _Search:
         """Queue a block of more than one slab, with a bound for all its boxes."""
         if all(a == b and c == d for a, b, c, d in block):
             return
-        lengths = (
-            1 if one else d - a + 1 for (a, _, _, d), one in zip(block, self.single, strict=True)
-        )
-        bound = area * math.prod(lengths)
+        spans = zip(block, self.single, strict=True)
+        bound = area * math.prod(1 if one else d - a + 1 for (a, _, _, d), one in spans)
         if bound >= self.most:
             heapq.heappush(self.waiting, (-bound, block, area))
 
@@ -248,9 +248,7 @@ class _Search:
 
     def _first_of(self, slabs: Sequence[Block]) -> list[int]:
         """The first of all largest boxes in some slabs of the best: lower corner, upper corner."""
-        ends = np.array(
-            [([a for a, *_ in slab], [d for *_, d in slab]) for slab in slabs], dtype=np.intp
-        )
+        ends = np.array([([a for a, *_ in s], [d for *_, d in s]) for s in slabs], dtype=np.intp)
         areas = self.most // (ends[:, 1] - ends[:, 0] + 1).prod(axis=1, dtype=np.intp)
         place, rectangles = _find_rectangles(self._planes(slabs), areas)
         corners = np.empty((len(place), 2, self.ndim), dtype=np.intp)
