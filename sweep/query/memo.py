@@ -220,6 +220,17 @@ class Memo:
                 self.put(key, arrays)
         return arrays
 
+    def recall_text(
+        self,
+        stored: Readable,
+        measures: Sequence[str],
+        question: Mapping[str, object],
+        compute: Callable[[], str],
+    ) -> str:
+        """As `recall`, for an answer that is a text."""
+        arrays = self.recall(stored, measures, question, lambda: {"text": text_array(compute())})
+        return array_text(arrays["text"])
+
     def clear(self) -> tuple[int, int]:
         """Remove every entry; returns how many there were and their bytes.
 

@@ -13,17 +13,21 @@ from sweep.query.answers.limits import (
 from sweep.query.answers.plain import plain, show_value
 from sweep.query.answers.plane import Mark, PlaneAnswer
 from sweep.query.answers.point import PointAnswer
+from sweep.query.answers.robust import LargestBox, RobustAnswer, WorstNode
 
 __all__ = [
     "CrossingKind",
     "End",
     "EndKind",
     "Interval",
+    "LargestBox",
     "LimitsAnswer",
     "LimitsRow",
     "Mark",
     "PlaneAnswer",
     "PointAnswer",
+    "RobustAnswer",
+    "WorstNode",
     "plain",
     "show_value",
 ]
