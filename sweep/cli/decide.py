@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import argparse
 
-from sweep.cli.command import BARE_NUMBERS, Command, add_atlas, add_place, flatten
+from sweep.cli.command import BARE_NUMBERS, Command, add_atlas, add_over, add_place, flatten
 from sweep.cli.output import print_document, print_view
 
 INCOMPLETE = 3
@@ -17,14 +17,7 @@ def _limits_options(parser: argparse.ArgumentParser) -> None:
         "--along", metavar="AXIS", required=True, help="the axis to find the boundary on"
     )
     add_place(parser, unnamed="design axes that are not named are listed")
-    parser.add_argument(
-        "--over",
-        metavar="AXIS=LOW:HIGH,...",
-        action="append",
-        default=[],
-        help="the tolerances to survive, such as damping=0.005:0.02,bus=0:0.5; tolerance axes that "
-        "are not named count over their full range; rows: unit=A,unit=B",
-    )
+    add_over(parser)
     parser.add_argument(
         "--each",
         metavar="AXIS,...",
@@ -54,6 +47,7 @@ def _limits(arguments: argparse.Namespace) -> int:
         each=flatten(arguments.each),
         nominal=arguments.nominal,
         design=arguments.design,
+        case=arguments.case,
         rows=arguments.rows,
     )
     if arguments.json:

@@ -4,32 +4,30 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, TypeVar
 
 import numpy as np
-from numpy.typing import NDArray
 
 from sweep.errors import QuestionError
-from sweep.grid import Axis, Grid
-from sweep.query.answers import LimitsAnswer, Mark, PlaneAnswer, PointAnswer
-from sweep.query.boundary import find_boundary
-from sweep.query.cautions import AT_A_NODE, BETWEEN_NODES
+from sweep.grid import Grid
+from sweep.query.answers import LimitsAnswer, PlaneAnswer, PointAnswer, RobustAnswer
+from sweep.query.cautions import AT_A_NODE
 from sweep.query.derived import derive
 from sweep.query.facts import AtlasFacts, read_facts
+from sweep.query.held import hold_nodes
 from sweep.query.limits import MOST_ROWS, find_limits, resolve_limits
+from sweep.query.memo import Memo
+from sweep.query.plane import find_plane
+from sweep.query.question import make_demand, resolve_question
+from sweep.query.requirement import Asked as Required
+from sweep.query.requirement import find_case
+from sweep.query.robust import find_robust
 from sweep.query.select import (
     Asked,
-    Value,
     find_axis,
-    find_enclosing,
-    find_node,
-    one_value,
-    read_value,
     resolve_names,
-    value_at,
 )
 from sweep.vocabulary import STABILITY_THRESHOLD, LoopStructure
 
@@ -100,6 +98,11 @@ class Atlas:
         """Every measure with labelled coordinates, read when it is used."""
         return self.stored.dataset
 
+    @cached_property
+    def memo(self) -> Memo:
+        """Where what takes long to find is kept between questions."""
+        return Memo()
+
     @property
     def structure(self) -> LoopStructure:
         """The loop's kinds and formula options."""
@@ -132,7 +135,7 @@ class Atlas:
         QuestionError
             When a value is not at a node.
         """
-        held = self._hold(self._asked(at, design), nearest=nearest)
+        held = hold_nodes(self.grid, self._asked(at, design), nearest=nearest)
         block = tuple(slice(node, node + 1) for node in held.node)
         measures = {
             spec.name: float(self.stored.read(spec.name, block).reshape(-1)[0])
@@ -162,6 +165,7 @@ class Atlas:
         each: Sequence[str] = (),
         nominal: bool = False,
         design: str = "",
+        case: str = "",
         rows: int = MOST_ROWS,
     ) -> LimitsAnswer:
         """The stability boundary along one axis.
@@ -182,6 +186,8 @@ class Atlas:
             Take every axis that is not named at its nominal node instead.
         design
             Name of a design whose values come before ``at``, except along the asked axis.
+        case
+            Name of a case whose box counts for axes that are named nowhere else.
         rows
             Most rows to list.
 
@@ -192,8 +198,61 @@ class Atlas:
         """
         along_name = find_axis(self.grid, along).name
         fixed = self._asked(at, design, without=(along_name, *each))
-        question = resolve_limits(self.grid, along, fixed, over or {}, each, nominal)
+        box = self._box(case, over, named=(along_name, *fixed, *each))
+        question = resolve_limits(self.grid, along, fixed, box, each, nominal)
         return find_limits(self.stored, self.atlas_id, question, max(1, rows))
+
+    def robust(
+        self,
+        case: str = "",
+        *,
+        at: Mapping[str, Asked] | None = None,
+        over: Mapping[str, Asked] | None = None,
+        within: Mapping[str, Asked] | None = None,
+        require: Required | None = None,
+        shake: Mapping[str, float | str] | None = None,
+        around: Mapping[str, Asked] | str | None = None,
+        design: str = "",
+    ) -> RobustAnswer:
+        """Which designs meet a requirement at every node of a tolerance box.
+
+        Parameters
+        ----------
+        case
+            Name of a case of the atlas: its box and its requirement.
+        at
+            Axes fixed at a value; between two nodes the worse of them counts.
+        over
+            The tolerance box: for each axis (low, high), ``"low:high"``, or row labels. Tolerance
+            axes that neither this nor the case names count over their full range.
+        within
+            Ranges that design axes are kept to.
+        require
+            Bounds by name, such as ``{"max_decay_time": "80 ms"}``; they come on top of the case's.
+            Being stable is always required.
+        shake
+            How far design axes may move by themselves, such as ``{"kp": "10%"}``: the worst
+            neighbour counts.
+        around
+            A design, by name or by its values, that the largest box has to hold.
+        design
+            Name of a design whose values come before ``at``.
+
+        Returns
+        -------
+        Counts, regions, the largest box and the worst node; ``dataset`` holds every design.
+
+        Raises
+        ------
+        QuestionError
+            When the question cannot be asked of this atlas.
+        """
+        demand = make_demand(self.stored.cases, case, over, require, shake)
+        question = resolve_question(
+            self.grid, self._held, self.title, demand, self._asked(at, design), within or {}
+        )
+        centre = self._asked(None, around) if isinstance(around, str) else dict(around or {})
+        return find_robust(self.stored, question, centre, self.memo)
 
     def plane(
         self,
@@ -222,49 +281,25 @@ class Atlas:
         QuestionError
             When both axes are the same, one is also in ``at``, or a value is not at a node.
         """
-        right, up = find_axis(self.grid, x), find_axis(self.grid, y)
-        if right.name == up.name:
-            raise QuestionError(
-                f"drawing a plane of {right.name} by {right.name}: expected two different axes",
-                where=[right.name],
-                remedy="name another axis for one of them",
-            )
-        asked = self._asked(at, design, without=(right.name, up.name))
-        for axis in (right, up):
-            if axis.name in resolve_names(self.grid, asked):
-                raise QuestionError(
-                    f"drawing a plane with {axis.name} on an edge: it is also held at a value",
-                    where=[axis.name],
-                    remedy=f"leave {axis.name} out of --at",
-                )
-        held = self._hold(asked, nearest=nearest, free=(right.name, up.name))
-        places = {axis.name: i for i, axis in enumerate(self.grid.axes)}
-        block = tuple(
-            slice(0, len(axis)) if axis.name in (right.name, up.name) else slice(node, node + 1)
-            for axis, node in zip(self.grid.axes, held.node, strict=True)
-        )
-        edges = (places[up.name], places[right.name])
-        log_radius = _as_plane(self.stored.read("log_radius", block), edges)
-        boundary = np.empty((0, 2, 2))
-        if not (right.is_row_axis or up.is_row_axis):
-            mode_angle = _as_plane(self.stored.read("mode_angle", block), edges)
-            boundary = find_boundary(self.grid, held.node, edges[::-1], log_radius, mode_angle)
-        return PlaneAnswer(
-            atlas_id=self.atlas_id,
-            title=self.title,
-            grid=self.grid,
-            x=right.name,
-            y=up.name,
-            log_radius=log_radius,
-            boundary=boundary,
-            period_s=_as_plane(self.grid.parameters(block)["sample_period"], edges),
-            at=held.at,
-            nominal=held.nominal,
-            moved=held.moved,
-            marks=tuple(self._marks(right, up, held.at)),
-            threshold=STABILITY_THRESHOLD,
-            cautions=BETWEEN_NODES,
-        )
+        right, up = find_axis(self.grid, x).name, find_axis(self.grid, y).name
+        asked = self._asked(at, design, without=(right, up))
+        return find_plane(self.stored, right, up, asked, nearest=nearest)
+
+    @property
+    def _held(self) -> tuple[str, ...]:
+        """Names of the stored measures."""
+        return tuple(spec.name for spec in self.stored.measures)
+
+    def _box(
+        self, case: str, over: Mapping[str, Asked] | None, named: Sequence[str]
+    ) -> dict[str, Asked]:
+        """What ``over`` says, over what the case says of axes that are not ``named``."""
+        given = dict(over or {})
+        if not case:
+            return given
+        taken = {*resolve_names(self.grid, given), *(find_axis(self.grid, n).name for n in named)}
+        ranges = find_case(self.stored.cases, case).over
+        return {axis: ends for axis, ends in ranges.items() if axis not in taken} | given
 
     def __repr__(self) -> str:
         axes = ", ".join(f"{axis.name} ({len(axis)})" for axis in self.grid.axes)
@@ -288,55 +323,3 @@ class Atlas:
         over = set(resolve_names(self.grid, given)) | set(without)
         values = named[design].values
         return {axis: value for axis, value in values.items() if axis not in over} | given
-
-    def _hold(
-        self, asked: Mapping[str, Asked], *, nearest: bool, free: Sequence[str] = ()
-    ) -> _Held:
-        names = resolve_names(self.grid, asked)
-        node = [axis.nominal for axis in self.grid.axes]
-        moved: dict[str, float] = {}
-        for position, axis in enumerate(self.grid.axes):
-            if axis.name not in names:
-                continue
-            name, value = names[axis.name]
-            single = one_value(axis.name, value)
-            node[position] = find_node(axis, single, name=name, nearest=nearest)
-            if nearest and len(find_enclosing(axis, single, name=name).nodes) > 1:
-                moved[axis.name] = read_value(axis, single, name)
-        held = [axis for axis in self.grid.axes if axis.name not in free]
-        places = {axis.name: i for i, axis in enumerate(self.grid.axes)}
-        return _Held(
-            node=tuple(node),
-            at={axis.name: value_at(axis, node[places[axis.name]]) for axis in held},
-            nominal=tuple(axis.name for axis in held if axis.name not in names),
-            moved=moved,
-        )
-
-    def _marks(self, right: Axis, up: Axis, at: Mapping[str, Value]) -> list[Mark]:
-        """Designs whose values off the plane's axes are the ones that are held."""
-        if right.is_row_axis or up.is_row_axis:
-            return []
-        marks = []
-        for design in self.stored.designs:
-            values = design.values
-            off = all(at[axis] == value for axis, value in values.items() if axis in at)
-            x, y = values.get(right.name), values.get(up.name)
-            if off and isinstance(x, float) and isinstance(y, float):
-                marks.append(Mark(design.name, x, y))
-        return marks
-
-
-def _as_plane(block: NDArray[Number], edges: tuple[int, int]) -> NDArray[Number]:
-    """A block with two axes that count as (upwards, to the right)."""
-    moved = np.moveaxis(block, edges, (0, 1))
-    return moved.reshape(moved.shape[:2])
-
-
-@dataclass(frozen=True)
-class _Held:
-    """Axes held at a node."""
-
-    node: tuple[int, ...]
-    at: Mapping[str, Value]
-    nominal: tuple[str, ...]
-    moved: Mapping[str, float]
