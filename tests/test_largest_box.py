@@ -22,8 +22,8 @@ def largest_by_trial(meets, around=None, single=()):
     spans = [list(itertools.combinations_with_replacement(range(n), 2)) for n in meets.shape]
     for axis in single:
         spans[axis] = [(a, b) for a, b in spans[axis] if a == b]
-    for axis, place in enumerate(around or ()):
-        spans[axis] = [(a, b) for a, b in spans[axis] if a <= place <= b]
+    for axis, (low, high) in enumerate(zip(*around, strict=True) if around else ()):
+        spans[axis] = [(a, b) for a, b in spans[axis] if a <= low and high <= b]
     for box in itertools.product(*spans):
         if meets[within(*zip(*box, strict=True))].all():
             order = -nodes_in(box), *zip(*box, strict=True)
@@ -46,7 +46,9 @@ def questions(draw):
     dense = draw(st.sampled_from([0.0, 0.4, 0.7, 0.9, 0.97]))
     rng = np.random.default_rng(draw(st.integers(0, 1 << 32)))
     meets = rng.random(shape) < dense
-    around = draw(st.none() | st.tuples(*(st.integers(0, n - 1) for n in shape)))
+    ends = [st.tuples(st.integers(0, n - 1), st.integers(0, n - 1)).map(sorted) for n in shape]
+    near = [pair.map(lambda ab: (ab[0], min(ab[1], ab[0] + 1))) for pair in ends]
+    around = draw(st.none() | st.tuples(*near).map(lambda box: tuple(zip(*box, strict=True))))
     single = draw(st.sets(st.integers(0, rank - 1)))
     return meets, around, tuple(sorted(single))
 
@@ -166,7 +168,7 @@ def test_an_area_above_two_bytes_is_counted_in_full(shape):
 
 
 def test_positions_may_be_numpy_numbers():
-    found = find_largest_box(np.ones((2, 3, 4), dtype=bool), around=tuple(np.array([1, 2, 3])))
+    found = find_largest_box(np.ones((2, 3, 4), dtype=bool), around=(np.array([1, 2, 3]),) * 2)
     assert {type(i) for i in (*found.low, *found.high, found.nodes, found.at_most)} == {int}
     assert type(found.exact) is bool
 
@@ -186,8 +188,11 @@ def test_one_node_without_axes_is_a_box():
     assert find_largest_box(np.array(True)).nodes == 1
 
 
-@pytest.mark.parametrize("around", [(0,), (0, 5), (0, -1), (0, 0, 0)])
-def test_a_node_off_the_grid_is_refused(around):
+@pytest.mark.parametrize(
+    "around",
+    [((0,), (0,)), ((0, 4), (0, 5)), ((0, -1), (0, 0)), ((0, 2), (0, 1)), ((0, 0, 0),) * 2],
+)
+def test_a_box_off_the_grid_is_refused(around):
     with pytest.raises(ValueError, match="expected within a grid"):
         find_largest_box(np.ones((2, 5), dtype=bool), around=around)
 
@@ -201,5 +206,5 @@ def test_the_mask_is_left_as_it_was():
     meets = np.random.default_rng(1).random((5, 6, 7)) < 0.8
     meets[2, 3, 3] = True
     before = meets.copy()
-    find_largest_box(meets, around=(2, 3, 3))
+    find_largest_box(meets, around=((2, 3, 3), (2, 3, 3)))
     assert (meets == before).all()

@@ -7,13 +7,14 @@ import shutil
 import textwrap
 from collections.abc import Sequence
 
-from sweep.cli import decide, keep, look, make
+from sweep.cli import decide, keep, look, make, robust
 from sweep.cli.command import Command, Parser
 
 COMMANDS: tuple[Command, ...] = (
     *make.COMMANDS,
     *look.COMMANDS,
     *decide.COMMANDS,
+    *robust.COMMANDS,
     *keep.COMMANDS,
 )
 

@@ -38,6 +38,8 @@ Span = tuple[int, int, int, int]
 """(a, b, c, d): slabs from a..b to c..d along one axis; with b > c, a = c and b = d, all within."""
 Block = tuple[Span, ...]
 """A span for each axis outside the plane."""
+Around = tuple[Sequence[int], Sequence[int]]
+"""Lower and upper corner of a box, both of them part of it."""
 Mask = NDArray[np.bool_]
 Counts = NDArray[np.unsignedinteger]
 
@@ -61,7 +63,7 @@ class Box:
 def find_largest_box(
     meets: Mask,
     *,
-    around: tuple[int, ...] | None = None,
+    around: Around | None = None,
     single: Sequence[int] = (),
     budget: int = BUDGET,
 ) -> Box | None:
@@ -72,7 +74,7 @@ def find_largest_box(
     meets
         Any number of axes: whether each node meets.
     around
-        Index of a node that the box must contain.
+        Lower and upper corner of a box of nodes that the box must contain.
     single
         Positions of the axes along which the box holds exactly one node, such as unordered rows.
     budget
@@ -88,7 +90,7 @@ def find_largest_box(
     Raises
     ------
     ValueError
-        When ``around`` is not a node of ``meets``, or ``single`` not a set of its axes.
+        When ``around`` is not a box of nodes of ``meets``, or ``single`` not a set of its axes.
 
     Examples
     --------
@@ -104,7 +106,9 @@ def find_largest_box(
         return None
     low, high = ends
     trimmed = meets[tuple(slice(a, b + 1) for a, b in zip(low, high, strict=True))]
-    through = None if around is None else [int(p) - a for p, a in zip(around, low, strict=True)]
+    through = None
+    if around is not None:
+        through = [(int(b) - a, int(c) - a) for a, b, c in zip(low, *around, strict=True)]
     search = _Search(trimmed, through, single)
     search.run(budget if sum(n > 1 for n in trimmed.shape) > 3 else None)
     first, last = search.first_box()
@@ -117,25 +121,26 @@ def find_largest_box(
     )
 
 
-def _seen_from(meets: Mask, node: tuple[int, ...], single: Sequence[int]) -> Mask:
-    """The nodes that span with ``node`` a box of meeting nodes.
+def _seen_from(meets: Mask, around: Around, single: Sequence[int]) -> Mask:
+    """The nodes that span with the box ``around`` a box of meeting nodes.
 
-    A box within them and ``node`` span together a box within them as well, so the largest box
-    among them contains ``node`` without being asked to.
+    A box within them and ``around`` span together a box within them as well, so the largest box
+    among them contains ``around`` without being asked to.
     """
-    inside = len(node) == meets.ndim and all(
-        0 <= i < n for i, n in zip(node, meets.shape, strict=False)
+    inside = all(len(corner) == meets.ndim for corner in around) and all(
+        0 <= a <= b < n for a, b, n in zip(*around, meets.shape, strict=True)
     )
     if not inside:
-        raise ValueError(f"node {node} expected within a grid of {meets.shape}")
+        raise ValueError(f"box {around} expected within a grid of {meets.shape}")
     seen = meets.copy()
-    for axis, place in enumerate(node):
+    for axis, (low, high) in enumerate(zip(*around, strict=True)):
         lines = np.moveaxis(seen, axis, 0)
-        np.logical_and.accumulate(lines[place:], axis=0, out=lines[place:])
-        backward = lines[place::-1]
+        lines[low : high + 1] = lines[low : high + 1].all(axis=0)
+        np.logical_and.accumulate(lines[high:], axis=0, out=lines[high:])
+        backward = lines[low::-1]
         np.logical_and.accumulate(backward, axis=0, out=backward)
         if axis in single:
-            lines[:place] = lines[place + 1 :] = False
+            lines[:high] = lines[low + 1 :] = False
     return seen
 
 
@@ -155,7 +160,9 @@ def _ends(meets: Mask) -> tuple[list[int], list[int]] | None:
 class _Search:
     """Branch and bound over the slabs of one mask; the plane is that of its two longest axes."""
 
-    def __init__(self, meets: Mask, through: Sequence[int] | None, single: Sequence[int]) -> None:
+    def __init__(
+        self, meets: Mask, through: Sequence[tuple[int, int]] | None, single: Sequence[int]
+    ) -> None:
         ranked = sorted(range(meets.ndim), key=lambda axis: (axis not in single, meets.shape[axis]))
         self.ndim = meets.ndim
         self.plane = [axis for axis in ranked if axis not in single][-2:]
@@ -173,8 +180,7 @@ class _Search:
             self.root = tuple((0, n, 0, n) for n in last)
         else:
             self.root = tuple(
-                (0, through[axis], through[axis], n)
-                for axis, n in zip(self.outer, last, strict=True)
+                (0, *through[axis], n) for axis, n in zip(self.outer, last, strict=True)
             )
 
     @property

@@ -11,12 +11,14 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from sweep.errors import QuestionError
+from sweep.grid import Axis
 from sweep.query.answers.plain import plain
 from sweep.query.answers.robust import LargestBox, RobustAnswer, WorstNode
+from sweep.query.blocks import Indices
 from sweep.query.cautions import OVER_A_BOX
 from sweep.query.derived import derive, measures_needed
 from sweep.query.jump import find_largest_jump
-from sweep.query.largest_box import find_largest_box
+from sweep.query.largest_box import Around, find_largest_box
 from sweep.query.memo import Memo
 from sweep.query.question import DesignQuestion
 from sweep.query.region_data import worst_dataset
@@ -72,7 +74,7 @@ def find_robust(
         largest_box=_as_box(scope, summary, around),
         worst=_as_worst(summary.worst),
         largest_jump=summary.largest_jump,
-        nodes=scope.nodes,
+        nodes=summary.nodes,
         unknown_nodes=summary.unknown_nodes,
         cautions=OVER_A_BOX,
         make_dataset=cases.dataset,
@@ -96,6 +98,7 @@ class _Summary:
     worst: Mapping[str, Any] | None
     """The worst node and its measures."""
     largest_jump: float | None
+    nodes: int
     unknown_nodes: int
 
 
@@ -129,7 +132,7 @@ class _Lazy:
 def _recall_summary(
     stored: StoredAtlas,
     question: DesignQuestion,
-    around: tuple[int, ...] | None,
+    around: Around | None,
     cases: _Lazy,
     memo: Memo | None,
 ) -> _Summary:
@@ -146,7 +149,7 @@ def _recall_summary(
     return _Summary(**json.loads(text))
 
 
-def _asked(question: DesignQuestion, around: tuple[int, ...] | None) -> dict[str, object]:
+def _asked(question: DesignQuestion, around: Around | None) -> dict[str, object]:
     """All that decides a summary, apart from the atlas."""
     scope = question.scope
     return {
@@ -159,12 +162,12 @@ def _asked(question: DesignQuestion, around: tuple[int, ...] | None) -> dict[str
         "windows": [
             [w.axis, w.first.tolist(), w.last.tolist(), w.lost.tolist()] for w in question.windows
         ],
-        "around": list(around) if around is not None else [],
+        "around": [list(corner) for corner in around] if around is not None else [],
         "labels": [list(axis.labels or ()) for axis in scope.grid.axes],
     }
 
 
-def _summarise(cases: WorstCases, around: tuple[int, ...] | None) -> _Summary:
+def _summarise(cases: WorstCases, around: Around | None) -> _Summary:
     meets = cases.verdict == MEETS
     unordered = unordered_dimensions(cases.scope)
     box = find_largest_box(meets, around=around, single=unordered)
@@ -180,7 +183,8 @@ def _summarise(cases: WorstCases, around: tuple[int, ...] | None) -> _Summary:
         box=vars(box) if box else None,
         worst=_find_worst(cases),
         largest_jump=find_largest_jump(log_radius, meets, unordered),
-        unknown_nodes=cases.found.unknown_nodes,
+        nodes=cases.nodes,
+        unknown_nodes=cases.unknown_nodes,
     )
 
 
@@ -211,49 +215,56 @@ def _period_s(cases: WorstCases, design: tuple[int, ...]) -> float:
     return float(scope.grid.parameters(block)["sample_period"].reshape(-1)[0])
 
 
-def _place_around(scope: Scope, around: Mapping[str, Asked]) -> tuple[int, ...] | None:
-    """The place, along every free axis, of the design that the largest box has to hold."""
+def _place_around(scope: Scope, around: Mapping[str, Asked]) -> Around | None:
+    """The places, along every free axis, of the nodes that the largest box has to hold."""
     if not around:
         return None
     asked = resolve_names(scope.grid, around)
-    places = []
-    for position in scope.free:
-        axis, nodes = scope.grid.axes[position], scope.spans[position]
-        if axis.name not in asked and len(nodes) > 1:
-            raise QuestionError(
-                f"finding the largest box around a design: it names no {axis.name}",
-                where=[axis.name],
-                remedy=f"add {axis.name} to it, or fix it with --at",
-            )
-        places.append(_place_on(scope, position, asked) if axis.name in asked else 0)
-    return tuple(places)
+    corners = [
+        _places_on(scope.grid.axes[position], scope.spans[position], asked)
+        for position in scope.free
+    ]
+    return [low for low, _ in corners], [high for _, high in corners]
 
 
-def _place_on(scope: Scope, position: int, asked: Mapping[str, tuple[str, Asked]]) -> int:
-    axis, nodes = scope.grid.axes[position], scope.spans[position]
-    name, value = asked[axis.name]
-    found = find_enclosing(axis, one_value(axis.name, value), name=name).nodes
-    place = int(np.searchsorted(nodes, found[0]))
-    if len(found) > 1 or place == len(nodes) or nodes[place] != found[0]:
+def _places_on(
+    axis: Axis, nodes: Indices, asked: Mapping[str, tuple[str, Asked]]
+) -> tuple[int, int]:
+    """The place of a node, or of both nodes around a value."""
+    if axis.name not in asked:
+        if len(nodes) == 1:
+            return 0, 0
         raise QuestionError(
-            f"finding the largest box around {axis.name} = {value}: it is not a node of the "
-            "designs that were asked about",
+            f"finding the largest box around a design: it names no {axis.name}",
             where=[axis.name],
-            remedy=f"name a node, such as {axis.name}={value_at(axis, int(found[0]))}",
+            remedy=f"add {axis.name} to it, or fix it with --at",
         )
-    return place
+    name, value = asked[axis.name]
+    around = find_enclosing(axis, one_value(axis.name, value), name=name).nodes
+    places = [int(place) for place in np.flatnonzero(np.isin(nodes, around))]
+    if len(places) < len(around):
+        raise QuestionError(
+            f"finding the largest box around {axis.name} = {value}: it lies outside the designs "
+            "that were asked about",
+            where=[axis.name],
+            remedy=f"take {axis.name} out of --at and --within, or name a value inside",
+        )
+    return places[0], places[-1]
 
 
 def _as_box(scope: Scope, summary: _Summary, around: Mapping[str, Asked]) -> LargestBox | None:
     if summary.box is None:
         return None
     box = summary.box
-    ends = {}
+    ends, at_axis_end = {}, []
     for axis, low, high in zip(scope.free, box["low"], box["high"], strict=True):
         one, nodes = scope.grid.axes[axis], scope.spans[axis]
         ends[one.name] = value_at(one, int(nodes[low])), value_at(one, int(nodes[high]))
+        if len(one) > 1 and not one.is_row_axis and one.name not in scope.at:
+            at_axis_end += [(one.name, "low")] * int(nodes[low] == 0)
+            at_axis_end += [(one.name, "high")] * int(nodes[high] == len(one) - 1)
     named = {name: str(value) for name, value in around.items()}
-    return LargestBox(ends, box["nodes"], box["exact"], box["at_most"], named)
+    return LargestBox(ends, box["nodes"], box["exact"], box["at_most"], tuple(at_axis_end), named)
 
 
 def _as_worst(found: Mapping[str, Any] | None) -> WorstNode | None:

@@ -74,6 +74,31 @@ def parse_assignments(texts: Iterable[str]) -> dict[str, str | list[str]]:
     return found
 
 
+def parse_single(texts: Iterable[str]) -> dict[str, str]:
+    """As `parse_assignments`, where each name has one value.
+
+    Raises
+    ------
+    QuestionError
+        When a name is given twice.
+
+    Examples
+    --------
+    >>> parse_single(["max_decay_time=80ms,max_radius=0.9"])
+    {'max_decay_time': '80ms', 'max_radius': '0.9'}
+    """
+    found = {}
+    for name, value in parse_assignments(texts).items():
+        if not isinstance(value, str):
+            raise QuestionError(
+                f"reading {name}: it is given {len(value)} times",
+                where=[name],
+                remedy=f"give {name} once",
+            )
+        found[name] = value
+    return found
+
+
 def find_axis(grid: Grid, name: str) -> Axis:
     """The axis that a question calls ``name``.
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -50,6 +50,10 @@ class WorstCases:
     """For each shaken axis, by position, the node on it where the worst is reached."""
     verdict: Codes
     """Of every design."""
+    nodes: int
+    """Nodes that were read, neighbours included."""
+    unknown_nodes: int
+    """How many of them are not computed."""
 
     def worst_of(self, requirement: Requirement) -> NDArray[Any]:
         """The values that decide a requirement."""
@@ -114,6 +118,44 @@ def find_worst_cases(
     return judge_extremes(structure, scope, requirements, found, windows)
 
 
+def find_worst_of_parts(
+    stored: Readable,
+    structure: LoopStructure,
+    scope: Scope,
+    requirements: Sequence[Requirement],
+    parts: Sequence[Places],
+    *,
+    also: Iterable[Extreme] = (),
+    windows: Sequence[Window] = (),
+    memo: Memo | None = None,
+) -> Iterator[WorstCases]:
+    """Judge every design over several parts of the box, from one pass over the atlas.
+
+    Parameters
+    ----------
+    parts
+        Parts of the scope's box, each as places along every one of its axes.
+    stored, structure, scope, requirements, also, windows, memo
+        See `find_worst_cases`.
+
+    Yields
+    ------
+    The worst cases over each part in turn; derived quantities are held for one part at a time.
+    """
+    asked = _read_scope(scope, windows)
+    plan = plan_reduction(asked, wanted_extremes(requirements, also))
+    reduced = recall_extremes(stored, asked, list(dict.fromkeys(plan.values())), memo, parts)
+    for part, found in zip(parts, reduced, strict=True):
+        spans = list(scope.spans)
+        for axis, places in zip(scope.box, part, strict=True):
+            spans[axis] = spans[axis][places]
+        narrowed = replace(scope, spans=tuple(spans))
+        derived = derive_extremes(asked, plan, found)
+        cases = judge_extremes(structure, narrowed, requirements, derived, windows)
+        # places in the box are counted in the whole of it
+        yield replace(cases, scope=scope)
+
+
 def wanted_extremes(
     requirements: Iterable[Requirement], also: Iterable[Extreme] = ()
 ) -> list[Extreme]:
@@ -144,7 +186,8 @@ def judge_extremes(
     windows
         Neighbours to take in along free axes.
     """
-    excluded = find_excluded(structure, _read_scope(scope, windows))
+    read = _read_scope(scope, windows)
+    excluded, unknown_nodes = find_excluded(structure, read), found.unknown_nodes
     moved: dict[int, dict[Extreme, Indices]] = {}
     for window in windows:
         dimension = scope.free.index(window.axis)
@@ -161,7 +204,7 @@ def judge_extremes(
         )
     verdict = decide(fails, found.unknown > 0)
     verdict[np.broadcast_to(excluded, verdict.shape)] = EXCLUDED
-    return WorstCases(scope, tuple(requirements), found, moved, verdict)
+    return WorstCases(scope, tuple(requirements), found, moved, verdict, read.nodes, unknown_nodes)
 
 
 def recall_extremes(

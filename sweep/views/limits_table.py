@@ -14,6 +14,7 @@ from sweep.grid import Axis
 from sweep.quantities import display_factor, display_name, format_quantity
 from sweep.query.answers import End, LimitsAnswer, LimitsRow, show_value
 from sweep.query.select import Value
+from sweep.views.box_lines import box_lines
 from sweep.views.sheet import (
     caution_text,
     cells,
@@ -44,7 +45,7 @@ def limits_view(answer: LimitsAnswer) -> RenderableType:
     parts: list[RenderableType] = [title_line(f"Stable along {answer.along}")]
     if shared:
         parts.append(facts_table(place_rows(answer.grid, shared, named)))
-    parts += [line(text) for text in _box_lines(answer)]
+    parts += [line(text) for text in box_lines(answer)]
     same, differing = _deciding(answer)
     parts += [line(""), _limits_table(answer, axis, differing)]
     parts.append(line(ENDS + (WORST_BELOW if differing else ""), "dim"))
@@ -170,32 +171,3 @@ def _number(axis: Axis, value: Value) -> str:
     finest = float(np.diff(axis.coordinates).min()) if len(axis) > 1 else 0.0
     shown = 0.0 if abs(value) < 1e-5 * finest else value
     return f"{shown / display_factor(axis.unit, _unit(axis)):.6g}"
-
-
-def _box_lines(answer: LimitsAnswer) -> Iterable[str]:
-    grid = answer.grid
-    if answer.over:
-        yield "worst over " + "; ".join(
-            f"{name} {_range_text(grid.axis(name), ends)}" for name, ends in answer.over.items()
-        )
-    if answer.widened:
-        yield (
-            f"a bound of {', '.join(answer.widened)} lay between nodes: "
-            "the next node outward was taken in"
-        )
-    for name, ends in answer.bracketed.items():
-        axis = grid.axis(name)
-        yield (
-            f"{name} lies between nodes: bracketed by {show_value(axis, ends[0])} and "
-            f"{show_value(axis, ends[1])}, the worse of them counts"
-        )
-
-
-def _range_text(axis: Axis, ends: Sequence[Value]) -> str:
-    if axis.is_row_axis:
-        shown = ", ".join(map(str, ends[:6]))
-        return shown if len(ends) <= 6 else f"{shown} and {len(ends) - 6} more"
-    low, high = ends[0], ends[-1]
-    if low == high:
-        return show_value(axis, low)
-    return f"{show_value(axis, low)} to {show_value(axis, high)}"

@@ -54,6 +54,8 @@ class LargestBox:
     """Whether it is proven that no box holds more."""
     at_most: int
     """No box holds more nodes than this."""
+    axis_ends: tuple[tuple[str, str], ...] = ()
+    """Sides at which the axis itself ends, so that the box might go on: (axis, low or high)."""
     around: Mapping[str, Value] = field(default_factory=dict)
     """The design that it was asked to hold; empty when it could lie anywhere."""
 
@@ -148,6 +150,7 @@ class RobustAnswer:
         document["largest_box_nodes"] = box.nodes if box else 0
         document["largest_box_exact"] = box.exact if box else True
         document["largest_box_at_most"] = box.at_most if box else 0
+        document["largest_box_axis_ends"] = box.axis_ends if box else ()
         document["worst"] = worst and {
             "at": worst.at,
             "log_radius": worst.log_radius,
