@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from sweep.query.answers.choose import ChooseAnswer, ChooseRow, DelayLeft, Outcome, Price
 from sweep.query.answers.limits import (
     CrossingKind,
     End,
@@ -16,7 +17,10 @@ from sweep.query.answers.point import PointAnswer
 from sweep.query.answers.robust import LargestBox, RobustAnswer, WorstNode
 
 __all__ = [
+    "ChooseAnswer",
+    "ChooseRow",
     "CrossingKind",
+    "DelayLeft",
     "End",
     "EndKind",
     "Interval",
@@ -24,8 +28,10 @@ __all__ = [
     "LimitsAnswer",
     "LimitsRow",
     "Mark",
+    "Outcome",
     "PlaneAnswer",
     "PointAnswer",
+    "Price",
     "RobustAnswer",
     "WorstNode",
     "plain",

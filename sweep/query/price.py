@@ -1,0 +1,162 @@
+"""The price of tolerances: what would be left to choose from if one were halved, or gone."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from sweep.grid import Axis
+from sweep.query.answers.choose import Outcome, Price
+from sweep.query.best import Best, find_gain_boxes
+from sweep.query.blocks import Indices
+from sweep.query.extremes import Places
+from sweep.query.periods import Periods
+from sweep.query.scope import Scope, box_ends
+from sweep.query.select import SAME_NODE
+from sweep.query.verdicts import MEETS
+from sweep.query.worst import WorstCases
+
+
+@dataclass(frozen=True)
+class Narrowing:
+    """One tolerance axis of the box, narrowed."""
+
+    axis: int
+    """Position in the grid."""
+    halved: Indices | None
+    """Places along its span that half the range takes in; ``None`` for rows."""
+    removed: Indices
+    """The place of the nominal node."""
+
+
+@dataclass(frozen=True)
+class PriceList:
+    """Every narrowing of a box, and the parts of the box that they come to."""
+
+    narrowings: tuple[Narrowing, ...]
+    """One for each tolerance axis with several nodes in the box."""
+    parts: tuple[Places, ...]
+    """The whole box first; none twice."""
+    halved: tuple[int | None, ...]
+    """For each narrowing the part with half the range."""
+    removed: tuple[int, ...]
+    """For each narrowing the part with the nominal node."""
+
+
+def plan_prices(scope: Scope) -> PriceList:
+    """Which parts of the box the prices of its tolerances need."""
+    whole = [np.arange(size, dtype=np.intp) for size in scope.box_shape]
+    parts: dict[tuple[int, tuple[int, ...]], Places] = {}
+
+    def part_of(axis: int, places: Indices | None) -> int | None:
+        if places is None:
+            return None
+        if len(places) == len(scope.spans[axis]):
+            return 0
+        key = axis, tuple(places.tolist())
+        narrowed = [
+            places if position == axis else every
+            for position, every in zip(scope.box, whole, strict=True)
+        ]
+        parts.setdefault(key, narrowed)
+        return 1 + list(parts).index(key)
+
+    narrowings = tuple(
+        _narrowing(scope, axis) for axis in scope.tolerances if len(scope.spans[axis]) > 1
+    )
+    halved = tuple(part_of(item.axis, item.halved) for item in narrowings)
+    removed = tuple(part_of(item.axis, item.removed) or 0 for item in narrowings)
+    return PriceList(narrowings, (whole, *parts.values()), halved, removed)
+
+
+def find_outcome(cases: WorstCases, best: Best, periods: Periods) -> Outcome:
+    """What a box leaves to choose from; its ranges are those of the scope.
+
+    Parameters
+    ----------
+    cases
+        The worst of every design over the box.
+    best
+        What is called best.
+    periods
+        The sample periods.
+    """
+    meets = cases.verdict == MEETS
+    count = int(np.count_nonzero(meets))
+    slowest_s = best_value = None
+    if count:
+        slowest_s = float(periods.values_s[periods.any_per_row(meets)].max())
+        best_value = _best_value(cases, best, periods)
+    return Outcome(cases.scope.over(), count, count / meets.size, best_value, slowest_s)
+
+
+def find_prices(scope: Scope, plan: PriceList, outcomes: Sequence[Outcome]) -> tuple[Price, ...]:
+    """What each tolerance costs, the dearest first.
+
+    Ranked by the designs that meet once it is removed, then once it is halved; equals in the order
+    of the axes.
+
+    Parameters
+    ----------
+    scope
+        Designs and box.
+    plan
+        See `plan_prices`.
+    outcomes
+        One for each part of it.
+    """
+    prices = [
+        _price(scope, item, outcomes, halved, removed)
+        for item, halved, removed in zip(plan.narrowings, plan.halved, plan.removed, strict=True)
+    ]
+    return tuple(sorted(prices, key=_dearest_first))
+
+
+def _dearest_first(price: Price) -> tuple[int, int]:
+    return -price.removed.meets, -(price.halved.meets if price.halved else 0)
+
+
+def _price(
+    scope: Scope, item: Narrowing, outcomes: Sequence[Outcome], halved: int | None, removed: int
+) -> Price:
+    whole = outcomes[0]
+    half = None
+    if item.halved is not None and halved is not None:
+        half = _narrowed(scope, item, item.halved, outcomes[halved])
+    gone = _narrowed(scope, item, item.removed, outcomes[removed])
+    same = all(found.changes == whole.changes for found in (half, gone) if found is not None)
+    axis = scope.grid.axes[item.axis]
+    return Price(axis.name, len(scope.spans[item.axis]), half, gone, halved == 0, same)
+
+
+def _narrowed(scope: Scope, item: Narrowing, places: Indices, found: Outcome) -> Outcome:
+    axis = scope.grid.axes[item.axis]
+    over = {axis.name: box_ends(axis, scope.spans[item.axis][places])}
+    return Outcome(over, found.meets, found.share, found.best, found.slowest_s)
+
+
+def _narrowing(scope: Scope, position: int) -> Narrowing:
+    axis, nodes = scope.grid.axes[position], scope.spans[position]
+    nominal = int(np.abs(nodes - axis.nominal).argmin())
+    halved = None if axis.is_row_axis else _halved(axis, nodes, nominal)
+    return Narrowing(position, halved, np.array([nominal], dtype=np.intp))
+
+
+def _halved(axis: Axis, nodes: Indices, nominal: int) -> Indices:
+    """Places of half the range about the nominal; a bound between nodes takes the next outward."""
+    x = axis.coordinates[nodes]
+    slack = SAME_NODE * float(axis.coordinates[-1] - axis.coordinates[0])
+    low, high = ((x[nominal] + end) / 2 for end in (x[0], x[-1]))
+    first = int(np.searchsorted(x, low + slack, side="right")) - 1
+    last = int(np.searchsorted(x, high - slack, side="left"))
+    return np.arange(first, last + 1, dtype=np.intp)
+
+
+def _best_value(cases: WorstCases, best: Best, periods: Periods) -> float:
+    """Of designs that meet; there is one."""
+    if best.is_box:
+        return float(max(box.nodes for box in find_gain_boxes(cases, periods) if box))
+    values = cases.found.worst[best.extreme][cases.verdict == MEETS]
+    return float(values.min() if best.extreme.sense == "max" else values.max())
