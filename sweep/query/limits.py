@@ -259,6 +259,7 @@ def _lines_to_rows(
             intervals=walk.intervals(angles),
             nodes=box_nodes * len(axis),
             unknown=int(lines.unknown[row].sum()),
+            largest_jump=walk.largest_jump(),
         )
         for row, walk in enumerate(walks)
     ]

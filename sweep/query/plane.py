@@ -15,6 +15,7 @@ from sweep.query.answers import Mark, PlaneAnswer
 from sweep.query.boundary import find_boundary
 from sweep.query.cautions import BETWEEN_NODES
 from sweep.query.held import hold_nodes
+from sweep.query.jump import find_largest_jump
 from sweep.query.select import Asked, Value, find_axis, resolve_names
 from sweep.vocabulary import STABILITY_THRESHOLD
 
@@ -72,6 +73,7 @@ def find_plane(
     if not (right.is_row_axis or up.is_row_axis):
         mode_angle = _as_plane(stored.read("mode_angle", block), edges)
         boundary = find_boundary(grid, held.node, edges[::-1], log_radius, mode_angle)
+    unordered = [i for i, axis in enumerate((up, right)) if not axis.ordered]
     return PlaneAnswer(
         atlas_id=stored.atlas_id,
         title=stored.title,
@@ -86,6 +88,7 @@ def find_plane(
         moved=held.moved,
         marks=tuple(_marks(stored.designs, right, up, held.at)),
         threshold=STABILITY_THRESHOLD,
+        largest_jump=find_largest_jump(log_radius, log_radius < STABILITY_THRESHOLD, unordered),
         cautions=BETWEEN_NODES,
     )
 

@@ -88,6 +88,11 @@ class Walk:
         pairs = [pair for a, b in self.runs() for pair in ((a, a - 1), (b, b + 1))]
         return [(s, o) for s, o in pairs if self._end_kind(o) == "boundary"]
 
+    def largest_jump(self) -> float | None:
+        """The largest difference of log_radius across a boundary; `None` where there is none."""
+        jumps = [abs(float(self.worst[s] - self.worst[o])) for s, o in self.crossings()]
+        return max(jumps, default=None)
+
     def nodes_to_read(self) -> list[tuple[int, ...]]:
         """Nodes whose mode angle the crossings need."""
         wanted: set[int] = set()

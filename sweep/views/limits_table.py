@@ -14,7 +14,7 @@ from sweep.grid import Axis
 from sweep.quantities import display_factor, display_name, format_quantity
 from sweep.query.answers import End, LimitsAnswer, LimitsRow, show_value
 from sweep.query.select import Value
-from sweep.views.box_lines import box_lines
+from sweep.views.box_lines import box_lines, jump_line
 from sweep.views.sheet import (
     caution_text,
     cells,
@@ -52,6 +52,7 @@ def limits_view(answer: LimitsAnswer) -> RenderableType:
     if same:
         parts.append(line(f"{_place_text(answer, same)}: the worst at every end"))
     parts.append(line(""))
+    parts += [line(text, "dim") for text in jump_line(answer.largest_jump)]
     if answer.rows_in_all > len(answer.rows):
         parts.append(
             line(

@@ -15,6 +15,7 @@ from sweep.quantities import format_quantity
 from sweep.query.answers import PlaneAnswer, PointAnswer
 from sweep.query.facts import AtlasFacts, DelayPart
 from sweep.query.select import show_node
+from sweep.views.box_lines import jump_line
 from sweep.views.sheet import (
     HALF_SAMPLE,
     bytes_text,
@@ -168,6 +169,7 @@ def plane_view(plane: PlaneAnswer) -> RenderableType:
     share = plane.stable / known if known else 0.0
     parts += [
         line(f"{plane.stable:,} of {known:,} computed nodes are stable ({share:.0%})"),
+        *(line(text, "dim") for text in jump_line(plane.largest_jump)),
         rests_on(nodes, plane.unknown),
         caution_text(plane.cautions),
     ]

@@ -75,6 +75,8 @@ class LimitsRow:
     """Nodes of the line, tolerance nodes included."""
     unknown: int
     """How many of them are not computed."""
+    largest_jump: float | None = None
+    """Largest difference of log_radius between the two nodes of a boundary; ``None`` without."""
 
 
 @dataclass(frozen=True)
@@ -119,6 +121,12 @@ class LimitsAnswer:
         """How many of them are not computed."""
         return sum(row.unknown for row in self.rows)
 
+    @property
+    def largest_jump(self) -> float | None:
+        """Largest difference of log_radius between the two nodes of any boundary."""
+        jumps = [row.largest_jump for row in self.rows if row.largest_jump is not None]
+        return max(jumps, default=None)
+
     def to_json(self) -> dict[str, Any]:
         """The document that programs rely on."""
         rows = [
@@ -132,7 +140,7 @@ class LimitsAnswer:
         ]
         document: dict[str, Any] = {"atlas_id": self.atlas_id, "along": self.along}
         document |= {"unit": self.unit, "rows": rows}
-        names = ("rows_in_all", "listed", "over", "widened", "bracketed", "nominal")
+        names = ("rows_in_all", "listed", "over", "widened", "bracketed", "nominal", "largest_jump")
         document |= {name: getattr(self, name) for name in names}
         document |= {"nodes": self.nodes, "unknown": self.unknown, "cautions": self.cautions}
         found: dict[str, Any] = plain(document)

@@ -59,6 +59,8 @@ class PlaneAnswer:
     """Named designs that lie in the plane."""
     threshold: float
     """Nodes with a log_radius below it are stable."""
+    largest_jump: float | None
+    """Largest difference of log_radius between neighbours of which one is stable."""
     cautions: tuple[str, ...]
     """Codes of the cautions that apply."""
 
@@ -74,7 +76,7 @@ class PlaneAnswer:
 
     def to_json(self) -> dict[str, Any]:
         """What the plane is and how much of it is stable; its values are in the atlas."""
-        names = ("atlas_id", "x", "y", "at", "nominal", "moved", "cautions")
+        names = ("atlas_id", "x", "y", "at", "nominal", "moved", "largest_jump", "cautions")
         document: dict[str, Any] = plain({name: getattr(self, name) for name in names})
         counts = {"nodes": self.log_radius.size, "stable": self.stable, "unknown": self.unknown}
         return document | counts | {"marks": [mark.name for mark in self.marks]}
