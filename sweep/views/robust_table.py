@@ -56,8 +56,8 @@ def _count_rows(answer: RobustAnswer) -> list[tuple[str, str]]:
 def _box_parts(answer: RobustAnswer) -> Iterable[RenderableType]:
     box = answer.largest_box
     if box is None:
-        wanted = "No box of designs meets"
-        yield line(f"{wanted} around the one that was named" if answer.meets else wanted, "yellow")
+        text = "the design that was named does not meet, so no box of designs can hold it"
+        yield line(text if answer.meets else "no design meets", "yellow")
         return
     around = " around the design that was named" if box.around else ""
     yield line(f"largest box of designs that all meet{around}: {box.nodes:,} nodes", "bold")
