@@ -3,6 +3,15 @@
 from __future__ import annotations
 
 from sweep.query.answers.choose import ChooseAnswer, ChooseRow, DelayLeft, Outcome, Price
+from sweep.query.answers.judge import (
+    DesignVerdict,
+    Distance,
+    GainFall,
+    Hurt,
+    JudgeAnswer,
+    Line,
+    Reached,
+)
 from sweep.query.answers.limits import (
     CrossingKind,
     End,
@@ -21,17 +30,24 @@ __all__ = [
     "ChooseRow",
     "CrossingKind",
     "DelayLeft",
+    "DesignVerdict",
+    "Distance",
     "End",
     "EndKind",
+    "GainFall",
+    "Hurt",
     "Interval",
+    "JudgeAnswer",
     "LargestBox",
     "LimitsAnswer",
     "LimitsRow",
+    "Line",
     "Mark",
     "Outcome",
     "PlaneAnswer",
     "PointAnswer",
     "Price",
+    "Reached",
     "RobustAnswer",
     "WorstNode",
     "plain",

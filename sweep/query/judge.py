@@ -1,0 +1,362 @@
+"""Judging single designs: every requirement line by line, distances, tolerances in hand, yield.
+
+A design between nodes is judged by the worst of all nodes that enclose it. Nothing is snapped to a
+nearest node, and an unknown node is never counted as meeting anything.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from sweep.config import Design, Requirement
+from sweep.errors import QuestionError
+from sweep.grid import Axis, Grid
+from sweep.query.answers.judge import (
+    DesignVerdict,
+    GainFall,
+    JudgeAnswer,
+    Line,
+    Reached,
+    worst_verdict,
+)
+from sweep.query.blocks import Indices, Readable
+from sweep.query.cautions import OVER_A_BOX
+from sweep.query.conditional import find_gain_fall
+from sweep.query.derived import spec_of
+from sweep.query.distances import find_distances, find_hurts, largest_step, walk_lines
+from sweep.query.extremes import Extreme, find_extremes
+from sweep.query.held_block import hold
+from sweep.query.jump import find_largest_jump
+from sweep.query.question import Demand, DesignQuestion, resolve_question
+from sweep.query.requirement import is_violated, requirement_name, requirement_text
+from sweep.query.scope import Scope
+from sweep.query.select import Asked, Value, find_axis, resolve_names, value_at
+from sweep.query.tolerance import find_acceptance, find_in_hand
+from sweep.query.verdicts import EXCLUDED, FAILS, MEETS, NAMES, Codes, decide
+from sweep.query.worst import LOG_RADIUS, WorstCases, find_excluded, find_worst_cases
+from sweep.query.yields import Yield, find_yields
+from sweep.vocabulary import STABILITY_THRESHOLD, LoopStructure
+
+if TYPE_CHECKING:
+    from sweep.store.atlas import StoredAtlas
+
+CONFIDENCE = 0.95
+"""Of the intervals of yields, unless a question says otherwise."""
+
+DECAY_TIME = Extreme("decay_time", "max")
+
+Weights = Mapping[str, Mapping[str, float]]
+"""By row axis, the weight of each row by its label."""
+
+
+@dataclass(frozen=True)
+class AskedDesign:
+    """A design as a question names it."""
+
+    name: str
+    """For people and programs."""
+    at: Mapping[str, Asked]
+    """A value for every design axis."""
+    over: Mapping[str, Asked] = field(default_factory=dict)
+    """Ranges of tolerance axes that hold for this design alone, instead of those of the case."""
+
+
+def named_designs(stored: StoredAtlas, names: Sequence[str] = ()) -> tuple[AskedDesign, ...]:
+    """Designs that are stored in an atlas; all of them when none is named.
+
+    Raises
+    ------
+    QuestionError
+        When it holds none of that name, or none at all.
+    """
+    held: dict[str, Design] = {design.name: design for design in stored.designs}
+    if not held and not names:
+        if all(axis.role == "tolerance" for axis in stored.grid.axes):
+            return (AskedDesign("the loop", {}),)
+        raise QuestionError(
+            f"judging the atlas {stored.title!r}: it holds no designs, and none was given",
+            where=["design"],
+            remedy="give one with --at AXIS=VALUE,..., a table with --schedule FILE.csv, or write "
+            "[designs.NAME] in its config and run it again: nothing is recomputed",
+        )
+    for name in names:
+        if name not in held:
+            raise QuestionError(
+                f"looking for design {name!r}: this atlas holds {', '.join(held) or 'no designs'}",
+                where=[name],
+                remedy="name one of them, or give its values with --at",
+            )
+    return tuple(AskedDesign(name, dict(held[name].values)) for name in (names or held))
+
+
+def judge_designs(
+    stored: StoredAtlas,
+    designs: Sequence[AskedDesign],
+    demands: Sequence[Demand],
+    *,
+    confidence: float = CONFIDENCE,
+    weights: Weights | None = None,
+) -> JudgeAnswer:
+    """Judge every design against every demand.
+
+    Parameters
+    ----------
+    stored
+        The atlas.
+    designs
+        At least one.
+    demands
+        At least one: cases, or what a question says itself.
+    confidence
+        Of the intervals of yields, above 0 and below 1.
+    weights
+        Of rows, for weighted shares.
+
+    Raises
+    ------
+    QuestionError
+        When a design or a demand cannot be asked of this atlas; it names the design.
+    """
+    if not 0.0 < confidence < 1.0:
+        raise QuestionError(
+            f"giving yields at a confidence of {confidence:g}: expected above 0 and below 1",
+            where=["confidence"],
+            remedy="write --confidence 0.95",
+        )
+    checked = _check_weights(stored.grid, weights)
+    found = [
+        _judge(stored, design, demand, confidence, checked)
+        for design in designs
+        for demand in demands
+    ]
+    return JudgeAnswer(
+        atlas_id=stored.atlas_id,
+        title=stored.title,
+        grid=stored.grid,
+        designs=tuple(found),
+        confidence=confidence,
+        cautions=OVER_A_BOX,
+    )
+
+
+def _judge(
+    stored: StoredAtlas,
+    design: AskedDesign,
+    demand: Demand,
+    confidence: float,
+    weights: Weights | None,
+) -> DesignVerdict:
+    question = resolve_design(stored, design, demand)
+    scope = question.scope
+    whole = whole_tolerances(scope)
+    block = hold(stored, whole.spans)
+    structure = stored.structure
+    cases = find_worst_cases(block, structure, scope, question.requirements, also=[DECAY_TIME])
+    lines = _lines(block, structure, scope, question.requirements)
+    everywhere = find_worst_cases(block, structure, whole, question.requirements)
+    tolerance = _Tolerances(scope, everywhere)
+    walked = walk_lines(stored, block, scope) if is_stable(cases) else []
+    distances = find_distances(walked, scope)
+    fall = GainFall(None, stopped_by="a loop that is not known to be stable to begin with")
+    radius = _reached(cases, LOG_RADIUS)
+    return DesignVerdict(
+        design=design.name,
+        at=dict(scope.at),
+        case=demand.name,
+        verdict=worst_verdict([line.verdict for line in lines]),
+        lines=lines,
+        log_radius=radius,
+        radius=math.exp(radius.value),
+        decay_time=_reached(cases, DECAY_TIME),
+        over=scope.over(),
+        widened=scope.widened,
+        brackets={n: ends for n, ends in scope.brackets().items() if n in scope.bracketed},
+        shaken=_shaken(question),
+        requirements=question.requirements,
+        distances=distances,
+        hurts_most=find_hurts(block, scope),
+        gain_fall=find_gain_fall(stored, scope, walked) if is_stable(cases) else fall,
+        in_hand=tolerance.in_hand(structure),
+        acceptance=tolerance.acceptance(),
+        yields=tolerance.yields(confidence, weights),
+        largest_jump=_larger(tolerance.jump(), largest_step(walked, distances)),
+        nodes=scope.nodes,
+        unknown=cases.found.unknown_nodes,
+    )
+
+
+def resolve_design(stored: StoredAtlas, design: AskedDesign, demand: Demand) -> DesignQuestion:
+    """One design against one demand, as nodes.
+
+    Raises
+    ------
+    QuestionError
+        When the design leaves out a design axis or names a tolerance, and whatever
+        `sweep.query.question.resolve_question` refuses; the message names the design.
+    """
+    grid = stored.grid
+    asked = resolve_names(grid, design.at)
+    own = resolve_names(grid, design.over)
+    over = {n: v for n, v in demand.over.items() if find_axis(grid, n).name not in own}
+    missing = [axis.name for axis in grid.axes if axis.role == "design" and axis.name not in asked]
+    if missing:
+        raise QuestionError(
+            f"judging the design {design.name}: it gives no {', '.join(missing)}",
+            where=missing,
+            remedy=f"add it: --at {missing[0]}=VALUE; a design has a value for every design axis",
+        )
+    nature = [axis.name for axis in grid.axes if axis.role == "tolerance" and axis.name in asked]
+    if nature:
+        raise QuestionError(
+            f"judging the design {design.name}: {nature[0]} is a tolerance axis, which nature "
+            "chooses",
+            where=nature,
+            remedy=f"give its range with --over {nature[0]}=LOW:HIGH",
+        )
+    held = [spec.name for spec in stored.measures]
+    wanted = replace(demand, over={**over, **design.over})
+    try:
+        return resolve_question(grid, held, stored.title, wanted, design.at, {})
+    except QuestionError as error:
+        raise QuestionError(
+            f"judging the design {design.name}: {error.message}",
+            where=error.where,
+            remedy=error.remedy,
+        ) from error
+
+
+def whole_tolerances(scope: Scope) -> Scope:
+    """One design with every tolerance node told apart; only its own nodes are taken at the worst."""
+    spans = list(scope.spans)
+    for position in scope.tolerances:
+        spans[position] = np.arange(len(scope.grid.axes[position]), dtype=np.intp)
+    box = tuple(i for i in scope.box if i not in scope.tolerances)
+    return replace(scope, spans=tuple(spans), box=box)
+
+
+def is_stable(cases: WorstCases) -> bool:
+    """Whether a single design is known to be stable at every node of its box."""
+    found = cases.found
+    stable = found.worst[LOG_RADIUS].item() < STABILITY_THRESHOLD
+    return bool(stable and not found.unknown_nodes)
+
+
+def _reached(cases: WorstCases, extreme: Extreme) -> Reached:
+    place = (0,) * len(cases.scope.free)
+    return Reached(float(cases.found.worst[extreme][place]), cases.place_of(extreme, place))
+
+
+def _lines(
+    block: Readable, structure: LoopStructure, scope: Scope, requirements: Sequence[Requirement]
+) -> tuple[Line, ...]:
+    lines = [_line(block, scope, requirement) for requirement in requirements]
+    if "compute" in dict(structure.delay_parts):
+        lines.append(_processor_line(structure, scope))
+    return tuple(lines)
+
+
+def _line(block: Readable, scope: Scope, requirement: Requirement) -> Line:
+    extreme = Extreme(requirement.quantity, requirement.sense)
+    (found,) = find_extremes(block, scope, [extreme])
+    worst = found.worst[extreme]
+    code = decide(is_violated(requirement, worst), found.unknown > 0)
+    nodes = scope.box_node(int(found.which[extreme].item()))
+    return Line(
+        require=requirement_name(requirement),
+        text=requirement_text(requirement),
+        unit=spec_of(requirement.quantity).unit,
+        limit=requirement.limit,
+        worst=float(worst.item()),
+        at=_place(scope.grid, nodes),
+        unknown=found.unknown_nodes,
+        verdict=NAMES[int(code.item())],
+    )
+
+
+def _processor_line(structure: LoopStructure, scope: Scope) -> Line:
+    """Whether the processor is done within the period, at every node of the box."""
+    in_samples = dict(structure.delay_parts)["compute"] == "samples"
+    compute = scope.parameter("delay.compute")
+    periods = compute if in_samples else compute / scope.parameter("sample_period")
+    worst = np.unravel_index(int(periods.argmax()), periods.shape)
+    nodes = {i: int(scope.spans[i][worst[i]]) for i in scope.box if periods.shape[i] > 1}
+    late = bool(find_excluded(structure, scope).any())
+    return Line(
+        require="processor_time",
+        text="processor time at most one sample period",
+        unit="samples",
+        limit=1.0,
+        worst=float(periods[worst]),
+        at=_place(scope.grid, nodes),
+        unknown=0,
+        verdict="fails" if late else "meets",
+    )
+
+
+def _place(grid: Grid, nodes: Mapping[int, int]) -> dict[str, Value]:
+    return {grid.axes[i].name: value_at(grid.axes[i], nodes[i]) for i in sorted(nodes)}
+
+
+def _shaken(question: DesignQuestion) -> dict[str, tuple[str, Value, Value]]:
+    scope = question.scope
+    asked = {
+        axis: str(value)
+        for axis, (_, value) in resolve_names(scope.grid, question.demand.shake).items()
+    }
+    ends = scope.brackets()
+    return {name: (asked[name], *ends[name]) for name in scope.shaken}
+
+
+class _Tolerances:
+    """One design at every node of every tolerance axis."""
+
+    def __init__(self, scope: Scope, everywhere: WorstCases) -> None:
+        axes = scope.grid.axes
+        shape = tuple(len(axes[i]) for i in scope.tolerances)
+        self.axes: list[Axis] = [axes[i] for i in scope.tolerances]
+        self.box: list[Indices] = [scope.spans[i] for i in scope.tolerances]
+        # what cannot be built is of no use to anybody: as good as failing
+        verdict = np.where(everywhere.verdict == EXCLUDED, FAILS, everywhere.verdict)
+        self.verdict: Codes = verdict.astype(np.int8).reshape(shape)
+        worst = everywhere.found.worst[LOG_RADIUS].astype(np.float64)
+        self.log_radius: NDArray[np.float64] = worst.reshape(shape)
+
+    def in_hand(self, structure: LoopStructure):
+        if not self.axes:
+            return None
+        specs = structure.parameters()
+        floors = [-math.inf if a.is_row_axis else specs[a.sets[0]].low for a in self.axes]
+        return find_in_hand(self.axes, self.box, self.verdict, floors)
+
+    def acceptance(self):
+        return find_acceptance(self.axes, self.box, self.verdict)
+
+    def yields(self, confidence: float, weights: Weights | None) -> tuple[Yield, ...]:
+        return find_yields(self.axes, self.box, self.verdict, self.log_radius, confidence, weights)
+
+    def jump(self) -> float | None:
+        unordered = [i for i, a in enumerate(self.axes) if a.is_row_axis and not a.ordered]
+        return find_largest_jump(self.log_radius, self.verdict == MEETS, unordered)
+
+
+def _larger(one: float | None, other: float | None) -> float | None:
+    known = [value for value in (one, other) if value is not None]
+    return max(known, default=None)
+
+
+def _check_weights(grid: Grid, weights: Weights | None) -> Weights | None:
+    for name in weights or ():
+        axis = find_axis(grid, name)
+        if not axis.is_row_axis or axis.role != "tolerance":
+            raise QuestionError(
+                f"weighting the rows of {name}: it is no table of tolerances",
+                where=[name],
+                remedy="weigh the rows of a row axis that nature chooses from",
+            )
+    return weights
