@@ -285,9 +285,11 @@ class _Total:
 
     def fold(self, piece: _Piece) -> None:
         """Take one block's worst into it; of equal values the earlier in the box stays."""
-        # a target is made of slices, so that what it picks is a view and is written through
+        # a target is made of slices, so that what it picks is a view and is written through; the
+        # ellipsis keeps it one where no axis is free
+        target = (*piece.target, ...)
         for item, found in piece.worst.items():
-            held, held_id = self.worst[item][piece.target], self.which[item][piece.target]
+            held, held_id = self.worst[item][target], self.which[item][target]
             found_id = piece.which[item]
             worse = found > held if item.sense == "max" else found < held
             worse |= (found == held) & (found_id < held_id)
@@ -295,7 +297,7 @@ class _Total:
             np.copyto(held, found, where=worse)
             np.copyto(held_id, found_id, where=worse)
         if piece.unknown is not None:
-            self.unknown[piece.target] += piece.unknown
+            self.unknown[target] += piece.unknown
 
 
 def _run(work: Callable[[Cut], _Parts], cuts: list[Cut]) -> Iterator[_Parts]:

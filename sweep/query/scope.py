@@ -268,4 +268,4 @@ def _scope(grid: Grid, spans: Sequence[Span], fixed: Mapping[str, tuple[str, Ask
                 bracketed.append(axis.name)
                 at[axis.name] = read_value(axis, one_value(axis.name, asked), name)
     indices = tuple(np.array(span.nodes, dtype=np.intp) for span in spans)
-    return Scope(grid, indices, tuple(box), at, tuple(bracketed), tuple(widened))
+    return Scope(grid, indices, tuple(box), at, bracketed=tuple(bracketed), widened=tuple(widened))
