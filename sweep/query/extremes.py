@@ -287,7 +287,7 @@ class _Total:
         """Take one block's worst into it; of equal values the earlier in the box stays."""
         # a target is made of slices, so that what it picks is a view and is written through; the
         # ellipsis keeps it one where no axis is free
-        target = (*piece.target, ...)
+        target: tuple[Any, ...] = (*piece.target, ...)
         for item, found in piece.worst.items():
             held, held_id = self.worst[item][target], self.which[item][target]
             found_id = piece.which[item]
