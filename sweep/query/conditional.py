@@ -1,4 +1,4 @@
-"""Conditional stability: does the loop leave stability as its gain falls?
+"""Conditional stability: whether the loop leaves stability as its gain falls.
 
 An actuator that saturates lets less through, as a smaller gain would. A loop that becomes unstable
 at a smaller gain may therefore never come back from a large disturbance (C5 stands all the same:
@@ -68,7 +68,7 @@ def find_gain_fall(stored: Readable, scope: Scope, lines: list[Line]) -> GainFal
     """
     scaled = _scaled_axes(scope)
     if scaled is None:
-        return _by_plant_gain(scope, lines)
+        return _by_plant_gain(lines)
     names = tuple(scope.grid.axes[i].name for i in scaled)
     if not scaled:
         return GainFall(None, stopped_by="gains that are all 0")
@@ -207,8 +207,8 @@ def _still_stable(fails: np.ndarray, unknown: np.ndarray) -> bool | None:
     return None if (fails | unknown).all() else True
 
 
-def _by_plant_gain(scope: Scope, lines: list[Line]) -> GainFall:
-    """The same with the gain of the plant, where it is a tolerance and the controller's cannot fall.
+def _by_plant_gain(lines: list[Line]) -> GainFall:
+    """The same with the gain of the plant, where it is a tolerance.
 
     A node counts as soon as it is not stable for the worst of the other tolerances.
     """
@@ -216,11 +216,11 @@ def _by_plant_gain(scope: Scope, lines: list[Line]) -> GainFall:
         axis = line.axis
         if axis.is_row_axis or axis.role != "tolerance" or axis.sets != ("plant.gain",):
             continue
-        return _along_plant_gain(scope.grid, line)
+        return _along_plant_gain(line)
     return CANNOT_FALL
 
 
-def _along_plant_gain(grid: Grid, line: Line) -> GainFall:
+def _along_plant_gain(line: Line) -> GainFall:
     axis, worst = line.axis, line.walk.worst
     x = axis.coordinates
     low, high = float(x[line.first]), float(x[line.last])

@@ -8,7 +8,7 @@ over the box. The boundary is found as `sweep.query.limits` finds it.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, replace
 from typing import Literal
 
@@ -147,8 +147,8 @@ def _measure(
 def largest_step(lines: list[Line], distances: tuple[Distance, ...]) -> float | None:
     """The largest difference of log_radius between the two nodes of a boundary; `None` for none."""
     steps = []
-    ends = [(line, way) for line in lines for way in ("down", "up")]
-    for (line, way), distance in zip(ends, distances, strict=True):
+    twice = [line for line in lines for _ in ("down", "up")]
+    for line, distance in zip(twice, distances, strict=True):
         if distance.end == "boundary" and distance.between is not None:
             worst = line.walk.worst
             stable, other = (_node_at(line.axis, value) for value in distance.between)
@@ -169,16 +169,14 @@ def find_hurts(block: Readable, scope: Scope) -> tuple[Hurt, ...]:
     at the node of the box nearest to it.
     """
     middle = {i: nominal_node(scope.grid.axes[i], scope.spans[i]) for i in scope.tolerances}
-    nominal, _, _ = _worst_along(block, scope, middle, None)
+    nominal, _, _ = _worst_along(block, scope, middle, -1)
     found = []
     for along in scope.tolerances:
         axis = scope.grid.axes[along]
         if len(scope.spans[along]) > 1:
             alone, node, unknown = _worst_along(block, scope, middle, along)
             found.append(Hurt(axis.name, alone, value_at(axis, node), nominal, unknown))
-    return tuple(
-        sorted(found, key=lambda hurt: math.inf if math.isnan(hurt.alone) else -hurt.alone)
-    )
+    return tuple(sorted(found, key=lambda hurt: (math.isnan(hurt.alone), -hurt.alone)))
 
 
 def nominal_node(axis: Axis, nodes: Indices) -> int:
@@ -187,21 +185,15 @@ def nominal_node(axis: Axis, nodes: Indices) -> int:
 
 
 def _worst_along(
-    block: Readable, scope: Scope, middle: dict[int, int], along: int | None
+    block: Readable, scope: Scope, middle: Mapping[int, int], along: int
 ) -> tuple[float, int, int]:
-    """Largest log_radius with all but one tolerance in the middle, its node on that one, unknown.
-
-    NaN when any of the enclosing nodes of a design that the box leaves is unknown and none known.
-    """
+    """Largest log_radius with every tolerance but one in the middle, where on it, unknown nodes."""
     spans = list(scope.spans)
-    for axis, node in middle.items():
+    for axis, nominal in middle.items():
         if axis != along:
-            spans[axis] = np.array([node], dtype=np.intp)
+            spans[axis] = np.array([nominal], dtype=np.intp)
     narrowed = replace(scope, spans=tuple(spans))
     (found,) = find_extremes(block, narrowed, [LOG_RADIUS])
     node = narrowed.box_node(int(found.which[LOG_RADIUS].item()))
     unknown = int(found.unknown.item())
-    value = float(found.worst[LOG_RADIUS].item())
-    if along is None:
-        return (math.nan if unknown else value), -1, unknown
-    return value, node[along], unknown
+    return float(found.worst[LOG_RADIUS].item()), node.get(along, -1), unknown

@@ -37,8 +37,8 @@ from sweep.query.question import Demand, DesignQuestion, resolve_question
 from sweep.query.requirement import is_violated, requirement_name, requirement_text
 from sweep.query.scope import Scope
 from sweep.query.select import Asked, Value, find_axis, resolve_names, value_at
-from sweep.query.tolerance import find_acceptance, find_in_hand
-from sweep.query.verdicts import EXCLUDED, FAILS, MEETS, NAMES, Codes, decide
+from sweep.query.tolerance import Acceptance, InHand, find_acceptance, find_in_hand
+from sweep.query.verdicts import MEETS, NAMES, Codes, decide
 from sweep.query.worst import LOG_RADIUS, WorstCases, find_excluded, find_worst_cases
 from sweep.query.yields import Yield, find_yields
 from sweep.vocabulary import STABILITY_THRESHOLD, LoopStructure
@@ -129,9 +129,8 @@ def judge_designs(
             where=["confidence"],
             remedy="write --confidence 0.95",
         )
-    checked = _check_weights(stored.grid, weights)
     found = [
-        _judge(stored, design, demand, confidence, checked)
+        _judge(stored, design, demand, confidence, weights)
         for design in designs
         for demand in demands
     ]
@@ -232,7 +231,7 @@ def resolve_design(stored: StoredAtlas, design: AskedDesign, demand: Demand) -> 
 
 
 def whole_tolerances(scope: Scope) -> Scope:
-    """One design with every tolerance node told apart; only its own nodes are taken at the worst."""
+    """One design at every tolerance node, told apart; only its own nodes count at their worst."""
     spans = list(scope.spans)
     for position in scope.tolerances:
         spans[position] = np.arange(len(scope.grid.axes[position]), dtype=np.intp)
@@ -321,20 +320,18 @@ class _Tolerances:
         shape = tuple(len(axes[i]) for i in scope.tolerances)
         self.axes: list[Axis] = [axes[i] for i in scope.tolerances]
         self.box: list[Indices] = [scope.spans[i] for i in scope.tolerances]
-        # what cannot be built is of no use to anybody: as good as failing
-        verdict = np.where(everywhere.verdict == EXCLUDED, FAILS, everywhere.verdict)
-        self.verdict: Codes = verdict.astype(np.int8).reshape(shape)
+        self.verdict: Codes = everywhere.verdict.reshape(shape)
         worst = everywhere.found.worst[LOG_RADIUS].astype(np.float64)
         self.log_radius: NDArray[np.float64] = worst.reshape(shape)
 
-    def in_hand(self, structure: LoopStructure):
+    def in_hand(self, structure: LoopStructure) -> InHand | None:
         if not self.axes:
             return None
         specs = structure.parameters()
         floors = [-math.inf if a.is_row_axis else specs[a.sets[0]].low for a in self.axes]
         return find_in_hand(self.axes, self.box, self.verdict, floors)
 
-    def acceptance(self):
+    def acceptance(self) -> Acceptance | None:
         return find_acceptance(self.axes, self.box, self.verdict)
 
     def yields(self, confidence: float, weights: Weights | None) -> tuple[Yield, ...]:
@@ -348,15 +345,3 @@ class _Tolerances:
 def _larger(one: float | None, other: float | None) -> float | None:
     known = [value for value in (one, other) if value is not None]
     return max(known, default=None)
-
-
-def _check_weights(grid: Grid, weights: Weights | None) -> Weights | None:
-    for name in weights or ():
-        axis = find_axis(grid, name)
-        if not axis.is_row_axis or axis.role != "tolerance":
-            raise QuestionError(
-                f"weighting the rows of {name}: it is no table of tolerances",
-                where=[name],
-                remedy="weigh the rows of a row axis that nature chooses from",
-            )
-    return weights

@@ -117,7 +117,7 @@ class Hurt:
     """Where on the axis it is reached."""
     nominal: float
     """log_radius with every tolerance at its nominal node, or at the node of the box nearest to it;
-    NaN when that is unknown."""
+    NaN when unknown."""
     unknown: int
     """Nodes of that range that are not known."""
 
