@@ -2,24 +2,29 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping, Sequence
 from functools import cached_property
 from pathlib import Path
-from typing import TYPE_CHECKING, TypeVar
-
-import numpy as np
+from typing import TYPE_CHECKING
 
 from sweep.errors import QuestionError
 from sweep.grid import Grid
-from sweep.query.answers import LimitsAnswer, PlaneAnswer, PointAnswer, RobustAnswer
-from sweep.query.cautions import AT_A_NODE
-from sweep.query.derived import derive
+from sweep.query.answers import (
+    ChooseAnswer,
+    JudgeAnswer,
+    LimitsAnswer,
+    PlaneAnswer,
+    PointAnswer,
+    RobustAnswer,
+)
+from sweep.query.choose import choose_designs
 from sweep.query.facts import AtlasFacts, read_facts
-from sweep.query.held import hold_nodes
+from sweep.query.gather import as_names, gather_demands, gather_designs, gather_weights
+from sweep.query.judge import CONFIDENCE, Weights, judge_designs
 from sweep.query.limits import MOST_ROWS, find_limits, resolve_limits
 from sweep.query.memo import Memo
 from sweep.query.plane import find_plane
+from sweep.query.point import find_point
 from sweep.query.question import make_demand, resolve_question
 from sweep.query.requirement import Asked as Required
 from sweep.query.requirement import find_case
@@ -29,15 +34,12 @@ from sweep.query.select import (
     find_axis,
     resolve_names,
 )
-from sweep.vocabulary import STABILITY_THRESHOLD, LoopStructure
+from sweep.vocabulary import LoopStructure
 
 if TYPE_CHECKING:
     import xarray
 
     from sweep.store.atlas import StoredAtlas
-
-
-Number = TypeVar("Number", np.float32, np.float64)
 
 
 def open_atlas(where: str | Path, shelf: str | Path = "results") -> Atlas:
@@ -135,26 +137,7 @@ class Atlas:
         QuestionError
             When a value is not at a node.
         """
-        held = hold_nodes(self.grid, self._asked(at, design), nearest=nearest)
-        block = tuple(slice(node, node + 1) for node in held.node)
-        measures = {
-            spec.name: float(self.stored.read(spec.name, block).reshape(-1)[0])
-            for spec in self.stored.measures
-        }
-        period_s = float(self.grid.parameters(block)["sample_period"].reshape(-1)[0])
-        log_radius = measures["log_radius"]
-        return PointAnswer(
-            atlas_id=self.atlas_id,
-            grid=self.grid,
-            node=held.node,
-            at=held.at,
-            measures=measures,
-            derived=derive(log_radius, measures["mode_angle"], period_s),
-            stable=None if math.isnan(log_radius) else log_radius < STABILITY_THRESHOLD,
-            nominal=held.nominal,
-            moved=held.moved,
-            cautions=AT_A_NODE,
-        )
+        return find_point(self.stored, self._asked(at, design), nearest=nearest)
 
     def limits(
         self,
@@ -253,6 +236,103 @@ class Atlas:
         )
         centre = self._asked(None, around) if isinstance(around, str) else dict(around or {})
         return find_robust(self.stored, question, centre, self.memo)
+
+    def judge(
+        self,
+        design: str | Sequence[str] = (),
+        *,
+        case: str | Sequence[str] = (),
+        at: Mapping[str, Asked] | None = None,
+        schedule: str | Path | None = None,
+        over: Mapping[str, Asked] | None = None,
+        require: Required | None = None,
+        shake: Mapping[str, float | str] | None = None,
+        confidence: float = CONFIDENCE,
+        weights: Weights | Path | str | None = None,
+    ) -> JudgeAnswer:
+        """Judge designs against cases, line by line.
+
+        Parameters
+        ----------
+        design
+            Names of designs of the atlas; all of them when nothing else is given either.
+        case
+            Names of its cases. When left out it is every case, or, with ``over`` or ``require``,
+            what these say alone.
+        at
+            A design by its values, or changes to the named ones; between nodes the worst of the
+            enclosing ones counts.
+        schedule
+            A CSV file with a design in every row, such as a gain schedule.
+        over, require, shake
+            As in `robust`; they come on top of a case.
+        confidence
+            Of the intervals of yields, above 0 and below 1.
+        weights
+            What rows count in a yield: by axis and label, or a CSV file.
+
+        Raises
+        ------
+        QuestionError
+            When the question cannot be asked of this atlas.
+        """
+        path = Path(schedule) if schedule is not None else None
+        return judge_designs(
+            self.stored,
+            gather_designs(self.stored, as_names(design), dict(at or {}), path),
+            gather_demands(
+                self.stored.cases, as_names(case), dict(over or {}), require or {}, shake or {}
+            ),
+            confidence=confidence,
+            weights=gather_weights(self.stored, weights),
+        )
+
+    def choose(
+        self,
+        case: str = "",
+        *,
+        best: str = "decay_time",
+        at: Mapping[str, Asked] | None = None,
+        over: Mapping[str, Asked] | None = None,
+        within: Mapping[str, Asked] | None = None,
+        require: Required | None = None,
+        shake: Mapping[str, float | str] | None = None,
+        design: str = "",
+        price: bool = False,
+    ) -> ChooseAnswer:
+        """Choose a design at every sample period, and the slowest period at which one meets.
+
+        Parameters
+        ----------
+        case
+            Name of a case of the atlas: its box and its requirement.
+        best
+            What to choose by: a stored or derived quantity of which less or more is better, at its
+            worst over the box; or ``"gain_box"``, the middle of the widest box of designs that all
+            meet.
+        at, over, within, require, shake
+            As in `robust`.
+        design
+            Name of a design whose values come before ``at``, at any sample period.
+        price
+            Whether to tell what each tolerance costs: what could be chosen were it halved, or
+            removed.
+
+        Raises
+        ------
+        QuestionError
+            When the question cannot be asked of this atlas.
+        """
+        return choose_designs(
+            self.stored,
+            make_demand(self.stored.cases, case, over, require, shake),
+            best=best,
+            at=at,
+            within=within,
+            design=design,
+            price=price,
+            memo=self.memo,
+        )
 
     def plane(
         self,
