@@ -92,7 +92,7 @@ class Acceptance:
     holds_nominal: bool
     """Whether the nominal node of every axis lies in the box."""
     around_nominal: Mapping[str, tuple[Value, Value]] | None
-    """The largest box that holds it; the same one if it does. ``None`` if the nominal does not meet."""
+    """The largest box that holds it, which may be that one; ``None`` when it does not meet."""
     around_nominal_nodes: int
     """Nodes in that box."""
     around_nominal_exact: bool
@@ -152,8 +152,8 @@ def find_in_hand(
     Returns
     -------
     ``None`` when no side grows: there is no plain tolerance axis, or the box is one node along
-    each. Of several nodes at the same factor, ``at`` is the first in C order; of several axes that reach
-    it together, ``axis`` is the first. What cannot be built counts as failing.
+    each. Of several nodes at the same factor, ``at`` is the first in C order; of several axes that
+    reach it together, ``axis`` is the first. What cannot be built counts as failing.
 
     References
     ----------

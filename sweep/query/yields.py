@@ -37,10 +37,10 @@ class Yield:
     """How many rows of a table meet, with the interval that their number alone supports.
 
     The interval is about the population that the rows stand for, and supposes that they are a
-    random sample of it, drawn without looking at the outcome. For units picked by hand, or a list of
-    operating points, read the share and leave the interval. It is an interval of the count: weights
-    play no part in it. Unknown rows count as failing, so that ``low`` and ``at_least`` err on the
-    safe side; with unknown rows ``high`` is no upper bound.
+    random sample of it, drawn without looking at the outcome. For units picked by hand, or a list
+    of operating points, read the share and leave the interval. It is an interval of the count:
+    weights play no part in it. Unknown rows count as failing, so that ``low`` and ``at_least`` err
+    on the safe side; with unknown rows ``high`` is no upper bound.
     """
 
     axis: str
@@ -242,8 +242,8 @@ def _worst_row(axis: Axis, nodes: Indices, rows: Codes, radii: FloatArray) -> Wo
 
 
 def _weighted_share(meets: NDArray[np.bool_], weights: FloatArray) -> float:
-    # scaled first: a sum of finite weights may not be finite
-    scaled = weights / weights.max()
+    # scaled by a power of 2, which is exact: a sum of finite weights may not be finite
+    scaled = np.ldexp(weights, -math.frexp(weights.max())[1])
     return math.fsum(scaled[meets]) / math.fsum(scaled)
 
 
