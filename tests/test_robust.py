@@ -11,6 +11,7 @@ import random
 import numpy as np
 import plain_robust
 import pytest
+import random_questions
 import stand_in
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -197,7 +198,7 @@ SEEDS = st.integers(0, 2**64).map(random.Random)
 @settings(max_examples=250)
 @given(SEEDS)
 def test_every_answer_is_what_loops_over_the_nodes_find(rnd):
-    check(plain_robust.random_question(rnd))
+    check(random_questions.random_question(rnd))
 
 
 # --- what hypothesis found, one by one -----------------------------------------------------------
@@ -289,7 +290,7 @@ def test_rows_without_an_order_are_no_neighbours_and_share_no_box():
 @settings(max_examples=40)
 @given(SEEDS)
 def test_tiles_blocks_and_threads_change_nothing(rnd):
-    question = plain_robust.random_question(rnd)
+    question = random_questions.random_question(rnd)
     stored = question.atlas.stored
     answers = []
     for nodes_at_once, few_blocks in ((2_000_000, 3), (1, 0), (7, 0)):

@@ -252,14 +252,14 @@ class _Work:
     ) -> _Piece:
         worst, which = {}, {}
         for item in self.reduced:
-            place = _worst_place(lines[item.quantity], item.sense, some_unknown=missing is not None)
+            place = worst_place(lines[item.quantity], item.sense, some_unknown=missing is not None)
             found = np.take_along_axis(lines[item.quantity], place[..., None], axis=-1)
             worst[item], which[item] = found[..., 0], ids[place]
         count = None if missing is None else missing.sum(axis=-1, dtype=np.int32)
         return _Piece(target, worst, which, count)
 
 
-def _worst_place(values: NDArray[Any], sense: str, *, some_unknown: bool) -> NDArray[np.intp]:
+def worst_place(values: NDArray[Any], sense: str, *, some_unknown: bool) -> NDArray[np.intp]:
     """Along the last dimension, the first place of the worst known value; 0 where none is known."""
     if not some_unknown:
         return values.argmax(axis=-1) if sense == "max" else values.argmin(axis=-1)

@@ -19,7 +19,7 @@ from sweep.errors import QuantityError, QuestionError
 from sweep.grid import Axis, Grid
 from sweep.quantities import parse_quantity, to_float
 from sweep.query.blocks import Indices
-from sweep.query.extremes import Extreme, Extremes
+from sweep.query.extremes import Extreme, Extremes, worst_place
 from sweep.query.select import SAME_NODE, gain_changes_structure
 
 Asked = Mapping[str, float | str]
@@ -120,8 +120,11 @@ def find_window(grid: Grid, position: int, values: NDArray[np.float64], reach: R
     lost = (first < 0) | (last > len(x) - 1)
     first, last = np.maximum(first, 0), np.minimum(last, len(x) - 1)
     for node in gain_changes_structure(grid, axis):
-        lost |= (first == node) & (x[node] < low - slack)
-        lost |= (last == node) & (x[node] > high + slack)
+        below = (first == node) & (x[node] < low - slack)
+        above = (last == node) & (x[node] > high + slack)
+        lost |= below | above
+        # outside the range, that node is no neighbour and says nothing about it
+        first, last = first + below, last - above
     return Window(position, first.astype(np.intp), last.astype(np.intp), lost)
 
 
@@ -166,12 +169,13 @@ def shake_extremes(
 def _worst_places(
     values: NDArray[Any], sense: str, parts: list[slice], dimension: int
 ) -> NDArray[np.intp]:
-    moved = np.moveaxis(values, dimension, 0)
-    mildest = np.asarray(-np.inf if sense == "max" else np.inf, values.dtype)
-    filled = np.where(np.isnan(moved), mildest, moved)
-    pick = np.argmax if sense == "max" else np.argmin
-    found = np.stack([part.start + pick(filled[part], axis=0) for part in parts])
-    return np.moveaxis(found, 0, dimension)
+    moved = np.moveaxis(values, dimension, -1)
+    some_unknown = bool(np.isnan(moved).any())
+    found = [
+        part.start + worst_place(moved[..., part], sense, some_unknown=some_unknown)
+        for part in parts
+    ]
+    return np.moveaxis(np.stack(found, axis=-1), -1, dimension)
 
 
 def _not_a_reach(axis: Axis, asked: object, problem: str) -> QuestionError:
