@@ -41,7 +41,7 @@ from sweep.query.tolerance import Acceptance, InHand, find_acceptance, find_in_h
 from sweep.query.verdicts import MEETS, NAMES, Codes, decide
 from sweep.query.worst import LOG_RADIUS, WorstCases, find_excluded, find_worst_cases
 from sweep.query.yields import Yield, find_yields
-from sweep.vocabulary import STABILITY_THRESHOLD, LoopStructure
+from sweep.vocabulary import LoopStructure
 
 if TYPE_CHECKING:
     from sweep.store.atlas import StoredAtlas
@@ -160,7 +160,8 @@ def _judge(
     lines = _lines(block, structure, scope, question.requirements)
     everywhere = find_worst_cases(block, structure, whole, question.requirements)
     tolerance = _Tolerances(scope, everywhere)
-    walked = walk_lines(stored, block, scope) if is_stable(cases) else []
+    is_stable = lines[0].verdict == "meets"
+    walked = walk_lines(stored, block, scope) if is_stable else []
     distances = find_distances(walked, scope)
     fall = GainFall(None, stopped_by="a loop that is not known to be stable to begin with")
     radius = _reached(cases, LOG_RADIUS)
@@ -180,7 +181,7 @@ def _judge(
         requirements=question.requirements,
         distances=distances,
         hurts_most=find_hurts(block, scope),
-        gain_fall=find_gain_fall(stored, scope, walked) if is_stable(cases) else fall,
+        gain_fall=find_gain_fall(stored, scope, walked) if is_stable else fall,
         in_hand=tolerance.in_hand(structure),
         acceptance=tolerance.acceptance(),
         yields=tolerance.yields(confidence, weights),
@@ -237,13 +238,6 @@ def whole_tolerances(scope: Scope) -> Scope:
         spans[position] = np.arange(len(scope.grid.axes[position]), dtype=np.intp)
     box = tuple(i for i in scope.box if i not in scope.tolerances)
     return replace(scope, spans=tuple(spans), box=box)
-
-
-def is_stable(cases: WorstCases) -> bool:
-    """Whether a single design is known to be stable at every node of its box."""
-    found = cases.found
-    stable = found.worst[LOG_RADIUS].item() < STABILITY_THRESHOLD
-    return bool(stable and not found.unknown_nodes)
 
 
 def _reached(cases: WorstCases, extreme: Extreme) -> Reached:

@@ -1,0 +1,352 @@
+"""Single designs are judged as plain loops over every node judge them."""
+
+from __future__ import annotations
+
+import json
+import math
+from random import Random
+
+import memory_atlas
+import numpy as np
+import plain_judge as plain
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from plain_robust import THRESHOLD, quantity_at
+
+from sweep.config import Case, Design, Requirement
+from sweep.errors import QuestionError
+from sweep.query.judge import AskedDesign, judge_designs, named_designs
+from sweep.query.question import Demand
+from sweep.query.tolerance import find_acceptance, find_in_hand
+from sweep.query.yields import find_yields
+from sweep.vocabulary import LoopStructure
+
+SEEDS = st.integers(0, 2**32 - 1).map(Random)
+
+
+def judged(asked):
+    demand = Demand(None, asked.over, asked.question.asked["require"], asked.shake)
+    answer = judge_designs(asked.question.atlas.stored, [AskedDesign("d", asked.at)], [demand])
+    json.dumps(answer.to_json(), allow_nan=False)
+    (found,) = answer.designs
+    return found
+
+
+def same(one, other):
+    both = one is not None and other is not None
+    if both and isinstance(one, float) and math.isnan(one):
+        return math.isnan(other)
+    return one == other or (both and math.isclose(one, other, rel_tol=1e-9))
+
+
+def is_reached(asked, at, quantity, value, first):
+    """Whether a value is reached at a place: of stored measures at the first of equal nodes."""
+    if quantity in ("log_radius", "mode_angle"):
+        return at == plain.place(asked, first)
+    nodes = [node for node in plain.nodes_of(asked) if plain.place(asked, node) == at]
+    return any(same(quantity_at(asked.question, quantity, node), value) for node in nodes)
+
+
+# --- against plain loops ------------------------------------------------------------------------
+
+
+@given(SEEDS)
+@settings(max_examples=100)
+def test_verdict_and_every_line_are_those_of_plain_loops(rnd):
+    asked = plain.random_design(rnd)
+    found = judged(asked)
+    assert found.verdict == plain.verdict(asked)
+    bounds = [("log_radius", "max", THRESHOLD), *asked.question.bounds]
+    lines = [line for line in found.lines if line.require != "processor_time"]
+    for line, (quantity, sense, limit) in zip(lines, bounds, strict=True):
+        value, node, unknown = plain.worst(asked, plain.nodes_of(asked), quantity, sense)
+        assert same(line.worst, value)
+        assert line.unknown == unknown
+        assert node is None or is_reached(asked, line.at, quantity, value, node)
+        first = line.require == "stable"
+        assert line.verdict == plain.line_verdict(asked, quantity, sense, limit, is_stability=first)
+    value, node, _ = plain.worst(asked, plain.nodes_of(asked), "decay_time", "max")
+    assert same(found.decay_time.value, value)
+    assert node is None or is_reached(asked, found.decay_time.at, "decay_time", value, node)
+    assert found.nodes == len(plain.nodes_of(asked))
+
+
+@given(SEEDS)
+@settings(max_examples=100)
+def test_distances_end_where_plain_loops_leave_the_stable_stretch(rnd):
+    asked = plain.random_design(rnd)
+    found = judged(asked)
+    if not plain.is_stable(asked):
+        assert found.distances == ()
+        return
+    walked = [axis for axis in asked.axes if not axis.labels or axis.ordered]
+    assert sorted({d.axis for d in found.distances}) == sorted(axis.name for axis in walked)
+    steps = []
+    for distance in found.distances:
+        axis = asked.question.atlas.grid.axis(distance.axis)
+        values = plain.line(asked, axis)
+        span = asked.spans[axis.name]
+        node, step = (span[0], -1) if distance.direction == "down" else (span[-1], 1)
+        stable, other, end = plain.stretch_end(values, node, step)
+        assert distance.end == end
+        name = axis.labels or axis.coordinates.tolist()
+        start = asked.at[axis.name] if axis.role == "design" else name[node]
+        assert distance.start == start
+        if end != "boundary":
+            assert distance.to == name[stable]
+        else:
+            assert distance.between == (name[stable], name[other])
+            steps.append(abs(values[stable] - values[other]))
+        if not axis.labels:
+            ends = sorted((name[stable], name[other if end == "boundary" else stable]))
+            assert ends[0] <= distance.to <= ends[1]
+            assert distance.by == abs(distance.to - start)
+            assert start == 0 or same(distance.percent, 100 * distance.by / abs(start))
+            assert (distance.db is None) == (
+                axis.sets[0] not in (*plain.GAINS, "plant.gain") or distance.to * start <= 0
+            )
+    steps += plain.jump_over(*plain.tolerance_grid(asked))
+    assert same(found.largest_jump, max(steps, default=None))
+
+
+@given(SEEDS)
+@settings(max_examples=60)
+def test_distances_are_the_limits_along_the_same_line(rnd):
+    asked = plain.random_design(rnd)
+    asked.shake.clear()
+    for distance in judged(asked).distances:
+        at = {name: value for name, value in asked.at.items() if name != distance.axis}
+        over = {name: ends for name, ends in asked.over.items() if name != distance.axis}
+        limits = asked.question.atlas.limits(distance.axis, at=at, over=over)
+        side = "low" if distance.direction == "down" else "high"
+        ends = [getattr(interval, side) for interval in limits.rows[0].intervals]
+        (end,) = (end for end in ends if end.value == distance.to and end.end == distance.end)
+        assert (end.kind, end.hz, end.worst) == (distance.kind, distance.hz, distance.worst)
+
+
+@given(SEEDS)
+@settings(max_examples=100)
+def test_the_tolerance_that_hurts_most_is_that_of_plain_loops(rnd):
+    asked = plain.random_design(rnd)
+    hurts = {hurt.axis: hurt for hurt in judged(asked).hurts_most}
+    middle = plain.middle(asked)
+    nominal, _, _ = plain.worst(asked, plain.nodes_of(asked, **middle), "log_radius", "max")
+    several = [name for name in middle if len(asked.spans[name]) > 1]
+    assert set(hurts) == set(several)
+    for name, hurt in hurts.items():
+        alone = middle | {name: asked.spans[name]}
+        nodes = plain.nodes_of(asked, **alone)
+        value, node, unknown = plain.worst(asked, nodes, "log_radius", "max")
+        assert same(hurt.alone, value)
+        assert same(hurt.nominal, nominal)
+        assert hurt.unknown == unknown
+        assert node is None or hurt.at == plain.place(asked, node)[name]
+    known = [hurt.alone for hurt in hurts.values() if not math.isnan(hurt.alone)]
+    assert known == sorted(known, reverse=True)
+
+
+@given(SEEDS)
+@settings(max_examples=150)
+def test_conditional_stability_is_that_of_plain_loops(rnd):
+    asked = plain.random_design(rnd)
+    fall = judged(asked).gain_fall
+    if not plain.is_stable(asked):
+        assert fall.conditionally_stable is None
+        return
+    expected, factor, told = plain.gain_fall(asked)
+    assert fall.conditionally_stable is expected
+    assert same(fall.factor, factor)
+    assert expected is None or same(fall.followed_to, told)
+
+
+@given(SEEDS)
+@settings(max_examples=60)
+def test_in_hand_acceptance_and_yield_rest_on_the_verdict_at_every_tolerance_node(rnd):
+    asked = plain.random_design(rnd)
+    found = judged(asked)
+    axes, codes, radii = plain.tolerance_grid(asked)
+    box = [np.array(asked.spans[axis.name]) for axis in axes]
+    positive = ("damping", "compute", "sample_period")
+    floors = [0.0 if axis.name in positive else -math.inf for axis in axes]
+    assert found.in_hand == (find_in_hand(axes, box, codes, floors) if axes else None)
+    assert found.acceptance == find_acceptance(axes, box, codes)
+    assert found.yields == find_yields(axes, box, codes, radii)
+    if found.in_hand:
+        assert (found.in_hand.holds_to >= 1) == (found.verdict == "meets")
+
+
+# --- what single cases look like ----------------------------------------------------------------
+
+
+def one_gain(values, **more):
+    """A gain from -2 to 2, log_radius as given."""
+    return memory_atlas.atlas(
+        [memory_atlas.axis("kp", [-2.0, -1.0, 0.0, 1.0, 2.0], sets="controller.kp")], values, **more
+    )
+
+
+def judge_one(atlas, at, **more):
+    (found,) = judge_designs(
+        atlas.stored, [AskedDesign("d", at, more.pop("own", {}))], [Demand(**more)]
+    ).designs
+    return found
+
+
+def test_a_design_between_nodes_takes_the_worse_of_them_and_says_so():
+    found = judge_one(one_gain([0.1, -0.1, -0.4, -0.3, 0.2]), {"kp": 0.25})
+    assert found.bracketed
+    assert found.brackets == {"kp": (0.0, 1.0)}
+    assert found.log_radius.value == pytest.approx(-0.3)
+    assert found.log_radius.at == {"kp": 1.0}
+    assert found.to_json()["bracketed"] is True
+
+
+def test_a_loop_that_leaves_stability_at_a_smaller_gain_is_conditionally_stable():
+    found = judge_one(one_gain([0.1, -0.1, 0.4, 0.3, -0.2]), {"kp": 2.0})
+    assert found.gain_fall.conditionally_stable is True
+    assert found.gain_fall.factor == 0.5
+    assert found.gain_fall.at == {"kp": 1.0}
+
+
+def test_a_loop_that_is_not_stable_without_any_gain_is_not_conditionally_stable_for_that():
+    fall = judge_one(one_gain([0.1, -0.1, 0.4, -0.3, -0.2]), {"kp": 2.0}).gain_fall
+    assert fall.conditionally_stable is False
+    assert fall.followed_to == 0.0
+
+
+def test_an_unknown_smaller_gain_leaves_conditional_stability_open():
+    fall = judge_one(one_gain([0.1, -0.1, 0.4, np.nan, -0.2]), {"kp": 2.0}).gain_fall
+    assert fall.conditionally_stable is None
+    assert fall.stopped_by == "nodes that are not known"
+
+
+def test_an_axis_that_ends_above_no_gain_says_how_far_down_it_tells():
+    axes = [memory_atlas.axis("kp", [0.5, 1.0, 2.0], sets="controller.kp")]
+    fall = judge_one(memory_atlas.atlas(axes, [-0.1, -0.2, -0.3]), {"kp": 2.0}).gain_fall
+    assert (fall.conditionally_stable, fall.followed_to) == (False, 0.25)
+    assert "axis kp" in fall.stopped_by
+
+
+@pytest.mark.parametrize(("plant", "expected"), [(-0.1, False), (0.1, True)])
+def test_a_fixed_gain_makes_the_gain_of_the_plant_fall_instead(plant, expected):
+    axes = [memory_atlas.axis("gain", [0.5, 1.0, 2.0], sets="plant.gain", role="tolerance")]
+    atlas = memory_atlas.atlas(axes, [plant, -0.2, -0.3], fixed={"controller.kp": 1.0})
+    fall = judge_one(atlas, {}, over={"gain": (1.0, 2.0)}).gain_fall
+    assert fall.conditionally_stable is expected
+    assert fall.scaled == ("gain",)
+    assert fall.factor == (0.5 if expected else None)
+
+
+def test_a_fixed_gain_without_a_gain_of_the_plant_leaves_it_open():
+    axes = [memory_atlas.axis("damping", [0.1, 0.2], sets="plant.damping", role="tolerance")]
+    atlas = memory_atlas.atlas(axes, [-0.2, -0.3], fixed={"controller.kp": 1.0})
+    assert judge_one(atlas, {}).gain_fall.conditionally_stable is None
+
+
+def test_a_processor_that_needs_more_than_a_period_fails():
+    axes = [
+        memory_atlas.axis("sample_period", [0.01, 0.02], unit="s"),
+        memory_atlas.axis("compute", [0.005, 0.015], sets="delay.compute", role="tolerance"),
+    ]
+    structure = LoopStructure("oscillator", "p", delay_parts=(("compute", "s"),))
+    atlas = memory_atlas.atlas(axes, [[-0.1, -0.1], [-0.1, -0.1]], structure=structure)
+    fails = judge_one(atlas, {"sample_period": 0.01})
+    assert (fails.verdict, fails.lines[-1].require) == ("fails", "processor_time")
+    assert fails.lines[-1].worst == pytest.approx(1.5)
+    assert fails.lines[-1].at == {"compute": 0.015}
+    assert judge_one(atlas, {"sample_period": 0.02}).verdict == "meets"
+    assert judge_one(atlas, {"sample_period": 0.01}, over={"compute": "0.005"}).verdict == "meets"
+
+
+def test_a_box_of_the_design_itself_stands_instead_of_that_of_the_case():
+    axes = [
+        memory_atlas.axis("kp", [1.0, 2.0], sets="controller.kp"),
+        memory_atlas.axis("damping", [0.1, 0.2, 0.3], sets="plant.damping", role="tolerance"),
+    ]
+    atlas = memory_atlas.atlas(axes, [[0.1, -0.1, -0.2], [0.1, -0.1, -0.2]])
+    case = Case("cold", {"damping": (0.1, 0.2)}, (Requirement("radius", "max", 0.99),))
+    assert judge_one(atlas, {"kp": 1}, case=case).verdict == "fails"
+    narrowed = judge_one(atlas, {"kp": 1}, case=case, own={"damping": "0.2:0.3"})
+    assert (narrowed.verdict, narrowed.over) == ("meets", {"damping": (0.2, 0.3)})
+
+
+def test_every_design_meets_every_case_and_one_failure_decides():
+    atlas = one_gain([0.1, -0.1, -0.4, -0.3, np.nan])
+    designs = [AskedDesign(str(kp), {"kp": kp}) for kp in (1.0, 2.0, -2.0)]
+    demands = [Demand(), Demand(require={"max_radius": 0.95})]
+    answer = judge_designs(atlas.stored, designs, demands)
+    assert [found.verdict for found in answer.designs] == ["meets"] * 2 + ["unknown"] * 2 + [
+        "fails"
+    ] * 2
+    assert answer.verdict == "fails"
+    assert judge_designs(atlas.stored, designs[:2], demands).verdict == "unknown"
+    assert judge_designs(atlas.stored, designs[:1], demands).verdict == "meets"
+    assert "meets" in repr(answer)
+
+
+def test_gains_are_also_apart_in_db_and_from_zero_in_no_ratio():
+    found = judge_one(one_gain([0.1, -0.1, -0.4, -0.3, 0.3]), {"kp": 1.0})
+    down, up = found.distances
+    assert (down.end, down.db, up.end) == ("boundary", None, "boundary")
+    assert up.db == pytest.approx(20 * math.log10(up.to))
+    assert up.percent == pytest.approx(100 * (up.to - 1))
+    at_zero = judge_one(one_gain([0.1, -0.1, -0.4, -0.3, 0.3]), {"kp": 0.0}).distances
+    assert {(d.percent, d.db) for d in at_zero} == {(None, None)}
+
+
+def test_no_kernel_and_few_nodes_are_needed():
+    atlas = one_gain([0.1, -0.1, -0.4, -0.3, 0.3])
+    judge_one(atlas, {"kp": 1.0})
+    assert len(atlas.stored.nodes_read) <= 4
+
+
+# --- what cannot be asked -----------------------------------------------------------------------
+
+
+def test_named_designs_are_those_of_the_atlas():
+    designs = (Design("quick", {"kp": 1.0}), Design("slow", {"kp": 2.0}))
+    stored = one_gain([0.0] * 5, designs=designs).stored
+    assert [design.name for design in named_designs(stored)] == ["quick", "slow"]
+    assert named_designs(stored, ["slow"]) == (AskedDesign("slow", {"kp": 2.0}),)
+    with pytest.raises(QuestionError, match="holds quick, slow"):
+        named_designs(stored, ["fast"])
+
+
+def test_an_atlas_without_designs_says_how_one_is_given():
+    with pytest.raises(QuestionError) as caught:
+        named_designs(one_gain([0.0] * 5).stored)
+    assert "--at" in caught.value.remedy
+    assert "--schedule" in caught.value.remedy
+
+
+@pytest.mark.parametrize(
+    ("at", "more", "problem"),
+    [
+        ({}, {}, "gives no kp"),
+        ({"kp": 9}, {}, "the axis runs from"),
+        ({"kp": 1, "ki": 2}, {}, "no such axis"),
+        ({"kp": 1}, {"require": {"min_modulus_margin": 0.5}}, "modulus_margin"),
+        ({"kp": 1}, {"over": {"kp": "1:2"}}, "kp"),
+        ({"kp": 2}, {"shake": {"kp": "10%"}}, "shaking kp"),
+    ],
+)
+def test_what_cannot_be_asked_is_told_in_one_line(at, more, problem):
+    with pytest.raises(QuestionError) as caught:
+        judge_one(one_gain([-0.1] * 5), at, **more)
+    assert problem in caught.value.message
+    assert "\n" not in caught.value.message
+    assert caught.value.remedy
+
+
+def test_a_tolerance_is_not_part_of_a_design():
+    axes = [memory_atlas.axis("damping", [0.1, 0.2], sets="plant.damping", role="tolerance")]
+    with pytest.raises(QuestionError, match="tolerance axis") as caught:
+        judge_one(memory_atlas.atlas(axes, [-0.1, -0.1]), {"damping": 0.1})
+    assert "--over damping" in caught.value.remedy
+
+
+@pytest.mark.parametrize("confidence", [0.0, 1.0, math.nan])
+def test_a_confidence_lies_between_0_and_1(confidence):
+    with pytest.raises(QuestionError, match="confidence"):
+        judge_designs(one_gain([-0.1] * 5).stored, [], [], confidence=confidence)
