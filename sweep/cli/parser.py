@@ -7,7 +7,7 @@ import shutil
 import textwrap
 from collections.abc import Sequence
 
-from sweep.cli import decide, keep, look, make, robust
+from sweep.cli import choose, decide, judge, keep, look, make, robust
 from sweep.cli.command import Command, Parser
 
 COMMANDS: tuple[Command, ...] = (
@@ -15,6 +15,8 @@ COMMANDS: tuple[Command, ...] = (
     *look.COMMANDS,
     *decide.COMMANDS,
     *robust.COMMANDS,
+    *choose.COMMANDS,
+    *judge.COMMANDS,
     *keep.COMMANDS,
 )
 

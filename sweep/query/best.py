@@ -6,9 +6,6 @@ import difflib
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-import numpy as np
-from numpy.typing import NDArray
-
 from sweep.errors import QuestionError
 from sweep.query.answers.choose import GAIN_BOX
 from sweep.query.derived import spec_of
@@ -36,11 +33,6 @@ class Best:
     def is_box(self) -> bool:
         """Whether the widest box of gains is wanted, and not a quantity."""
         return self.name == GAIN_BOX
-
-    def scores(self, cases: WorstCases) -> NDArray[np.floating]:
-        """The quantity of every design so that less is better; NaN where it is not known."""
-        values = cases.found.worst[self.extreme]
-        return values if self.extreme.sense == "max" else -values
 
 
 def read_best(name: str, held: Sequence[str], title: str) -> Best:

@@ -15,22 +15,23 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from sweep.query.answers.choose import ChooseAnswer, ChooseRow, DelayLeft
+from sweep.errors import QuestionError
+from sweep.query.answers.choose import ChooseAnswer, ChooseRow, DelayLeft, Outcome
 from sweep.query.answers.robust import LargestBox
 from sweep.query.best import Best, find_gain_box, read_best
 from sweep.query.cautions import OVER_A_BOX
 from sweep.query.delay_left import find_delay_left
-from sweep.query.extremes import Extreme
+from sweep.query.extremes import Extreme, Places
 from sweep.query.jump import find_largest_jump
 from sweep.query.largest_box import Box
 from sweep.query.memo import Memo
 from sweep.query.periods import Periods, find_periods
-from sweep.query.price import PriceList, find_outcome, find_prices, plan_prices
+from sweep.query.price import PriceList, find_outcome, find_prices, plan_prices, recall_outcomes
 from sweep.query.question import Demand, DesignQuestion, resolve_question
 from sweep.query.robust import unordered_dimensions
 from sweep.query.scope import Scope
-from sweep.query.select import Asked, value_at
-from sweep.query.verdicts import FAILS, MEETS, NAMES
+from sweep.query.select import Asked, resolve_names, value_at
+from sweep.query.verdicts import FAILS, MEETS, NAMES, Codes
 from sweep.query.worst import LOG_RADIUS, WorstCases, find_worst_cases, find_worst_of_parts
 
 if TYPE_CHECKING:
@@ -47,6 +48,7 @@ def choose_designs(
     best: str = "decay_time",
     at: Mapping[str, Asked] | None = None,
     within: Mapping[str, Asked] | None = None,
+    design: str = "",
     price: bool = False,
     memo: Memo | None = None,
 ) -> ChooseAnswer:
@@ -64,6 +66,8 @@ def choose_designs(
         at that period.
     at, within
         Design axes that are fixed, or kept to a range.
+    design
+        Name of a design whose values come before ``at``, at any sample period.
     price
         Whether to tell what each tolerance costs.
     memo
@@ -75,20 +79,13 @@ def choose_designs(
         Whatever in it cannot be asked of this atlas.
     """
     held = [spec.name for spec in stored.measures]
-    question = resolve_question(stored.grid, held, stored.title, demand, at or {}, within or {})
+    fixed = _fixed(stored, dict(at or {}), design)
+    question = resolve_question(stored.grid, held, stored.title, demand, fixed, within or {})
     chosen = read_best(best, held, stored.title)
     periods = find_periods(question.scope)
     plan = plan_prices(question.scope) if price else None
-    found = _reduce(stored, question, chosen, plan, memo)
-    cases = next(found)
+    cases, outcomes = _reduce(stored, question, chosen, periods, plan, memo)
     rows = _rows(_Choice(stored, question, cases, chosen, periods))
-    base = find_outcome(cases, chosen, periods)
-    facts = _facts(question, cases)
-    del cases  # the worst cases over the parts of the box come one at a time
-    prices = None
-    if plan is not None:
-        outcomes = [base, *(find_outcome(part, chosen, periods) for part in found)]
-        prices = find_prices(question.scope, plan, outcomes)
     return ChooseAnswer(
         atlas_id=stored.atlas_id,
         title=stored.title,
@@ -99,37 +96,62 @@ def choose_designs(
         best_row=_best_row(rows, chosen),
         slowest_is_axis_end=_is_axis_end(question.scope, _slowest(rows)),
         slower_unknown=_slower_unknown(rows),
-        base=base,
-        price=prices,
-        **facts,
+        base=outcomes[0],
+        price=None if plan is None else find_prices(question.scope, plan, outcomes),
+        **_facts(question, cases),
     )
+
+
+def _fixed(stored: StoredAtlas, at: Mapping[str, Asked], design: str) -> dict[str, Asked]:
+    """What ``at`` says, over what the design says of everything but the sample period."""
+    if not design:
+        return dict(at)
+    named = {found.name: found.values for found in stored.designs}
+    if design not in named:
+        raise QuestionError(
+            f"looking for design {design!r}: this atlas holds {', '.join(named) or 'no designs'}",
+            where=[design],
+            remedy="name one of them, or give its values with --at",
+        )
+    taken = set(resolve_names(stored.grid, at))
+    taken |= {axis.name for axis in stored.grid.axes if "sample_period" in axis.sets}
+    return {axis: value for axis, value in named[design].items() if axis not in taken} | dict(at)
 
 
 def _reduce(
     stored: StoredAtlas,
     question: DesignQuestion,
     best: Best,
+    periods: Periods,
     plan: PriceList | None,
     memo: Memo | None,
-) -> Iterator[WorstCases]:
-    """The worst cases over the box, then over its parts; all from one pass over the atlas."""
+) -> tuple[WorstCases, list[Outcome]]:
+    """The worst cases over the box, and what it and its parts leave to choose from.
+
+    One pass over the atlas; none when both are kept.
+    """
     scope, required, windows = question.scope, question.requirements, question.windows
     also = (DECAY_TIME, best.extreme)
+    seen: list[WorstCases] = []
+
+    def reduce_parts(parts: Sequence[Places]) -> Iterator[Outcome]:
+        for cases in find_worst_of_parts(
+            stored, stored.structure, scope, required, parts, also=also, windows=windows
+        ):
+            if not seen:
+                seen.append(cases)
+            yield find_outcome(cases, best, periods)
+
+    outcomes = []
     if plan is not None and len(plan.parts) > 1:
-        yield from find_worst_of_parts(
-            stored,
-            stored.structure,
-            scope,
-            required,
-            plan.parts,
-            also=also,
-            windows=windows,
-            memo=memo,
+        outcomes = recall_outcomes(stored, question, best, plan, reduce_parts, memo)
+    if not seen:
+        seen.append(
+            find_worst_cases(
+                stored, stored.structure, scope, required, also=also, windows=windows, memo=memo
+            )
         )
-    else:
-        yield find_worst_cases(
-            stored, stored.structure, scope, required, also=also, windows=windows, memo=memo
-        )
+    return seen[0], outcomes or [find_outcome(seen[0], best, periods)]
 
 
 def _facts(question: DesignQuestion, cases: WorstCases) -> dict[str, Any]:
@@ -151,7 +173,7 @@ def _facts(question: DesignQuestion, cases: WorstCases) -> dict[str, Any]:
         "nodes": scope.nodes,
         "unknown_nodes": cases.found.unknown_nodes,
         "cautions": OVER_A_BOX,
-        **{word: int(np.count_nonzero(verdict == code)) for code, word in NAMES.items()},
+        **_count_words(verdict),
     }
 
 
@@ -168,9 +190,7 @@ class _Choice:
     def row(self, number: int) -> ChooseRow:
         """The choice at one sample period."""
         periods, codes = self.periods, self.periods.designs(self.cases.verdict, number)
-        counts: dict[str, int] = {
-            word: int(np.count_nonzero(codes == code)) for code, word in NAMES.items()
-        }
+        counts = _count_words(codes)
         meets = _meets(counts)
         box = find_gain_box(self.cases, periods, number) if self.best.is_box else None
         design = self._design(number, box)
@@ -203,12 +223,16 @@ class _Choice:
     def _best_of(self, number: int, among: NDArray[np.bool_]) -> int:
         """Flat index of the best of some designs at one period."""
         left = np.flatnonzero(among)
-        found = self.cases.found
-        ranked = (found.unknown > 0, self.best.scores(self.cases), found.worst[LOG_RADIUS])
-        for values in ranked:
+        found, best = self.cases.found, self.best.extreme
+        for values, sense in (
+            (found.unknown, ""),
+            (found.worst[best], best.sense),
+            (found.worst[LOG_RADIUS], "max"),
+        ):
             picked = self.periods.designs(values, number).reshape(-1)[left].astype(np.float64)
-            picked[np.isnan(picked)] = np.inf
-            left = left[picked == picked.min()]
+            score = {"": picked > 0, "max": picked, "min": -picked}[sense]
+            score = np.where(np.isnan(picked), np.inf, score)
+            left = left[score == score.min()]
         return int(left[0])
 
     def _worst(self, design: tuple[int, ...]) -> dict[str, float]:
@@ -237,10 +261,10 @@ class _Choice:
         """Axes along which a neighbour is not known to meet."""
         scope, codes, beside = self.cases.scope, self.cases.verdict, []
         for dimension, position in self._chosen_from():
-            line = codes[(*design[:dimension], slice(None), *design[dimension + 1 :])]
-            place = design[dimension]
-            around = [i for i in (place - 1, place + 1) if 0 <= i < len(line)]
-            if any(line[i] != MEETS for i in around):
+            place, last = design[dimension], codes.shape[dimension] - 1
+            around = [i for i in (place - 1, place + 1) if 0 <= i <= last]
+            before, after = design[:dimension], design[dimension + 1 :]
+            if any(codes[(*before, i, *after)] != MEETS for i in around):
                 beside.append(scope.grid.axes[position].name)
         return tuple(beside)
 
@@ -257,11 +281,20 @@ class _Choice:
     def _named(self, box: Box) -> LargestBox:
         scope = self.cases.scope
         others = [axis for i, axis in enumerate(scope.free) if i != self.periods.dimension]
-        ends = {}
+        ends, axis_ends = {}, []
         for position, low, high in zip(others, box.low, box.high, strict=True):
             axis, nodes = scope.grid.axes[position], scope.spans[position]
-            ends[axis.name] = value_at(axis, int(nodes[low])), value_at(axis, int(nodes[high]))
-        return LargestBox(ends, box.nodes, box.exact, box.at_most)
+            first, last = int(nodes[low]), int(nodes[high])
+            ends[axis.name] = value_at(axis, first), value_at(axis, last)
+            if len(nodes) > 1 and not (axis.is_row_axis and not axis.ordered):
+                sides = (("low", first == 0), ("high", last == len(axis) - 1))
+                axis_ends += [(axis.name, side) for side, is_end in sides if is_end]
+        return LargestBox(ends, box.nodes, box.exact, box.at_most, tuple(axis_ends))
+
+
+def _count_words(codes: Codes) -> dict[str, int]:
+    """How many designs have each verdict."""
+    return {word: int(np.count_nonzero(codes == code)) for code, word in NAMES.items()}
 
 
 def _meets(counts: Mapping[str, int]) -> bool | None:

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import json
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -10,13 +11,17 @@ import numpy as np
 from sweep.grid import Axis
 from sweep.query.answers.choose import Outcome, Price
 from sweep.query.best import Best, find_gain_boxes
-from sweep.query.blocks import Indices
+from sweep.query.blocks import Indices, Readable
+from sweep.query.derived import measures_needed
 from sweep.query.extremes import Places
+from sweep.query.memo import Memo
 from sweep.query.periods import Periods
+from sweep.query.question import DesignQuestion
+from sweep.query.robust import unordered_dimensions
 from sweep.query.scope import Scope, box_ends
 from sweep.query.select import SAME_NODE
 from sweep.query.verdicts import MEETS
-from sweep.query.worst import WorstCases
+from sweep.query.worst import WORTH_KEEPING, WorstCases, wanted_extremes
 
 
 @dataclass(frozen=True)
@@ -92,6 +97,35 @@ def find_outcome(cases: WorstCases, best: Best, periods: Periods) -> Outcome:
     return Outcome(cases.scope.over(), count, count / meets.size, best_value, slowest_s)
 
 
+def recall_outcomes(
+    stored: Readable,
+    question: DesignQuestion,
+    best: Best,
+    plan: PriceList,
+    reduce_parts: Callable[[Sequence[Places]], Iterable[Outcome]],
+    memo: Memo | None,
+) -> list[Outcome]:
+    """What each part of the box leaves to choose from, from the memo or else reduced and kept.
+
+    The worst cases themselves are too many to keep: one number for each design and part.
+    """
+    if memo is None or question.scope.nodes < WORTH_KEEPING:
+        return list(reduce_parts(plan.parts))
+    wanted = wanted_extremes(question.requirements, [best.extreme])
+    needed = sorted({m for item in wanted for m in measures_needed(item.quantity)})
+    text = memo.recall_text(
+        stored,
+        needed,
+        _asked(question, best, plan),
+        lambda: json.dumps([found.to_json() for found in reduce_parts(plan.parts)]),
+    )
+    over = question.scope.over()
+    return [
+        Outcome(over, one["meets"], one["share"], one["best"], one["slowest"])
+        for one in json.loads(text)
+    ]
+
+
 def find_prices(scope: Scope, plan: PriceList, outcomes: Sequence[Outcome]) -> tuple[Price, ...]:
     """What each tolerance costs, the dearest first.
 
@@ -116,6 +150,24 @@ def find_prices(scope: Scope, plan: PriceList, outcomes: Sequence[Outcome]) -> t
 
 def _dearest_first(price: Price) -> tuple[int, int]:
     return -price.removed.meets, -(price.halved.meets if price.halved else 0)
+
+
+def _asked(question: DesignQuestion, best: Best, plan: PriceList) -> dict[str, object]:
+    """All that decides the outcomes, apart from the atlas."""
+    scope = question.scope
+    return {
+        "answer": "price",
+        "best": best.name,
+        "spans": [nodes.tolist() for nodes in scope.spans],
+        "box": list(scope.box),
+        "at": dict(scope.at),
+        "parts": [[places.tolist() for places in part] for part in plan.parts],
+        "require": [[r.quantity, r.sense, r.limit] for r in question.requirements],
+        "unordered": list(unordered_dimensions(scope)),
+        "windows": [
+            [w.axis, w.first.tolist(), w.last.tolist(), w.lost.tolist()] for w in question.windows
+        ],
+    }
 
 
 def _price(

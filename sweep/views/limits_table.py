@@ -5,16 +5,16 @@ from __future__ import annotations
 import textwrap
 from collections.abc import Iterable, Mapping, Sequence
 
-import numpy as np
 from rich.console import Group, RenderableType
 from rich.table import Table
 from rich.text import Text
 
 from sweep.grid import Axis
-from sweep.quantities import display_factor, display_name, format_quantity
+from sweep.quantities import format_quantity
 from sweep.query.answers import End, LimitsAnswer, LimitsRow, show_value
 from sweep.query.select import Value
 from sweep.views.box_lines import box_lines, jump_line
+from sweep.views.columns import head, number
 from sweep.views.sheet import (
     caution_text,
     cells,
@@ -99,12 +99,12 @@ def _place_text(answer: LimitsAnswer, place: Mapping[str, Value]) -> str:
 
 def _limits_table(answer: LimitsAnswer, axis: Axis, differing: Sequence[str]) -> Table:
     listed = [answer.grid.axis(name) for name in answer.listed]
-    heads = [_head(item.name, item) for item in listed]
-    table = plain_table(*heads, _head("from", axis), _head("to", axis), "lower end", "upper end")
+    heads = [head(item.name, item) for item in listed]
+    table = plain_table(*heads, head("from", axis), head("to", axis), "lower end", "upper end")
     for column in range(len(listed) + 2):
         table.columns[column].justify = "right"
     for row in answer.rows:
-        place = [_number(item, row.at[item.name]) for item in listed]
+        place = [number(item, row.at[item.name]) for item in listed]
         for numbers, ends in _interval_lines(answer, row, axis, differing):
             table.add_row(*cells(*place, *numbers), *ends)
             place = [""] * len(listed)
@@ -122,7 +122,7 @@ def _interval_lines(
     for interval in row.intervals:
         low, high = interval.low, interval.high
         yield (
-            (_number(axis, low.value), _number(axis, high.value)),
+            (number(axis, low.value), number(axis, high.value)),
             (_end_cell(answer, low, axis, differing), _end_cell(answer, high, axis, differing)),
         )
 
@@ -144,31 +144,5 @@ def _end_text(end: End, axis: Axis) -> str:
     how: str = end.kind or "boundary"
     if end.kind == "oscillation" and end.hz is not None:
         how = f"oscillation {format_quantity(end.hz, 'Hz', digits=4)}"
-    stable, other = (_number(axis, value) for value in end.between)
+    stable, other = (number(axis, value) for value in end.between)
     return f"{how} ({stable}|{other})"
-
-
-def _head(name: str, axis: Axis) -> str:
-    """A column's head with the unit of its numbers."""
-    unit = "" if axis.is_row_axis else display_name(axis.unit, _unit(axis))
-    return f"{name} [{unit}]" if unit else name
-
-
-def _unit(axis: Axis) -> str:
-    """One unit for all of an axis: its own for people, else what suits its largest value."""
-    if axis.display_unit or axis.is_row_axis:
-        return axis.display_unit
-    largest = float(abs(axis.coordinates).max())
-    return format_quantity(largest, axis.unit).partition(" ")[2]
-
-
-def _number(axis: Axis, value: Value) -> str:
-    """A coordinate without its unit, which stands in the head of the column.
-
-    What interpolation left of a zero is a zero: a hundred-thousandth of the finest cell.
-    """
-    if isinstance(value, str):
-        return value
-    finest = float(np.diff(axis.coordinates).min()) if len(axis) > 1 else 0.0
-    shown = 0.0 if abs(value) < 1e-5 * finest else value
-    return f"{shown / display_factor(axis.unit, _unit(axis)):.6g}"

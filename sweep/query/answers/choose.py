@@ -98,6 +98,9 @@ class ChooseRow:
         row["delay_left"] = self.delay_left and [vars(item) for item in self.delay_left]
         row["box"] = self.box and self.box.ends
         row["box_nodes"] = self.box.nodes if self.box else None
+        row["box_exact"] = self.box.exact if self.box else None
+        row["box_at_most"] = self.box.at_most if self.box else None
+        row["box_axis_ends"] = self.box.axis_ends if self.box else ()
         found: dict[str, Any] = plain({"sample_period": self.sample_period_s, **row})
         return found
 
