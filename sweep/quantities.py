@@ -109,7 +109,9 @@ def split_quantity(value: object, expected: str = _ANY_QUANTITY) -> Quantity:
         raise QuantityError(_shown(value), expected, _WRITE_ONE)
     if isinstance(value, int) and value.bit_length() > 1100:
         raise QuantityError("a whole number with hundreds of digits", _FINITE, _SMALLER)
-    number = value if isinstance(value, Decimal) else Decimal(repr(value))
+    # a float64 of an array is a float whose own repr is no number
+    plain = float(value) if isinstance(value, float) else value
+    number = plain if isinstance(plain, Decimal) else Decimal(repr(plain))
     return Quantity(_rounded(number, value), "")
 
 
