@@ -7,6 +7,7 @@ import math
 from dataclasses import dataclass, field
 from random import Random
 
+import memory_atlas
 import numpy as np
 from plain_robust import THRESHOLD, Question, cannot_be_built, needed, quantity_at
 from random_questions import (
@@ -51,6 +52,34 @@ def random_design(rnd: Random) -> Asked:
         else:
             _ask_value(rnd, asked, axis)
     _ask_bounds(rnd, asked.question)
+    return asked
+
+
+def random_stable_design(rnd: Random) -> Asked:
+    """A design that is stable at every node of its box, among many gains that are not."""
+    axes = [
+        memory_atlas.axis("kp", np.arange(-3, 4) / 2, sets="controller.kp"),
+        memory_atlas.axis("ki", np.arange(rnd.choice((-1, 0, 1)), 6) / 1.0, sets="controller.ki"),
+        memory_atlas.axis("sample_period", [0.01, 0.02, 0.03], unit="s"),
+        memory_atlas.axis("damping", [0.1, 0.2], sets="plant.damping", role="tolerance"),
+    ]
+    rnd.shuffle(axes)
+    shape = tuple(len(axis) for axis in axes)
+    noise = np.random.default_rng(rnd.randrange(2**32))
+    log_radius = noise.choice([-0.5, -0.1, 0.1, 0.3], size=shape, p=[0.1, 0.1, 0.4, 0.4])
+    log_radius[noise.random(shape) < rnd.choice((0.0, 0.05))] = np.nan
+    tiles = tuple(rnd.randint(1, n) for n in shape)
+    atlas = memory_atlas.atlas(axes, log_radius, tile_shape=tiles)
+    asked = Asked(Question(atlas, {"at": {}, "over": {}}, {}, []))
+    for axis in axes:
+        asked.spans[axis.name] = list(range(len(axis)))
+        if axis.role == "design":
+            _ask_value(rnd, asked, axis)
+    asked.question.asked["require"] = {}
+    for node in nodes_of(asked):
+        log_radius[node] = -0.2
+    atlas.stored.values["log_radius"] = log_radius.astype(np.float32)
+    atlas.stored.values["mode_angle"] = np.where(np.isnan(log_radius), np.nan, 0.1)
     return asked
 
 

@@ -282,9 +282,10 @@ def _read_header(path: Path, line: int, cells: Sequence[str]) -> list[tuple[str,
     columns = []
     for cell in cells:
         match = _HEADER.fullmatch(cell)
-        if match is None or not match[1]:
+        by_semicolons = len(cells) == 1 and ";" in cell
+        if match is None or not match[1] or by_semicolons:
             remedy = "name every column, such as kp or kd [ms]"
-            if len(cells) == 1 and ";" in cell:
+            if by_semicolons:
                 remedy = "separate the cells by commas instead of semicolons"
             raise QuestionError(
                 f"reading {path}, line {line}: {_shown(cell)} names no column",

@@ -289,7 +289,7 @@ def _hurt_texts(grid: Grid, found: DesignVerdict) -> Iterable[str]:
 
 
 def _gain_fall_text(grid: Grid, fall: GainFall) -> tuple[str, str]:
-    names = " and ".join(fall.scaled)
+    names = f"{' and '.join(fall.scaled)} {'are' if len(fall.scaled) > 1 else 'is'}"
     if fall.conditionally_stable:
         text = (
             f"conditionally stable: scaled down to {fall.factor:.3g} "
@@ -299,9 +299,9 @@ def _gain_fall_text(grid: Grid, fall: GainFall) -> tuple[str, str]:
     if fall.conditionally_stable is None:
         return f"whether it is conditionally stable cannot be told: {fall.stopped_by}", "yellow"
     if not fall.stopped_by:
-        return f"not conditionally stable: it stays stable as {names} is scaled down to 0", ""
+        return f"not conditionally stable: it stays stable as {names} scaled down to 0", ""
     return (
-        f"stays stable as {names} is scaled down to {fall.followed_to:.3g}, which is as far as can "
+        f"stays stable as {names} scaled down to {fall.followed_to:.3g}, which is as far as can "
         f"be told: {fall.stopped_by}"
     ), ""
 
