@@ -218,6 +218,34 @@ def test_the_nominal_moves_to_the_nearest_end_of_a_box_beside_it():
     assert (found.holds_to, found.end, found.factor) == (3.0, "axis_end", math.inf)
 
 
+def test_what_takes_a_node_in_and_what_reaches_it_may_be_two_axes():
+    near, far = tolerance("near", [0, 2, 3, 3.25]), tolerance("far", [0, 2, 4])
+    verdict = np.full((4, 3), M, np.int8)
+    verdict[3, 2] = F
+    found = find_in_hand([near, far], [nodes(0, 1), nodes(0, 1)], verdict, [0.0, 0.0])
+    assert (found.holds_to, found.stopped_by) == (1.5, "near")
+    assert (found.factor, found.axis) == (2.0, "far")
+    assert found.at == found.stopped_at == {"near": 3.25, "far": 4.0}
+
+
+def test_of_axes_that_reach_a_node_together_the_first_is_named():
+    first, second = tolerance("first", [0, 1, 2]), tolerance("second", [0, 3, 6])
+    verdict = np.full((3, 3), M, np.int8)
+    verdict[2, 2] = F
+    found = find_in_hand([first, second], [nodes(0, 1), nodes(0, 1)], verdict, [0.0, 0.0])
+    assert found.axis == found.stopped_by == "first"
+
+
+@pytest.mark.parametrize("code", [F, U])
+def test_of_nodes_taken_in_together_the_nearest_to_the_nominal_is_named(code):
+    first, second = tolerance("first", [0, 1, 2]), tolerance("second", [0, 1, 5])
+    verdict = np.full((3, 3), M, np.int8)
+    verdict[0, 2] = verdict[2, 0] = code
+    found = find_in_hand([first, second], [nodes(0, 1), nodes(0, 1)], verdict, [0.0, 0.0])
+    assert (found.holds_to, found.stopped_at) == (1.0, {"first": 2.0, "second": 0.0})
+    assert found.stopped_by == "first"
+
+
 def test_rows_outside_the_box_never_count():
     gain = tolerance("gain", [0, 1, 2, 3, 4], 0)
     unit = rows("unit", "abc", {"plant.damping": [1, 2, 3]})
