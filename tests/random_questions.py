@@ -82,14 +82,15 @@ def row_axis(rnd: Random, name: str, path: str, role: str, *, sets_period: bool,
     return memory_atlas.rows(name, labels, columns, role=role, ordered=rnd.random() < 0.5)
 
 
-def random_axes(rnd: Random):
+def random_axes(rnd: Random, *, wide: bool):
     """One to three design axes and up to three of tolerances in any order, and delay parts."""
     design = rnd.sample(["kp", "ki", "mode", "period"], rnd.randint(1, 3))
     nature = rnd.sample(["damping", "gain", "unit", "period", "compute"], rnd.randint(0, 3))
     if "period" in design and "period" in nature:
         nature.remove("period")
     in_rows = not {"period"} & {*design, *nature} and rnd.random() < 0.5
-    most = 4 if len(design) + len(nature) < 5 else 3
+    many = len(design) + len(nature)
+    most = 7 if wide and many < 4 else 4 if many < 5 else 3
     rowed = next((name for name in (*nature, *design) if name in ("unit", "mode")), "")
     axes = []
     for role, names in (("design", design), ("tolerance", nature)):
@@ -122,9 +123,9 @@ def random_axes(rnd: Random):
     return axes, parts
 
 
-def random_atlas(rnd: Random) -> Atlas:
+def random_atlas(rnd: Random, *, wide: bool = False) -> Atlas:
     """Levels with many ties, many of them stable, some of them unknown, in tiles of any shape."""
-    axes, parts = random_axes(rnd)
+    axes, parts = random_axes(rnd, wide=wide)
     shape = tuple(len(axis) for axis in axes)
     noise = np.random.default_rng(rnd.randrange(2**32))
     stable = rnd.choice((0.6, 0.9, 1.0, 1.0, 0.0))
@@ -151,7 +152,9 @@ def random_atlas(rnd: Random) -> Atlas:
 
 def random_question(rnd: Random, *, shaken: bool = False) -> Question:
     """Ranges, values and bounds in the spellings that a person may use."""
-    question = Question(random_atlas(rnd), {"at": {}, "over": {}, "within": {}}, {}, [])
+    question = Question(
+        random_atlas(rnd, wide=shaken), {"at": {}, "over": {}, "within": {}}, {}, []
+    )
     for axis in question.axes:
         question.spans[axis.name] = list(range(len(axis)))
         if axis.role == "tolerance":
@@ -270,7 +273,7 @@ def _ask_shake(rnd: Random, question: Question) -> None:
             name = "sample_rate"
         share, distance = 0.0, 0.0
         if rnd.random() < 0.5:
-            percent = rnd.choice((5, 20, 50, 99))
+            percent = rnd.choice((5, 5, 20, 50, 99))
             share, text = percent / 100, f"{percent}%"
         elif axis.name == "sample_period":
             distance = rnd.choice((0.003, 0.012)) if name == axis.name else rnd.choice((3.0, 30.0))

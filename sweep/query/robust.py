@@ -24,7 +24,15 @@ from sweep.query.question import DesignQuestion
 from sweep.query.region_data import worst_dataset
 from sweep.query.regions import count_regions
 from sweep.query.scope import Scope
-from sweep.query.select import Asked, find_enclosing, one_value, resolve_names, value_at
+from sweep.query.select import (
+    SAME_NODE,
+    Asked,
+    find_enclosing,
+    one_value,
+    read_value,
+    resolve_names,
+    value_at,
+)
 from sweep.query.verdicts import EXCLUDED, FAILS, MEETS, UNKNOWN
 from sweep.query.worst import LOG_RADIUS, WORTH_KEEPING, WorstCases, find_worst_cases
 
@@ -220,11 +228,40 @@ def _place_around(scope: Scope, around: Mapping[str, Asked]) -> Around | None:
     if not around:
         return None
     asked = resolve_names(scope.grid, around)
+    for position in scope.box:
+        _check_held(scope, scope.grid.axes[position], asked)
     corners = [
         _places_on(scope.grid.axes[position], scope.spans[position], asked)
         for position in scope.free
     ]
     return [low for low, _ in corners], [high for _, high in corners]
+
+
+def _check_held(scope: Scope, axis: Axis, asked: Mapping[str, tuple[str, Asked]]) -> None:
+    """Refuse a centre on an axis of the box, unless it is the value that the axis is fixed at."""
+    if axis.name not in asked:
+        return
+    if axis.name not in scope.at:
+        raise QuestionError(
+            f"finding the largest box around {axis.name}: it is a tolerance axis, which nature "
+            "chooses",
+            where=[axis.name],
+            remedy=f"leave {axis.name} out of the design; its range is given with --over",
+        )
+    name, value = asked[axis.name]
+    slack = SAME_NODE * float(axis.coordinates[-1] - axis.coordinates[0])
+    fixed = float(scope.at[axis.name])
+    if abs(read_value(axis, one_value(axis.name, value), name) - fixed) > slack:
+        raise _outside(axis, value)
+
+
+def _outside(axis: Axis, value: Asked) -> QuestionError:
+    return QuestionError(
+        f"finding the largest box around {axis.name} = {value}: it lies outside the designs "
+        "that were asked about",
+        where=[axis.name],
+        remedy=f"take {axis.name} out of --at and --within, or name a value inside",
+    )
 
 
 def _places_on(
@@ -243,12 +280,7 @@ def _places_on(
     around = find_enclosing(axis, one_value(axis.name, value), name=name).nodes
     places = [int(place) for place in np.flatnonzero(np.isin(nodes, around))]
     if len(places) < len(around):
-        raise QuestionError(
-            f"finding the largest box around {axis.name} = {value}: it lies outside the designs "
-            "that were asked about",
-            where=[axis.name],
-            remedy=f"take {axis.name} out of --at and --within, or name a value inside",
-        )
+        raise _outside(axis, value)
     return places[0], places[-1]
 
 

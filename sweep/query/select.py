@@ -387,4 +387,10 @@ def _find_rows(axis: Axis, asked: Sequence[float | str]) -> tuple[int, ...]:
             )
         else:
             nodes.add(_find_row(axis, item))
+    if not nodes:
+        raise QuestionError(
+            f"reading {axis.name}: no row is named",
+            where=[axis.name],
+            remedy=f"name at least one row, or leave {axis.name} out to take them all",
+        )
     return tuple(sorted(nodes))

@@ -57,7 +57,8 @@ def _box_parts(answer: RobustAnswer) -> Iterable[RenderableType]:
     box = answer.largest_box
     if box is None:
         text = "the design that was named does not meet, so no box of designs can hold it"
-        yield line(text if answer.meets else "no design meets", "yellow")
+        none = "no design is known to meet" if answer.unknown else "no design meets"
+        yield line(text if answer.meets else none, "yellow")
         return
     around = " around the design that was named" if box.around else ""
     yield line(f"largest box of designs that all meet{around}: {box.nodes:,} nodes", "bold")
