@@ -8,6 +8,7 @@ import os
 import shutil
 import uuid
 from collections.abc import Iterable, Mapping, Sequence
+from contextlib import suppress
 from dataclasses import dataclass, fields
 from functools import cached_property
 from pathlib import Path
@@ -20,6 +21,7 @@ from sweep.config import Config
 from sweep.errors import DamagedAtlas, QuestionError, SweepError
 from sweep.identity import PROGRAM_VERSION
 from sweep.store.arrays import Objects, group_objects, open_arrays, open_dataset
+from sweep.store.blocks import NotAsWritten, read_block
 from sweep.store.layout import (
     STORE_VERSION,
     atlas_attributes,
@@ -91,8 +93,12 @@ class StoredAtlas(AtlasContents):
         IndexError
             When the selection does not fit the axes.
         """
-        array = self._measure_array(measure)
         picked = resolve(selection, self.grid.shape)
+        array = self._measure_array(measure)
+        block = [p for p in picked if isinstance(p, slice) and p.step == 1]
+        if len(block) == len(picked):
+            with suppress(NotAsWritten, OSError):
+                return read_block(self.objects, measure, block)
         try:
             return np.asarray(array.oindex[tuple(picked)], np.float32)
         except _UNREADABLE:

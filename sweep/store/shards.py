@@ -6,8 +6,8 @@ whose every value is equal still yields an object, whatever zarr's global settin
 no event loop is shared by the workers: per tile of 2**18 nodes this takes 1.5 to 4 ms of processor
 time where assignment takes 4 to 9 (zarr 3.4) or 10 to 15 (zarr 3.1). And when an object is brought
 to the disk is decided here. The format is zarr's own (``sharding_indexed``, index at the end,
-crc32c on every chunk and on the index) and everything is read back by zarr alone; a test compares
-what zarr reads with what was written.
+crc32c on every chunk and on the index): zarr reads it back, and so does `sweep.store.blocks`; tests
+compare what either reads with what was written.
 
 An object is published by rename, so that a killed process leaves whole objects only, and flushed
 (fsync) a moment later by the thread that waits for results: 1 to 3 ms of waiting in which the
