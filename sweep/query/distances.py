@@ -40,7 +40,7 @@ class Line:
     last: int
     """Highest one."""
     source: Readable
-    """What it was read from."""
+    """From where single nodes of it are read: few are needed."""
 
     @property
     def axis(self) -> Axis:
@@ -85,7 +85,7 @@ def _line(stored: Readable, block: Readable | None, scope: Scope, along: int) ->
     breaks = frozenset(gain_changes_structure(scope.grid, axis))
     which = found.which[LOG_RADIUS].reshape(-1)
     walk = Walk(question, axis, breaks, worst, which, place)
-    return Line(walk, int(nodes[0]), int(nodes[-1]), source)
+    return Line(walk, int(nodes[0]), int(nodes[-1]), block or stored)
 
 
 def find_distances(lines: list[Line], scope: Scope) -> tuple[Distance, ...]:
