@@ -279,6 +279,23 @@ def test_the_processors_time_ends_what_is_left_of_it():
     assert left.left == pytest.approx(0.5e-3)
 
 
+def test_the_neighbours_of_a_shaken_design_count_for_what_is_left_as_well():
+    axes = [
+        axis("kp", [0, 1, 2], sets="controller.kp"),
+        axis("bus", [0, 1, 2], sets="delay.bus", role="tolerance", unit="samples"),
+    ]
+    found = atlas(axes, [[-0.1, 0.1, 0.1], [-0.3, -0.2, -0.1], [-0.1, -0.1, 0.1]])
+    over = {"bus": [0.0, 0.0]}
+    calm = choose_designs(found.stored, make_demand((), "", over, None, None)).rows[0]
+    assert calm.design == {"kp": 1.0}
+    assert calm.delay_left[0].end == "axis_end"
+    shaken = choose_designs(found.stored, make_demand((), "", over, None, {"kp": 1.0})).rows[0]
+    assert shaken.design == {"kp": 1.0}
+    assert shaken.delay_left[0].end == "boundary"
+    assert 0 < shaken.delay_left[0].left < 1
+    assert shaken.at == {"kp": 0.0, "bus": 0.0}
+
+
 def test_the_gain_box_says_where_the_axis_ends_it():
     levels = [[-0.1, -0.1, -0.1, 0.1], [0.1, -0.1, -0.1, -0.1]]
     answer = choose_designs(line_atlas(levels, (0.001, 0.002)).stored, STABLE, best="gain_box")

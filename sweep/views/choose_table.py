@@ -16,7 +16,7 @@ from sweep.query.requirement import requirement_text
 from sweep.query.select import Value
 from sweep.views.box_lines import box_lines, jump_line
 from sweep.views.columns import head, number
-from sweep.views.price_table import price_parts
+from sweep.views.price_table import period_text, period_unit, price_parts
 from sweep.views.sheet import (
     caution_text,
     cells,
@@ -132,7 +132,7 @@ def _summary(answer: ChooseAnswer) -> Iterable[RenderableType]:
 
 def _row_text(answer: ChooseAnswer, row: ChooseRow) -> str:
     """A sample period with its design, in one line."""
-    period = answer_period(row)
+    period = period_text(answer, row.sample_period_s)
     design = {k: v for k, v in (row.design or {}).items() if not _is_period(answer, k)}
     worst = _quantity_text("decay_time", row.worst["decay_time"])
     pieces = [f"{period} ({format_quantity(1 / row.sample_period_s, 'Hz', digits=4)})"]
@@ -148,11 +148,6 @@ def _row_text(answer: ChooseAnswer, row: ChooseRow) -> str:
     return found + "".join(left)
 
 
-def answer_period(row: ChooseRow) -> str:
-    """A row's sample period for people."""
-    return format_quantity(row.sample_period_s, "s", "ms", digits=5)
-
-
 def _slowest_warnings(answer: ChooseAnswer) -> Iterable[str]:
     """What to beware of at the slowest period."""
     slowest = answer.slowest
@@ -163,6 +158,12 @@ def _slowest_warnings(answer: ChooseAnswer) -> Iterable[str]:
             row.sample_period_s for row in answer.rows
         ):
             yield "no slower period was asked about: widen --within to see whether one meets"
+        missed = sum(
+            row.meets is not True and row.sample_period_s < slowest.sample_period_s
+            for row in answer.rows
+        )
+        if missed:
+            yield f"not every faster one will do: at {missed:,} of them no design meets"
         yield from _warnings(answer, slowest)
     if answer.slower_unknown:
         slower = "slower than that" if slowest else "among all"
@@ -228,7 +229,7 @@ def _table(answer: ChooseAnswer, rows: Sequence[ChooseRow], differing: Sequence[
     ]
     worst = [answer.grid.axis(name) for name in differing]
     table = plain_table(
-        "period",
+        f"period [{period_unit(answer)}]",
         "verdict",
         *(head(axis.name, axis) for axis in axes),
         *(["box nodes"] if answer.best == GAIN_BOX else []),
@@ -241,7 +242,8 @@ def _table(answer: ChooseAnswer, rows: Sequence[ChooseRow], differing: Sequence[
         column.justify = "right"
     table.columns[0].no_wrap = table.columns[1].no_wrap = True
     for row in rows:
-        texts = [answer_period(row), _WORDS[row.meets]]
+        period = period_text(answer, row.sample_period_s).partition(" ")[0]
+        texts = [period, _WORDS[row.meets]]
         texts += [_design_text(axis, row) for axis in axes]
         if answer.best == GAIN_BOX:
             texts.append(_nodes_text(row))
@@ -307,11 +309,12 @@ def _quantity_text(name: str, value: float | None) -> str:
 def _left_text(item: DelayLeft) -> str:
     """How much of a delay is left, and whether that is known to be all."""
     left = format_quantity(item.left, item.unit, digits=3)
-    if item.end == "axis_end":
-        return f"{left}, beyond the axis end"
-    if item.end == "unknown":
-        return f"{left}, then unknown"
-    return f"{left}, then a whole period" if item.end == "excluded" else left
+    more = {
+        "axis_end": " or more, beyond the axis end",
+        "unknown": " or more, the next node is unknown",
+        "excluded": ", until the processor takes a whole period",
+    }
+    return left + more.get(item.end, "")
 
 
 def _watch_text(answer: ChooseAnswer, row: ChooseRow) -> str:

@@ -36,6 +36,17 @@ def price_parts(answer: ChooseAnswer) -> Iterable[RenderableType]:
         yield line("unknown designs count as not meeting, before and after", "yellow")
 
 
+def period_unit(answer: ChooseAnswer) -> str:
+    """The one unit of all sample periods of an answer: that in which the largest is no fraction."""
+    largest_s = max(row.sample_period_s for row in answer.rows)
+    return format_quantity(largest_s, "s").partition(" ")[2]
+
+
+def period_text(answer: ChooseAnswer, period_s: float) -> str:
+    """A sample period for people."""
+    return format_quantity(period_s, "s", period_unit(answer), digits=5)
+
+
 def price_sentence(answer: ChooseAnswer) -> str:
     """Which tolerance to tighten first, and which brings nothing."""
     prices = answer.price or ()
@@ -86,7 +97,7 @@ def _outcome_texts(answer: ChooseAnswer, outcome: Outcome) -> list[str]:
     more = outcome.meets - answer.base.meets
     share = f"{outcome.meets:,} ({outcome.share:.1%})"
     slowest_s = outcome.slowest_s
-    slowest = "none" if slowest_s is None else format_quantity(slowest_s, "s", "ms", digits=5)
+    slowest = "none" if slowest_s is None else period_text(answer, slowest_s)
     gained = f"+{more:,}" if more else ""
     return [share, gained, _best_text(answer, outcome.best), slowest]
 
