@@ -109,6 +109,7 @@ def test_the_table_says_what_a_reviewer_has_to_know(capsys, shelf):
     assert "slowest: 5 ms (200 Hz) with kp 0; worst decay time 12.5 ms" in out
     assert "beside a node that does not meet, along sample_period" in out
     assert "bus left 0 samples or more, beyond the axis end" in out
+    assert "left: from the box until stability is lost; what else is required may fail" in out
     assert "tighten damping first" in out
     assert "C9 not a safety case" in out
     assert "the hold's own half sample" in out

@@ -38,7 +38,8 @@ _WATCH = (
 
 
 _MORE = ">"
-_LEFT = (
+_LEFT = "left: from the box until stability is lost; what else is required may fail sooner"
+_BEYOND = (
     f"'{_MORE}': still stable there, at the axis end; what is left lies beyond it ('?': the next "
     "node is unknown)"
 )
@@ -121,7 +122,8 @@ def _summary(answer: ChooseAnswer) -> Iterable[RenderableType]:
         some = ", as far as it is known" if answer.unknown else ""
         yield line(f"No design meets at any sample period{some}", "yellow")
     else:
-        yield line(f"slowest: {_row_text(answer, answer.slowest)}", "bold")
+        label = "slowest" if len(answer.rows) > 1 else "best"
+        yield line(f"{label}: {_row_text(answer, answer.slowest)}", "bold")
     for text in _slowest_warnings(answer):
         yield line(f"  {text}", "yellow")
     if answer.best_row is not None and answer.best_row is not answer.slowest:
@@ -194,8 +196,10 @@ def _table_parts(answer: ChooseAnswer, most_rows: int) -> Iterable[RenderableTyp
     if any(_watch_text(answer, row) for row in shown):
         yield line(_WATCH, "dim")
     ends = {item.end for row in shown for item in row.delay_left or ()}
-    if ends & {"axis_end", "unknown"}:
+    if ends:
         yield line(_LEFT, "dim")
+    if ends & {"axis_end", "unknown"}:
+        yield line(_BEYOND, "dim")
     if left_out := len(answer.rows) - len(shown):
         yield line(
             f"{left_out:,} of {len(answer.rows):,} sample periods are left out here; list more "
