@@ -95,20 +95,9 @@ def test_the_document_counts_every_design_once(ask):
 
 
 def test_every_option_reaches_the_question(ask):
-    code, out, _ = ask(
-        *("bench", "--json", "--case", "cold", "--over", "bus=0:0.3"),
-        *(
-            "--require",
-            "max_radius=0.8",
-            "--at",
-            "sample_period=5ms",
-            "--within",
-            "kp=-0.55:0.55",
-            "--shake",
-            "kp=0.1",
-        ),
-        *("--around", "kp=0.1"),
-    )
+    box = ("--case", "cold", "--over", "bus=0:0.3", "--require", "max_radius=0.8")
+    designs = ("--at", "sample_period=5ms", "--within", "kp=-0.55:0.55", "--shake", "kp=0.1")
+    code, out, _ = ask("bench", "--json", *box, *designs, "--around", "kp=0.1")
     document = json.loads(out)
     assert code == 0
     assert document["case"] == "cold"
