@@ -48,27 +48,18 @@ def _options(parser: argparse.ArgumentParser) -> None:
 
 def _choose(arguments: argparse.Namespace) -> int:
     from sweep.query.atlas import open_atlas
-    from sweep.query.choose import choose_designs
-    from sweep.query.question import make_demand
     from sweep.query.select import parse_assignments, parse_single
 
-    atlas = open_atlas(arguments.atlas, arguments.shelf)
-    demand = make_demand(
-        atlas.stored.cases,
+    answer = open_atlas(arguments.atlas, arguments.shelf).choose(
         arguments.case,
-        parse_assignments(arguments.over),
-        parse_single(arguments.require),
-        parse_single(arguments.shake),
-    )
-    answer = choose_designs(
-        atlas.stored,
-        demand,
         best=arguments.best,
         at=parse_assignments(arguments.at),
+        over=parse_assignments(arguments.over),
         within=parse_assignments(arguments.within),
+        require=parse_single(arguments.require),
+        shake=parse_single(arguments.shake),
         design=arguments.design,
         price=arguments.price,
-        memo=atlas.memo,
     )
     if arguments.json:
         print_document(answer.to_json())
