@@ -268,6 +268,23 @@ def test_a_box_of_the_design_itself_stands_instead_of_that_of_the_case():
     assert (narrowed.verdict, narrowed.over) == ("meets", {"damping": (0.2, 0.3)})
 
 
+def test_along_ordered_rows_each_way_starts_at_its_own_end_of_the_box():
+    axes = [memory_atlas.rows("load", "abcdef", {"plant.gain": [1, 2, 3, 4, 5, 6.0]}, ordered=True)]
+    atlas = memory_atlas.atlas(axes, [0.1, -0.1, 0.2, -0.1, -0.2, 0.3])
+    down, up = judge_one(atlas, {}, over={"load": ["b", "d"]}).distances
+    assert (down.to, down.between, up.to, up.between) == ("b", ("b", "a"), "e", ("e", "f"))
+    assert (up.by, up.percent, up.db) == (None, None, None)
+
+
+def test_an_unbounded_decay_is_shown_at_the_largest_radius():
+    atlas = memory_atlas.atlas(
+        [memory_atlas.axis("sample_period", [0.01, 0.02, 0.03], unit="s")], [0.1, 0.3, -0.1]
+    )
+    found = judge_one(atlas, {"sample_period": 0.012}, require={"max_decay_time": 1.0})
+    assert math.isinf(found.decay_time.value)
+    assert found.decay_time.at == found.lines[1].at == {"sample_period": 0.02}
+
+
 def test_every_design_meets_every_case_and_one_failure_decides():
     atlas = one_gain([0.1, -0.1, -0.4, -0.3, np.nan])
     designs = [AskedDesign(str(kp), {"kp": kp}) for kp in (1.0, 2.0, -2.0)]

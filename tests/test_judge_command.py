@@ -137,6 +137,8 @@ def test_the_document_has_the_promised_keys(capsys, shelf):
     (up,) = [d for d in found["distances"] if (d["axis"], d["direction"]) == ("kp", "up")]
     assert (up["end"], up["between"]) == ("boundary", [0.4, 0.5])
     assert 0.4 < up["to"] < 0.5
+    assert ["damping", "down"] in found["axis_ends"]
+    assert ["kp", "up"] not in found["axis_ends"]
     assert found["yield"][0]["meets"] == 2
     assert found["hurts_most"][0]["axis"] == "damping"
 

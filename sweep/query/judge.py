@@ -164,7 +164,9 @@ def _judge(
     walked = walk_lines(stored, block, scope) if is_stable else []
     distances = find_distances(walked, scope)
     fall = GainFall(None, stopped_by="a loop that is not known to be stable to begin with")
-    radius = _reached(cases, LOG_RADIUS)
+    radius, decay = _reached(cases, LOG_RADIUS), _reached(cases, DECAY_TIME)
+    if _is_lost("decay_time", decay.value):
+        decay = replace(decay, at=radius.at)
     return DesignVerdict(
         design=design.name,
         at=dict(scope.at),
@@ -173,7 +175,7 @@ def _judge(
         lines=lines,
         log_radius=radius,
         radius=math.exp(radius.value),
-        decay_time=_reached(cases, DECAY_TIME),
+        decay_time=decay,
         over=scope.over(),
         widened=scope.widened,
         brackets={n: ends for n, ends in scope.brackets().items() if n in scope.bracketed},
@@ -249,9 +251,18 @@ def _lines(
     block: Readable, structure: LoopStructure, scope: Scope, requirements: Sequence[Requirement]
 ) -> tuple[Line, ...]:
     lines = [_line(block, scope, requirement) for requirement in requirements]
+    lines = [
+        replace(line, at=lines[0].at) if _is_lost(line.require, line.worst) else line
+        for line in lines
+    ]
     if "compute" in dict(structure.delay_parts):
         lines.append(_processor_line(structure, scope))
     return tuple(lines)
+
+
+def _is_lost(quantity: str, worst: float) -> bool:
+    """Whether a decay time is unbounded: of all nodes that are not stable the worst is named."""
+    return quantity.endswith("decay_time") and worst == math.inf
 
 
 def _line(block: Readable, scope: Scope, requirement: Requirement) -> Line:

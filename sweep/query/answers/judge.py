@@ -11,7 +11,7 @@ from sweep.grid import Grid
 from sweep.query.answers.limits import CrossingKind, EndKind
 from sweep.query.answers.plain import plain, show_value
 from sweep.query.cautions import caution_line
-from sweep.query.requirement import requirement_text
+from sweep.query.requirement import requirement_name, requirement_text
 from sweep.query.select import Value
 from sweep.query.verdicts import Verdict
 
@@ -169,7 +169,8 @@ class DesignVerdict:
     radius: float
     """Spectral radius there."""
     decay_time: Reached
-    """Longest decay time constant, s; infinite where a node is not stable."""
+    """Longest decay time constant, s; infinite when a node is not stable, and then at the node with
+    the largest log_radius."""
     over: Mapping[str, tuple[Value, ...]]
     """The tolerance box: lowest and highest node of each axis; labels of rows."""
     widened: tuple[str, ...]
@@ -205,6 +206,11 @@ class DesignVerdict:
         """Whether it lies between nodes."""
         return bool(self.brackets)
 
+    @property
+    def axis_ends(self) -> tuple[tuple[str, str], ...]:
+        """Axes and directions in which it is stable as far as the axis goes."""
+        return tuple((d.axis, d.direction) for d in self.distances if d.end == "axis_end")
+
     def to_json(self) -> dict[str, Any]:
         """Its document."""
         direct = ("design", "at", "case", "verdict", "bracketed", "brackets", "over", "widened")
@@ -214,6 +220,7 @@ class DesignVerdict:
                 name: {"by": reach, "nodes": (low, high)}
                 for name, (reach, low, high) in self.shaken.items()
             },
+            "requirements": {requirement_name(r): r.limit for r in self.requirements},
             "lines": [line.to_json() for line in self.lines],
             "worst": {
                 "at": dict(self.log_radius.at),
@@ -222,6 +229,7 @@ class DesignVerdict:
             },
             "decay_time": {"worst": self.decay_time.value, "at": dict(self.decay_time.at)},
             "distances": [distance.to_json() for distance in self.distances],
+            "axis_ends": [list(end) for end in self.axis_ends],
             "hurts_most": [hurt.to_json() for hurt in self.hurts_most],
             "conditionally_stable": self.gain_fall.conditionally_stable,
             "gain_fall": self.gain_fall.to_json(),
