@@ -11,7 +11,6 @@ from __future__ import annotations
 
 import errno
 import itertools
-import sys
 import time
 from collections.abc import Callable, Iterable
 from concurrent.futures import ThreadPoolExecutor
@@ -25,6 +24,7 @@ from pathlib import Path
 import dask.threaded
 
 from sweep.compute.gate import Gate, interrupts_close, next_occurrence_s
+from sweep.compute.memory import peak_memory_bytes
 from sweep.compute.plan import (
     checked_workers,
     probe_tiles,
@@ -388,13 +388,3 @@ def describe_tile(grid: Grid, tile: Tile) -> str:
             unit = "" if axis.unit == "1" else f" {axis.unit}"
             parts.append(f"{axis.name} {first:g} to {last:g}{unit}")
     return ", ".join(parts)
-
-
-def peak_memory_bytes() -> int | None:
-    """Largest resident memory of this process so far; `None` where the system does not tell."""
-    try:
-        import resource
-    except ImportError:
-        return None
-    peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
-    return int(peak if sys.platform == "darwin" else peak * 1024)

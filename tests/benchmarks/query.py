@@ -15,7 +15,6 @@ medians of rounds in which the things compared take turns.
 import argparse
 import json
 import os
-import resource
 import statistics
 import subprocess
 import sys
@@ -27,6 +26,8 @@ from pathlib import Path
 import zarr
 
 import sweep
+from sweep.compute.memory import peak_memory_bytes
+from sweep.query.atlas import Atlas
 from sweep.query.memo import Memo
 
 CHECKOUT = Path(__file__).resolve().parents[2]
@@ -98,7 +99,7 @@ def take_turns(works: dict[str, Callable[[], object]], rounds: int) -> dict[str,
     return {name: statistics.median(found) for name, found in times.items()}
 
 
-def open_with_zarr(atlas: sweep.query.atlas.Atlas, measure: str = "log_radius") -> zarr.Array:
+def open_with_zarr(atlas: Atlas, measure: str = "log_radius") -> zarr.Array:
     """A measure as plain zarr opens it, with the fastest of its pipelines."""
     fused = "zarr.core.codec_pipeline.FusedCodecPipeline"
     has_fused = hasattr(zarr.core.codec_pipeline, "FusedCodecPipeline")
@@ -106,7 +107,7 @@ def open_with_zarr(atlas: sweep.query.atlas.Atlas, measure: str = "log_radius") 
         return zarr.open_array(str(atlas.stored.path / measure), mode="r")
 
 
-def measure_robust(atlas: sweep.query.atlas.Atlas, rounds: int) -> dict:
+def measure_robust(atlas: Atlas, rounds: int) -> dict:
     """robust over the tolerance axes, nothing remembered, beside reading with zarr alone."""
     array = open_with_zarr(atlas)
 
@@ -128,17 +129,17 @@ def measure_robust(atlas: sweep.query.atlas.Atlas, rounds: int) -> dict:
     }
 
 
-def case_of(atlas: sweep.query.atlas.Atlas) -> str:
+def case_of(atlas: Atlas) -> str:
     """The first case of an atlas."""
     return atlas.stored.cases[0].name
 
 
-def design_of(atlas: sweep.query.atlas.Atlas) -> str:
+def design_of(atlas: Atlas) -> str:
     """The first design of an atlas."""
     return atlas.stored.designs[0].name
 
 
-def peak_of_a_fresh_process(atlas: sweep.query.atlas.Atlas) -> int:
+def peak_of_a_fresh_process(atlas: Atlas) -> int:
     """Peak memory of a process that asks robust of the whole atlas once."""
     command = [sys.executable, str(Path(__file__).resolve()), "--once", str(atlas.stored.path)]
     environment = {**os.environ, "PYTHONPATH": str(CHECKOUT), "SWEEP_MEMO": "off"}
@@ -150,11 +151,17 @@ def ask_once(folder: str) -> dict:
     """Ask robust in this process and tell its peak memory."""
     atlas = sweep.open_atlas(folder)
     atlas.robust(case_of(atlas))
-    kilobytes = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
-    return {"peak_memory_bytes": kilobytes * (1 if sys.platform == "darwin" else 1024)}
+    return {"peak_memory_bytes": peak_memory_bytes()}
 
 
-def measure_commands(atlas: sweep.query.atlas.Atlas, rounds: int) -> dict:
+def run_process(command: list[str], environment: dict[str, str]) -> None:
+    """A whole process; that a requirement is not met (exit code 1) is an answer as well."""
+    done = subprocess.run(command, env=environment, capture_output=True, text=True)
+    if done.returncode not in (0, 1) or done.stderr:
+        raise RuntimeError(f"{command} ended with {done.returncode}: {done.stderr}")
+
+
+def measure_commands(atlas: Atlas, rounds: int) -> dict:
     """Whole processes over a bare import."""
     environment = {**os.environ, "PYTHONPATH": str(CHECKOUT)}
     judged = ["--design", design_of(atlas), "--case", case_of(atlas)]
@@ -162,7 +169,9 @@ def measure_commands(atlas: sweep.query.atlas.Atlas, rounds: int) -> dict:
     def process(*arguments: str) -> Callable[[], object]:
         command = [sys.executable, *arguments]
         # 1: a requirement is not met, which is an answer
-        return lambda: subprocess.run(command, env=environment, capture_output=True).check_returncode
+        return lambda: (
+            subprocess.run(command, env=environment, capture_output=True).check_returncode
+        )
 
     folder = str(atlas.stored.path)
     works = {
@@ -180,7 +189,7 @@ def measure_commands(atlas: sweep.query.atlas.Atlas, rounds: int) -> dict:
     }
 
 
-def measure_in_process(atlas: sweep.query.atlas.Atlas, rounds: int) -> dict:
+def measure_in_process(atlas: Atlas, rounds: int) -> dict:
     """Answers over one slice read."""
     array = open_with_zarr(atlas)
     middle = tuple(n // 2 for n in array.shape)
