@@ -66,7 +66,9 @@ def random_stable_design(rnd: Random) -> Asked:
     rnd.shuffle(axes)
     shape = tuple(len(axis) for axis in axes)
     noise = np.random.default_rng(rnd.randrange(2**32))
-    log_radius = noise.choice([-0.5, -0.1, 0.1, 0.3], size=shape, p=[0.1, 0.1, 0.4, 0.4])
+    stable = rnd.choice((0.2, 0.6, 0.85))
+    values = noise.choice([0.1, 0.3], size=shape)
+    log_radius = np.where(noise.random(shape) < stable, -values, values)
     log_radius[noise.random(shape) < rnd.choice((0.0, 0.05))] = np.nan
     tiles = tuple(rnd.randint(1, n) for n in shape)
     atlas = memory_atlas.atlas(axes, log_radius, tile_shape=tiles)
