@@ -31,12 +31,11 @@ ROWS = 24
 """Sample periods that the table shows unless it is asked for more."""
 
 _WORDS = {True: "meets", False: "fails", None: "unknown"}
-_WATCH = (
-    "watch: 'end' names axes at whose end the design (or its box) lies; more may lie beyond; "
-    "'edge' those along which a neighbour does not meet, or is not known to"
+_END, _EDGE = "|", "!"
+_MARKS = (
+    f"'{_END}': at an axis end, so that more may lie beyond; "
+    f"'{_EDGE}': along this axis a neighbour does not meet, or is not known to"
 )
-
-
 _MORE = ">"
 _LEFT = "left: from the box until stability is lost; what else is required may fail sooner"
 _BEYOND = (
@@ -193,8 +192,8 @@ def _table_parts(answer: ChooseAnswer, most_rows: int) -> Iterable[RenderableTyp
     yield _table(answer, shown, differing)
     if same:
         yield line(f"{_place_text(answer, same)}: the worst in every row")
-    if any(_watch_text(answer, row) for row in shown):
-        yield line(_WATCH, "dim")
+    if any(row.axis_ends or row.beside_failing or _box_ends(row) for row in shown):
+        yield line(_MARKS, "dim")
     ends = {item.end for row in shown for item in row.delay_left or ()}
     if ends:
         yield line(_LEFT, "dim")
@@ -240,21 +239,21 @@ def _table(answer: ChooseAnswer, rows: Sequence[ChooseRow], differing: Sequence[
         *(f"worst {_words(name)}" for name in quantities),
         *(head(f"{axis.name} left", axis) for axis in delays),
         *(head(f"worst {axis.name}", axis) for axis in worst),
-        "watch",
     )
-    for column in table.columns[:-1]:
+    for column in table.columns:
         column.justify = "right"
     table.columns[0].no_wrap = table.columns[1].no_wrap = True
     for row in rows:
         period = period_text(answer, row.sample_period_s).partition(" ")[0]
-        texts = [period, _WORDS[row.meets]]
+        edged = any(_is_period(answer, name) for name in row.beside_failing)
+        texts = [_EDGE * edged + period, _WORDS[row.meets]]
         texts += [_design_text(axis, row) for axis in axes]
         if answer.best == GAIN_BOX:
             texts.append(_nodes_text(row))
         texts += [_quantity_text(name, row.worst.get(name)) for name in quantities]
         texts += _left_numbers(row, delays)
         texts += [number(axis, row.at[axis.name]) if row.at else "" for axis in worst]
-        table.add_row(*cells(*texts, _watch_text(answer, row)))
+        table.add_row(*cells(*texts))
     return table
 
 
@@ -268,10 +267,12 @@ def _is_period(answer: ChooseAnswer, name: str) -> bool:
 
 
 def _design_text(axis: Axis, row: ChooseRow) -> str:
-    """A design's value, and the side of the gain box around it."""
+    """A design's value with what to beware of, and the side of the gain box around it."""
     if row.design is None:
         return ""
-    value = number(axis, row.design[axis.name])
+    ended = axis.name in row.axis_ends or axis.name in _box_ends(row)
+    marks = _EDGE * (axis.name in row.beside_failing) + _END * ended
+    value = marks + number(axis, row.design[axis.name])
     if row.box is None or axis.name not in row.box.ends or axis.is_row_axis:
         return value
     low, high = (number(axis, end) for end in row.box.ends[axis.name])
@@ -321,12 +322,9 @@ def _left_text(item: DelayLeft) -> str:
     return left + more.get(item.end, "")
 
 
-def _watch_text(answer: ChooseAnswer, row: ChooseRow) -> str:
-    ends = [name for name in row.axis_ends if not _is_period(answer, name)]
-    edges = ["period" if _is_period(answer, name) else name for name in row.beside_failing]
-    boxed = dict.fromkeys(name for name, _ in row.box.axis_ends) if row.box else ()
-    pieces = [("end", ends), ("edge", edges), ("box end", list(boxed))]
-    return "; ".join(f"{word} {', '.join(names)}" for word, names in pieces if names)
+def _box_ends(row: ChooseRow) -> set[str]:
+    """Axes at whose end the gain box lies."""
+    return {name for name, _ in row.box.axis_ends} if row.box else set()
 
 
 def _place_text(answer: ChooseAnswer, place: Mapping[str, Value]) -> str:
