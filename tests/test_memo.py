@@ -23,6 +23,8 @@ from sweep.errors import InputError
 from sweep.query.memo import Memo, array_text, text_array
 from sweep.query.memo_entry import HEAD_BYTES, MAGIC
 
+pytestmark = pytest.mark.usefixtures("memo_is_on")
+
 ANSWER = {
     "worst": np.linspace(-1, 1, 300).reshape(3, 100).astype(np.float32),
     "at": np.arange(12, dtype=np.int16).reshape(2, 6),

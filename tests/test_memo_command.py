@@ -11,6 +11,8 @@ import pytest
 from sweep.__main__ import main
 from sweep.query.memo import Memo
 
+pytestmark = pytest.mark.usefixtures("memo_is_on")
+
 
 def ask(capsys, *arguments):
     code = main(["memo", *arguments])

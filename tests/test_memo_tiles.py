@@ -13,6 +13,8 @@ from sweep.config import parse_config
 from sweep.query.memo import Memo, fingerprint
 from sweep.store.atlas import create_atlas
 
+pytestmark = pytest.mark.usefixtures("memo_is_on")
+
 CONFIG = """
 title = "Memo"
 sample_period = 0.01
