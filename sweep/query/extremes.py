@@ -261,8 +261,10 @@ class _Work:
 
 def worst_place(values: NDArray[Any], sense: str, *, some_unknown: bool) -> NDArray[np.intp]:
     """Along the last dimension, the first place of the worst known value; 0 where none is known."""
+    place: NDArray[np.intp]
     if not some_unknown:
-        return values.argmax(axis=-1) if sense == "max" else values.argmin(axis=-1)
+        place = values.argmax(axis=-1) if sense == "max" else values.argmin(axis=-1)
+        return place
     unknown = np.isnan(values)
     mildest = np.asarray(-np.inf if sense == "max" else np.inf, values.dtype)
     filled = np.where(unknown, mildest, values)

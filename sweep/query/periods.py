@@ -36,7 +36,9 @@ class Periods:
     def any_per_row(self, flags: NDArray[np.bool_]) -> NDArray[np.bool_]:
         """Whether any design at each period is flagged."""
         lines = flags if self.dimension is None else np.moveaxis(flags, self.dimension, 0)
-        rows: NDArray[np.bool_] = lines.reshape(len(self.values_s), -1).any(axis=1)
+        rows: NDArray[np.bool_] = np.logical_or.reduce(
+            lines.reshape(len(self.values_s), -1), axis=1
+        )
         return rows
 
 

@@ -243,7 +243,7 @@ def find_excluded(structure: LoopStructure, scope: Scope) -> NDArray[np.bool_]:
     compute = scope.parameter("delay.compute")
     period_s = scope.parameter("sample_period")
     late = compute > (1.0 if units["compute"] == "samples" else period_s)
-    reduced: NDArray[np.bool_] = late.any(axis=scope.box)
+    reduced: NDArray[np.bool_] = np.logical_or.reduce(late, axis=scope.box)
     return reduced
 
 
