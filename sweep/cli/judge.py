@@ -4,15 +4,9 @@ from __future__ import annotations
 
 import argparse
 from pathlib import Path
-from typing import TYPE_CHECKING
 
 from sweep.cli.command import BARE_NUMBERS, Command, add_atlas, add_require, flatten
 from sweep.cli.output import print_document, print_view
-
-if TYPE_CHECKING:
-    from sweep.query.judge import AskedDesign
-    from sweep.query.question import Demand
-    from sweep.store.atlas import StoredAtlas
 
 NOT_MET = 1
 INCOMPLETE = 3
@@ -77,15 +71,18 @@ def _options(parser: argparse.ArgumentParser) -> None:
 
 def _judge(arguments: argparse.Namespace) -> int:
     from sweep.query.atlas import open_atlas
-    from sweep.query.judge import judge_designs
+    from sweep.query.select import parse_assignments, parse_single
 
-    stored = open_atlas(arguments.atlas, arguments.shelf).stored
-    answer = judge_designs(
-        stored,
-        _designs(arguments, stored),
-        _demands(arguments, stored),
+    answer = open_atlas(arguments.atlas, arguments.shelf).judge(
+        flatten(arguments.design),
+        case=flatten(arguments.case),
+        at=parse_single(arguments.at),
+        schedule=arguments.schedule,
+        over=parse_assignments(arguments.over),
+        require=parse_single(arguments.require),
+        shake=parse_single(arguments.shake),
         confidence=arguments.confidence,
-        weights=_weights(arguments.weights, stored),
+        weights=arguments.weights,
     )
     if arguments.json:
         print_document(answer.to_json())
@@ -94,58 +91,6 @@ def _judge(arguments: argparse.Namespace) -> int:
 
         print_view(judge_view(answer))
     return {"fails": NOT_MET, "unknown": INCOMPLETE}.get(answer.verdict, 0)
-
-
-def _designs(arguments: argparse.Namespace, stored: StoredAtlas) -> list[AskedDesign]:
-    """What is to be judged: named, given with ``--at``, or rows of a schedule."""
-    from dataclasses import replace
-
-    from sweep.query.judge import AskedDesign, named_designs
-    from sweep.query.select import parse_single, resolve_names
-
-    names, at = flatten(arguments.design), parse_single(arguments.at)
-    found: list[AskedDesign] = []
-    if names or not (at or arguments.schedule):
-        found += named_designs(stored, names)
-    if at and names:
-        changed = resolve_names(stored.grid, at)
-        found = [
-            replace(
-                design,
-                name=f"{design.name} with {', '.join(f'{n}={v}' for n, v in at.items())}",
-                at={n: v for n, v in design.at.items() if n not in changed} | dict(at),
-            )
-            for design in found
-        ]
-    elif at:
-        found.append(AskedDesign("the design asked for", dict(at)))
-    if arguments.schedule:
-        from sweep.query.schedule import read_schedule
-
-        found += read_schedule(arguments.schedule, stored.grid)
-    return found
-
-
-def _demands(arguments: argparse.Namespace, stored: StoredAtlas) -> list[Demand]:
-    """Against what: cases, or one box and bounds of the question's own."""
-    from sweep.query.question import Demand
-    from sweep.query.requirement import find_case
-    from sweep.query.select import parse_assignments, parse_single
-
-    over = dict(parse_assignments(arguments.over))
-    require, shake = parse_single(arguments.require), parse_single(arguments.shake)
-    cases = [find_case(stored.cases, name) for name in flatten(arguments.case)]
-    if not cases and not (over or require):
-        cases = list(stored.cases)
-    return [Demand(case, over, require, shake) for case in (cases or (None,))]
-
-
-def _weights(path: Path | None, stored: StoredAtlas) -> dict[str, dict[str, float]] | None:
-    if path is None:
-        return None
-    from sweep.query.schedule import read_weights
-
-    return read_weights(path, stored.grid)
 
 
 def _share(text: str) -> float:
