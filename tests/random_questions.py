@@ -141,8 +141,8 @@ def random_atlas(rnd: Random, *, wide: bool = False) -> Atlas:
         tile_shape=tiles,
         structure=LoopStructure("oscillator", "pid", delay_parts=parts),
     )
-    if rnd.random() < 0.3:  # a measure that is less complete than the other
-        angle = made.stored.values["mode_angle"]
+    if rnd.random() < 0.3:  # measures of which neither is as complete as the other
+        angle = noise.choice(np.array(ANGLES, np.float32), size=shape)
         made.stored.values["mode_angle"] = np.where(noise.random(shape) < 0.1, np.nan, angle)
     return made
 
