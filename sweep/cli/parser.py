@@ -7,13 +7,13 @@ import shutil
 import textwrap
 from collections.abc import Sequence
 
-from sweep.cli import choose, decide, judge, keep, look, make, robust
+from sweep.cli import choose, judge, keep, look, make, robust
 from sweep.cli.command import Command, Parser
 
 COMMANDS: tuple[Command, ...] = (
     *make.COMMANDS,
     *look.COMMANDS,
-    *decide.COMMANDS,
+    *limits.COMMANDS,
     *robust.COMMANDS,
     *choose.COMMANDS,
     *judge.COMMANDS,
