@@ -7,7 +7,7 @@ import shutil
 import textwrap
 from collections.abc import Sequence
 
-from sweep.cli import choose, judge, keep, look, make, robust
+from sweep.cli import choose, judge, keep, limits, look, make, robust
 from sweep.cli.command import Command, Parser
 
 COMMANDS: tuple[Command, ...] = (
