@@ -137,6 +137,21 @@ def test_people_read_the_share_the_box_the_worst_node_and_the_cautions(ask):
     assert max(map(len, out.splitlines())) <= 108
 
 
+def test_a_fixed_axis_that_is_shaken_is_not_said_to_lie_between_nodes(ask):
+    for spelled in ("sample_rate=1%", "sample_period=1%"):
+        shown = " ".join(ask("bench", "--at", "sample_period=5ms", "--shake", spelled)[1].split())
+        assert f"{spelled.partition('=')[0]} may move by 1% either way" in shown
+        assert "sample_period takes in 2 ms to 10 ms" in shown
+        assert "lies between nodes" not in shown
+
+
+def test_a_rate_fixes_a_period_and_keeps_it_to_a_range(ask):
+    fixed = json.loads(ask("bench", "--json", "--at", "sample_rate=100Hz")[1])
+    assert (fixed["at"], fixed["design_nodes"]) == ({"sample_period": 0.01}, 21)
+    kept = json.loads(ask("bench", "--json", "--within", "sample_rate=100Hz:210Hz")[1])
+    assert (kept["design_nodes"], kept["excluded"]) == (42, 0)
+
+
 def test_what_is_not_computed_is_unknown_and_an_atlas_without_answers_ends_with_three(ask):
     code, out, _ = ask("half", "--json")
     document = json.loads(out)

@@ -7,7 +7,7 @@ from typing import Protocol
 
 from sweep.grid import Axis, Grid
 from sweep.query.answers import show_value
-from sweep.query.select import Value
+from sweep.query.select import Value, find_axis
 
 
 class Boxed(Protocol):
@@ -57,10 +57,12 @@ def box_lines(answer: Boxed, shaken: Mapping[str, str] | None = None) -> Iterabl
         )
     for name, reach in shaken.items():
         yield f"{name} may move by {reach} either way: its worst neighbour counts"
+    moving = {find_axis(grid, name).name for name in shaken}
     for name, ends in answer.bracketed.items():
-        if name in shaken:
-            continue
         axis = grid.axis(name)
+        if name in moving:
+            yield f"{name} takes in {range_text(axis, ends)}"
+            continue
         yield (
             f"{name} lies between nodes: bracketed by {show_value(axis, ends[0])} and "
             f"{show_value(axis, ends[1])}, the worse of them counts"
