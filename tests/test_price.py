@@ -133,6 +133,7 @@ def test_rows_are_removed_to_the_nominal_row():
     assert (price.removed.meets, price.brings_nothing) == (2, False)
 
 
+@pytest.mark.usefixtures("memo_is_on")
 def test_prices_from_the_memo_are_the_prices(tmp_path, monkeypatch):
     monkeypatch.setattr("sweep.query.price.WORTH_KEEPING", 1)
     monkeypatch.setattr("sweep.query.worst.WORTH_KEEPING", 1)

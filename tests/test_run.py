@@ -360,9 +360,12 @@ def test_two_runs_of_one_atlas_at_once_are_harmless(tmp_path):
 
 
 def test_until_stops_so_that_tiles_in_flight_end_in_time(tmp_path):
-    """Local clock: the deadline lies 0.6 s ahead, a tile takes 0.1 s, 18 tiles are wanted."""
-    deadline = datetime.now() + timedelta(seconds=0.6)  # noqa: DTZ005
-    kernel = stand_in.Recording(sleep_s=0.1)
+    """Local clock: the deadline lies 3 s ahead, a tile takes 0.3 s, 18 tiles are wanted.
+
+    However long a busy machine takes to start, one tile fits in, and never do all of them.
+    """
+    deadline = datetime.now() + timedelta(seconds=3)  # noqa: DTZ005
+    kernel = stand_in.Recording(sleep_s=0.3)
     ears = Ears()
     monkey = pytest.MonkeyPatch()
     monkey.setattr(planning, "PROBE_S", 0.0)
@@ -376,10 +379,10 @@ def test_until_stops_so_that_tiles_in_flight_end_in_time(tmp_path):
             listener=ears,
         )
     monkey.undo()
-    assert datetime.now() <= deadline + timedelta(seconds=0.05)  # noqa: DTZ005
+    assert datetime.now() <= deadline + timedelta(seconds=0.2)  # noqa: DTZ005
     assert report.stopped_by_until
     assert not report.interrupted
-    assert 1 <= report.tiles_computed <= 4
+    assert 1 <= report.tiles_computed <= 9
     assert [event.reason for event in ears.of(SweepStopping)] == ["until"]
     assert run(stand_in.small(), tmp_path).complete
 
