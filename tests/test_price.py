@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
+import pytest
 from choose_by_hand import ByHand, questions
 from hypothesis import given, settings
 from memory_atlas import atlas, axis, rows

@@ -121,9 +121,14 @@ def recall_outcomes(
     )
     over = question.scope.over()
     return [
-        Outcome(over, one["meets"], one["share"], one["best"], one["slowest"])
+        Outcome(over, one["meets"], one["share"], _number(one["best"]), _number(one["slowest"]))
         for one in json.loads(text)
     ]
+
+
+def _number(kept: float | str | None) -> float | None:
+    """A number from a document, where what is unbounded is the text "inf"."""
+    return None if kept is None else float(kept)
 
 
 def find_prices(scope: Scope, plan: PriceList, outcomes: Sequence[Outcome]) -> tuple[Price, ...]:
