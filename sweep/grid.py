@@ -15,6 +15,13 @@ from numpy.typing import NDArray
 Role = Literal["design", "tolerance"]
 FloatArray = NDArray[np.float64]
 
+SAME_NODE = 1e-9
+"""A value within this share of the axis span of a node is that node, and within `SAME_STEP`."""
+
+SAME_STEP = 1e-3
+"""Share of the step to the nearest neighbour that is never more than one and the same node: a wide
+logarithmic axis has steps that are finer than a billionth of its span."""
+
 
 @dataclass(frozen=True, eq=False)
 class Axis:
@@ -52,6 +59,18 @@ class Axis:
     def is_row_axis(self) -> bool:
         """Whether its nodes are rows of a table."""
         return self.labels is not None
+
+    def snapped(self, values: FloatArray) -> FloatArray:
+        """Values with those that mean a node moved onto it; any shape, in the axis's unit."""
+        x = self.coordinates
+        if len(x) < 2:
+            return np.where(values == x[0], x[0], values)
+        right = np.clip(np.searchsorted(x, values), 1, len(x) - 1)
+        near = np.where(values - x[right - 1] <= x[right] - values, right - 1, right)
+        steps = np.diff(x)
+        step = np.minimum(steps[np.maximum(near - 1, 0)], steps[np.minimum(near, len(steps) - 1)])
+        slack = np.minimum(SAME_NODE * (x[-1] - x[0]), SAME_STEP * step)
+        return np.where(np.abs(values - x[near]) <= slack, x[near], values)
 
     def values_of(self, path: str) -> FloatArray:
         """The values of parameter ``path`` along the axis, shape (n,), SI units.

@@ -20,6 +20,8 @@ from random_questions import (
     window,
 )
 
+from sweep.vocabulary import LoopStructure
+
 GAINS = ("controller.kp", "controller.ki", "controller.kd")
 
 
@@ -63,6 +65,11 @@ def random_stable_design(rnd: Random) -> Asked:
         memory_atlas.axis("sample_period", [0.01, 0.02, 0.03], unit="s"),
         memory_atlas.axis("damping", [0.1, 0.2], sets="plant.damping", role="tolerance"),
     ]
+    parts = ()
+    if rnd.random() < 0.5:  # up to more than some of the periods
+        times = [0.005, 0.01, 0.025][: rnd.randint(1, 3)]
+        axes.append(memory_atlas.axis("compute", times, sets="delay.compute", role="tolerance"))
+        parts = (("compute", "s"),)
     rnd.shuffle(axes)
     shape = tuple(len(axis) for axis in axes)
     noise = np.random.default_rng(rnd.randrange(2**32))
@@ -71,12 +78,15 @@ def random_stable_design(rnd: Random) -> Asked:
     log_radius = np.where(noise.random(shape) < stable, -values, values)
     log_radius[noise.random(shape) < rnd.choice((0.0, 0.05))] = np.nan
     tiles = tuple(rnd.randint(1, n) for n in shape)
-    atlas = memory_atlas.atlas(axes, log_radius, tile_shape=tiles)
+    structure = LoopStructure("oscillator", "p", delay_parts=parts)
+    atlas = memory_atlas.atlas(axes, log_radius, tile_shape=tiles, structure=structure)
     asked = Asked(Question(atlas, {"at": {}, "over": {}}, {}, []))
     for axis in axes:
         asked.spans[axis.name] = list(range(len(axis)))
         if axis.role == "design":
             _ask_value(rnd, asked, axis)
+        elif axis.name == "compute":
+            _ask_tolerance(rnd, asked, axis)
     asked.question.asked["require"] = {}
     for node in nodes_of(asked):
         log_radius[node] = -0.2
@@ -155,7 +165,7 @@ def verdict(asked):
     """Over all that is required."""
     found = [line_verdict(asked, "log_radius", "max", THRESHOLD, is_stability=True)]
     found += [line_verdict(asked, *bound) for bound in asked.question.bounds]
-    if any(cannot_be_built(asked.question, node) for node in nodes_of(asked)):
+    if is_excluded(asked):
         found.append("fails")
     return next((word for word in ("fails", "unknown") if word in found), "meets")
 
@@ -164,6 +174,16 @@ def is_stable(asked):
     """Known to be, at every node."""
     value, _, unknown = worst(asked, nodes_of(asked), "log_radius", "max")
     return value < THRESHOLD and not unknown
+
+
+def is_excluded(asked, **instead):
+    """Whether any node cannot be built."""
+    return any(cannot_be_built(asked.question, node) for node in nodes_of(asked, **instead))
+
+
+def excluded_line(asked, axis):
+    """Whether any node cannot be built, at every node along an axis."""
+    return [is_excluded(asked, **{axis.name: [i]}) for i in range(len(axis))]
 
 
 def line(asked, axis):
@@ -175,13 +195,16 @@ def line(asked, axis):
     return values
 
 
-def stretch_end(values, node, step):
+def stretch_end(values, excluded, node, step):
     """(last stable node, first other node or None, how it ends) from a stable node on."""
-    while 0 <= node + step < len(values) and values[node + step] < THRESHOLD:
+    holds = [value < THRESHOLD and not out for value, out in zip(values, excluded, strict=True)]
+    while 0 <= node + step < len(values) and holds[node + step]:
         node += step
     other = node + step
     if not 0 <= other < len(values):
         return node, None, "axis_end"
+    if excluded[other]:
+        return node, other, "excluded"
     return node, other, "unknown" if math.isnan(values[other]) else "boundary"
 
 

@@ -145,6 +145,24 @@ def unordered(question: Question) -> list[int]:
     return [i for i, axis in enumerate(axes) if axis.labels and not axis.ordered]
 
 
+def changes_structure(axis, node: int) -> bool:
+    """Whether the integral gain is exactly 0 there."""
+    return "controller.ki" in axis.sets and axis.values_of("controller.ki")[node] == 0
+
+
+def apart(question: Question, dimension: int, low: int, high: int) -> bool:
+    """Whether some places of a dimension are several, and a gain of 0 is one of them."""
+    name = question.free[dimension]
+    axis, span = question.atlas.grid.axis(name), question.spans[name]
+    return low < high and any(changes_structure(axis, span[i]) for i in range(low, high + 1))
+
+
+def touching(question: Question, one: Node, other: Node) -> bool:
+    """Whether two neighbours have nothing between them that they say nothing about."""
+    pairs = [sorted(pair) for pair in zip(one, other, strict=True)]
+    return not any(apart(question, i, *pair) for i, pair in enumerate(pairs))
+
+
 def meeting(question: Question, designs: list[Design]) -> set[Node]:
     """Places of the designs that meet."""
     spans = [question.spans[name] for name in question.free]
@@ -167,8 +185,9 @@ def regions(question: Question, places: set[Node]) -> int:
         count += 1
         stack = [left.pop()]
         while stack:
-            for other in beside(stack.pop(), along):
-                if other in left:
+            here = stack.pop()
+            for other in beside(here, along):
+                if other in left and touching(question, here, other):
                     left.remove(other)
                     stack.append(other)
     return count
@@ -179,7 +198,12 @@ def largest_box(question: Question, places: set[Node]):
     single = unordered(question)
     spans = [question.spans[name] for name in question.free]
     sides = [
-        [(a, b) for a in range(len(s)) for b in range(a, len(s)) if i not in single or a == b]
+        [
+            (a, b)
+            for a in range(len(s))
+            for b in range(a, len(s))
+            if (i not in single or a == b) and not apart(question, i, a, b)
+        ]
         for i, s in enumerate(spans)
     ]
     must = question.around and [
@@ -208,6 +232,6 @@ def largest_jump(question: Question, designs: list[Design], places: set[Node]) -
         abs(by_place[p].worst["log_radius", "max"] - by_place[q].worst["log_radius", "max"])
         for p in places
         for q in beside(p, along)
-        if q in by_place and q not in places
+        if q in by_place and q not in places and touching(question, p, q)
     ]
     return max((jump for jump in jumps if not math.isnan(jump)), default=None)

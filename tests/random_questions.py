@@ -11,7 +11,7 @@ from random import Random
 
 import memory_atlas
 import numpy as np
-from plain_robust import THRESHOLD, Question
+from plain_robust import THRESHOLD, Question, changes_structure
 
 from sweep.query.atlas import Atlas
 from sweep.vocabulary import LoopStructure
@@ -49,11 +49,6 @@ def some_value(rnd: Random, axis, low: int = 0, *, at_nodes: bool = False) -> fl
     if at_nodes or node == len(axis) - 1 or rnd.random() < 0.5:
         return float(axis.coordinates[node])
     return between(axis.coordinates, node)
-
-
-def changes_structure(axis, node: int) -> bool:
-    """Whether the integral gain is exactly 0 there."""
-    return "controller.ki" in axis.sets and axis.values_of("controller.ki")[node] == 0
 
 
 # --- random atlases -----------------------------------------------------------------------------
@@ -257,6 +252,8 @@ def window(axis, low: float, high: float) -> tuple[int, int, bool]:
     above = [i for i, value in enumerate(x) if value >= high - slack]
     first = below[-1] if below else 0
     last = above[0] if above else len(x) - 1
+    several = first < last and any(changes_structure(axis, i) for i in range(first, last + 1))
+    lost = several
     if changes_structure(axis, first) and x[first] < low - slack:
         first, lost = first + 1, True
     if changes_structure(axis, last) and x[last] > high + slack:

@@ -237,7 +237,7 @@ def test_an_atlas_without_design_axes_is_one_design():
 # --- cases ---------------------------------------------------------------------------------------
 
 
-def test_a_question_narrows_a_case_and_replaces_the_bound_of_the_same_name():
+def test_a_question_replaces_the_box_of_a_case_and_tightens_its_bounds_and_is_named_so():
     case = Case(
         "cold",
         {"damping": (0.2, 0.2)},
@@ -249,10 +249,15 @@ def test_a_question_narrows_a_case_and_replaces_the_bound_of_the_same_name():
     assert (cold.meets, cold.fails) == (0, 2)
     bounds = {requirement.name: requirement.limit for requirement in cold.requirements}
     assert bounds == {"max_log_radius": -1e-9, "max_radius": 0.7, "min_log_radius": -0.2}
-    own = asked.robust("cold", require={"max_radius": 0.9, "min_log_radius": -0.3})
-    assert (own.meets, own.fails) == (1, 1)
+    looser = asked.robust("cold", require={"max_radius": 0.9, "min_log_radius": -0.3})
+    assert {item.name: item.limit for item in looser.requirements} == bounds
+    assert (looser.meets, looser.fails) == (0, 2)
+    assert looser.case == "cold with max_radius=0.9, min_log_radius=-0.3"
+    tighter = asked.robust("cold", require={"max_radius": 0.6})
+    assert {item.name: item.limit for item in tighter.requirements}["max_radius"] == 0.6
     wider = asked.robust("cold", over={"damping": "0.1:0.2"}, require={"min_log_radius": -9})
     assert (wider.over, wider.meets, wider.nodes) == ({"damping": (0.1, 0.2)}, 0, 4)
+    assert wider.case == "cold with damping=0.1:0.2, min_log_radius=-9"
     fixed = asked.robust("cold", at={"damping": 0.1}, require={"max_radius": 1, "min_radius": 0})
     assert fixed.over == {"damping": (0.1, 0.1)}
 

@@ -20,8 +20,6 @@ from sweep.grid import Axis
 from sweep.quantities import format_quantity
 from sweep.vocabulary import ALWAYS_COMPUTED, DERIVED, MEASURES
 
-_BILLIONTH = 1e-9
-
 
 @dataclass(frozen=True)
 class Question:
@@ -135,9 +133,9 @@ def _read_coordinate(
         return None
     axis, coordinates = built.axis, built.axis.coordinates
     stored = reader.store(number)
-    near = int(np.argmin(np.abs(coordinates - stored)))
-    if abs(coordinates[near] - stored) <= _BILLIONTH * (coordinates[-1] - coordinates[0]):
-        return float(coordinates[near])
+    meant = float(axis.snapped(np.array(stored)))
+    if meant in coordinates:
+        return meant
     low, high = coordinates[0], coordinates[-1]
     if not low <= stored <= high:
         expected = f"a value on the axis {axis.name}, {_show(low, axis)} to {_show(high, axis)}"

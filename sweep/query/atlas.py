@@ -183,7 +183,9 @@ class Atlas:
         fixed = self._asked(at, design, without=(along_name, *each))
         box = self._box(case, over, named=(along_name, *fixed, *each))
         question = resolve_limits(self.grid, along, fixed, box, each, nominal)
-        return find_limits(self.stored, self.atlas_id, question, max(1, rows))
+        return find_limits(
+            self.stored, self.atlas_id, question, max(1, rows), self.stored.structure
+        )
 
     def robust(
         self,
@@ -211,8 +213,8 @@ class Atlas:
         within
             Ranges that design axes are kept to.
         require
-            Bounds by name, such as ``{"max_decay_time": "80 ms"}``; they come on top of the case's.
-            Being stable is always required.
+            Bounds by name, such as ``{"max_decay_time": "80 ms"}``; they come on top of the case's,
+            and of two bounds on one quantity the stricter counts. Being stable is always required.
         shake
             How far design axes may move by themselves, such as ``{"kp": "10%"}``: the worst
             neighbour counts.

@@ -10,10 +10,10 @@ from sweep.errors import QuestionError
 from sweep.query.answers.choose import GAIN_BOX
 from sweep.query.derived import spec_of
 from sweep.query.extremes import Extreme
-from sweep.query.largest_box import Box, find_largest_box
+from sweep.query.gaps import box_without_gaps, design_gaps, unordered_dimensions
+from sweep.query.largest_box import Box
 from sweep.query.periods import Periods
 from sweep.query.requirement import check_held
-from sweep.query.robust import unordered_dimensions
 from sweep.query.verdicts import MEETS
 from sweep.query.worst import LOG_RADIUS, WorstCases
 from sweep.vocabulary import DERIVED, MEASURES
@@ -74,7 +74,9 @@ def find_gain_box(cases: WorstCases, periods: Periods, row: int) -> Box | None:
     others = [i for i in range(len(cases.scope.free)) if i != periods.dimension]
     unordered = unordered_dimensions(cases.scope)
     single = [place for place, dimension in enumerate(others) if dimension in unordered]
-    return find_largest_box(meets, single=single)
+    all_gaps = design_gaps(cases.scope)
+    gaps = {place: all_gaps[d] for place, d in enumerate(others) if d in all_gaps}
+    return box_without_gaps(meets, gaps, single=single)
 
 
 def find_gain_boxes(cases: WorstCases, periods: Periods) -> list[Box | None]:

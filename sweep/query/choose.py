@@ -22,17 +22,22 @@ from sweep.query.best import Best, find_gain_box, read_best
 from sweep.query.cautions import OVER_A_BOX
 from sweep.query.delay_left import find_delay_left
 from sweep.query.extremes import Extreme, Places
-from sweep.query.jump import find_largest_jump
+from sweep.query.gaps import design_gaps, jump_without_gaps, unordered_dimensions
 from sweep.query.largest_box import Box
 from sweep.query.memo import Memo
 from sweep.query.periods import Periods, find_periods
 from sweep.query.price import PriceList, find_outcome, find_prices, plan_prices, recall_outcomes
 from sweep.query.question import Demand, DesignQuestion, resolve_question
-from sweep.query.robust import unordered_dimensions
 from sweep.query.scope import Scope
 from sweep.query.select import Asked, resolve_names, value_at
 from sweep.query.verdicts import FAILS, MEETS, NAMES, Codes
-from sweep.query.worst import LOG_RADIUS, WorstCases, find_worst_cases, find_worst_of_parts
+from sweep.query.worst import (
+    LOG_RADIUS,
+    WorstCases,
+    find_worst_cases,
+    find_worst_of_parts,
+    narrow_box,
+)
 
 if TYPE_CHECKING:
     from sweep.store.atlas import StoredAtlas
@@ -95,6 +100,7 @@ def choose_designs(
         slowest=_slowest(rows),
         best_row=_best_row(rows, chosen),
         slowest_is_axis_end=_is_axis_end(question.scope, _slowest(rows)),
+        slowest_is_range_end=_is_range_end(question.scope, _slowest(rows)),
         slower_unknown=_slower_unknown(rows),
         base=outcomes[0],
         price=None if plan is None else find_prices(question.scope, plan, outcomes),
@@ -135,12 +141,13 @@ def _reduce(
     seen: list[WorstCases] = []
 
     def reduce_parts(parts: Sequence[Places]) -> Iterator[Outcome]:
-        for cases in find_worst_of_parts(
+        found = find_worst_of_parts(
             stored, stored.structure, scope, required, parts, also=also, windows=windows
-        ):
+        )
+        for part, cases in zip(parts, found, strict=True):
             if not seen:
                 seen.append(cases)
-            yield find_outcome(cases, best, periods)
+            yield find_outcome(cases, best, find_periods(narrow_box(scope, part)))
 
     outcomes = []
     if plan is not None and len(plan.parts) > 1:
@@ -169,7 +176,9 @@ def _facts(question: DesignQuestion, cases: WorstCases) -> dict[str, Any]:
         "shaken": {name: str(reach) for name, reach in question.demand.shake.items()},
         "free": tuple(scope.grid.axes[axis].name for axis in scope.free),
         "design_nodes": verdict.size,
-        "largest_jump": find_largest_jump(log_radius, meets, unordered_dimensions(scope)),
+        "largest_jump": jump_without_gaps(
+            log_radius, meets, design_gaps(scope), unordered_dimensions(scope)
+        ),
         "nodes": scope.nodes,
         "unknown_nodes": cases.found.unknown_nodes,
         "cautions": OVER_A_BOX,
@@ -202,8 +211,10 @@ class _Choice:
             at={} if design is None else self.cases.place_of(self.best.extreme, design),
             delay_left=self._delay_left(design) if design is not None and meets else None,
             axis_ends=() if design is None else self._axis_ends(design),
+            range_ends=() if design is None else self._range_ends(design),
             beside_failing=self._beside(design) if design is not None and meets else (),
             box=None if box is None else self._named(box),
+            box_range_ends=() if box is None else self._box_range_ends(box),
             verdicts=counts,
         )
 
@@ -257,6 +268,43 @@ class _Choice:
                 ends.append(axis.name)
         return tuple(ends)
 
+    def _range_ends(self, design: tuple[int, ...]) -> tuple[str, ...]:
+        """Axes that go on beside the design, where the question does not."""
+        scope, ends = self.cases.scope, []
+        for dimension, position in self._limited():
+            nodes, place = scope.spans[position], design[dimension]
+            if _goes_on(scope, position, nodes[place] - 1) or _goes_on(
+                scope, position, nodes[place] + 1
+            ):
+                ends.append(scope.grid.axes[position].name)
+        return tuple(ends)
+
+    def _box_range_ends(self, box: Box) -> tuple[tuple[str, str], ...]:
+        """The same of the sides of a gain box."""
+        scope = self.cases.scope
+        others = [d for d in range(len(scope.free)) if d != self.periods.dimension]
+        corners = dict(zip(others, zip(box.low, box.high, strict=True), strict=True))
+        ends = []
+        for dimension, position in self._limited():
+            if dimension in corners:
+                nodes, (low, high) = scope.spans[position], corners[dimension]
+                beside = (("low", nodes[low] - 1), ("high", nodes[high] + 1))
+                name = scope.grid.axes[position].name
+                ends += [(name, side) for side, node in beside if _goes_on(scope, position, node)]
+        return tuple(ends)
+
+    def _limited(self) -> list[tuple[int, int]]:
+        """Dimension and position of the free axes of which a range was asked for."""
+        scope = self.cases.scope
+        unordered = unordered_dimensions(scope)
+        return [
+            (dimension, position)
+            for dimension, position in enumerate(scope.free)
+            if scope.grid.axes[position].name not in scope.at
+            and len(scope.spans[position]) < len(scope.grid.axes[position])
+            and dimension not in unordered
+        ]
+
     def _beside(self, design: tuple[int, ...]) -> tuple[str, ...]:
         """Axes along which a neighbour is not known to meet."""
         scope, codes, beside = self.cases.scope, self.cases.verdict, []
@@ -290,6 +338,11 @@ class _Choice:
                 sides = (("low", first == 0), ("high", last == len(axis) - 1))
                 axis_ends += [(axis.name, side) for side, is_end in sides if is_end]
         return LargestBox(ends, box.nodes, box.exact, box.at_most, tuple(axis_ends))
+
+
+def _goes_on(scope: Scope, position: int, node: int) -> bool:
+    """Whether an axis holds a node that the question leaves out."""
+    return 0 <= node < len(scope.grid.axes[position]) and node not in scope.spans[position]
 
 
 def _count_words(codes: Codes) -> dict[str, int]:
@@ -339,4 +392,17 @@ def _is_axis_end(scope: Scope, slowest: ChooseRow | None) -> bool:
     for axis in scope.grid.axes:
         if "sample_period" in axis.sets and len(axis) > 1 and slowest is not None:
             return slowest.sample_period_s >= float(axis.values_of("sample_period").max())
+    return False
+
+
+def _is_range_end(scope: Scope, slowest: ChooseRow | None) -> bool:
+    """Whether the atlas holds a slower period, and the question leaves all of them out."""
+    for position, axis in enumerate(scope.grid.axes):
+        if "sample_period" in axis.sets and axis.name not in scope.at and position in scope.free:
+            every_s = axis.values_of("sample_period")
+            asked_s = every_s[scope.spans[position]]
+            left_out = bool(asked_s.max() < every_s.max())
+            return (
+                left_out and slowest is not None and slowest.sample_period_s >= float(asked_s.max())
+            )
     return False

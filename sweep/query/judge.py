@@ -30,17 +30,24 @@ from sweep.query.cautions import OVER_A_BOX
 from sweep.query.conditional import find_gain_fall
 from sweep.query.derived import spec_of
 from sweep.query.distances import find_distances, find_hurts, largest_step, walk_lines
-from sweep.query.extremes import Extreme, find_extremes
+from sweep.query.extremes import MOST_DESIGN_NODES, Extreme, can_be_held, find_extremes
+from sweep.query.gaps import find_gaps, jump_without_gaps
 from sweep.query.held_block import hold
-from sweep.query.jump import find_largest_jump
 from sweep.query.question import Demand, DesignQuestion, resolve_question
 from sweep.query.requirement import is_violated, requirement_name, requirement_text
 from sweep.query.scope import Scope
-from sweep.query.select import Asked, Value, find_axis, resolve_names, value_at
+from sweep.query.select import (
+    Asked,
+    Value,
+    find_axis,
+    find_enclosing,
+    resolve_names,
+    value_at,
+)
 from sweep.query.tolerance import Acceptance, InHand, find_acceptance, find_in_hand
-from sweep.query.verdicts import MEETS, NAMES, Codes, decide
+from sweep.query.verdicts import MEETS, NAMES, UNKNOWN, Codes, decide
 from sweep.query.worst import LOG_RADIUS, WorstCases, find_excluded, find_worst_cases
-from sweep.query.yields import Yield, find_yields
+from sweep.query.yields import Yield, check_tables, find_yields
 from sweep.vocabulary import LoopStructure
 
 if TYPE_CHECKING:
@@ -50,6 +57,9 @@ CONFIDENCE = 0.95
 """Of the intervals of yields, unless a question says otherwise."""
 
 DECAY_TIME = Extreme("decay_time", "max")
+
+PROCESSOR_TIME = "processor_time"
+"""The line that says whether the loop can be built."""
 
 Weights = Mapping[str, Mapping[str, float]]
 """By row axis, the weight of each row by its label."""
@@ -153,17 +163,15 @@ def _judge(
 ) -> DesignVerdict:
     question = resolve_design(stored, design, demand)
     scope = question.scope
-    whole = whole_tolerances(scope)
-    block = hold(stored, whole.spans)
-    structure = stored.structure
+    structure, whole = stored.structure, whole_tolerances(scope)
+    fits = can_be_held(whole)
+    block = hold(stored, whole.spans if fits else scope.spans)
     cases = find_worst_cases(block, structure, scope, question.requirements, also=[DECAY_TIME])
     lines = _lines(block, structure, scope, question.requirements)
-    everywhere = find_worst_cases(block, structure, whole, question.requirements)
-    tolerance = _Tolerances(scope, everywhere)
-    is_stable = lines[0].verdict == "meets"
-    walked = walk_lines(stored, block, scope) if is_stable else []
+    tolerance = _tolerances(block, structure, question, whole) if fits else None
+    start = _no_start(lines)
+    walked = [] if start else walk_lines(stored, block if fits else None, structure, scope)
     distances = find_distances(walked, scope)
-    fall = GainFall(None, stopped_by="a loop that is not known to be stable to begin with")
     radius, decay = _reached(cases, LOG_RADIUS), _reached(cases, DECAY_TIME)
     if _is_lost("decay_time", decay.value):
         decay = replace(decay, at=radius.at)
@@ -178,16 +186,25 @@ def _judge(
         decay_time=decay,
         over=scope.over(),
         widened=scope.widened,
-        brackets={n: ends for n, ends in scope.brackets().items() if n in scope.bracketed},
+        brackets=_brackets(scope),
         shaken=_shaken(question),
         requirements=question.requirements,
         distances=distances,
         hurts_most=find_hurts(block, scope),
-        gain_fall=find_gain_fall(stored, scope, walked) if is_stable else fall,
-        in_hand=tolerance.in_hand(structure),
-        acceptance=tolerance.acceptance(),
-        yields=tolerance.yields(confidence, weights),
-        largest_jump=_larger(tolerance.jump(), largest_step(walked, distances)),
+        gain_fall=(
+            GainFall(None, stopped_by=start) if start else find_gain_fall(stored, scope, walked)
+        ),
+        in_hand=tolerance.in_hand(structure) if tolerance else None,
+        acceptance=tolerance.acceptance() if tolerance else None,
+        tolerances_skipped="" if tolerance else _too_many(whole),
+        yields=(
+            tolerance.yields(confidence, weights)
+            if tolerance
+            else _yields_in_box(block, structure, question, confidence, weights)
+        ),
+        largest_jump=_larger(
+            tolerance.jump() if tolerance else None, largest_step(walked, distances)
+        ),
         nodes=scope.nodes,
         unknown=cases.found.unknown_nodes,
     )
@@ -231,6 +248,56 @@ def resolve_design(stored: StoredAtlas, design: AskedDesign, demand: Demand) -> 
             where=error.where,
             remedy=error.remedy,
         ) from error
+
+
+def _no_start(lines: Sequence[Line]) -> str:
+    """Why nothing can be told of what lies around a design; empty when it can."""
+    if lines[0].verdict != "meets":
+        return "a loop that is not known to be stable to begin with"
+    if lines[-1].require == PROCESSOR_TIME and lines[-1].verdict != "meets":
+        return "a loop that cannot be built to begin with"
+    return ""
+
+
+def _tolerances(
+    block: Readable, structure: LoopStructure, question: DesignQuestion, whole: Scope
+) -> _Tolerances:
+    return _Tolerances(
+        question.scope, find_worst_cases(block, structure, whole, question.requirements)
+    )
+
+
+def _too_many(whole: Scope) -> str:
+    """Why what rests on every tolerance node is left out."""
+    return (
+        f"the tolerance axes hold {math.prod(whole.design_shape):,} nodes; what is in hand and "
+        f"what to accept are told for at most {MOST_DESIGN_NODES:,}"
+    )
+
+
+def _yields_in_box(
+    block: Readable,
+    structure: LoopStructure,
+    question: DesignQuestion,
+    confidence: float,
+    weights: Weights | None,
+) -> tuple[Yield, ...]:
+    """Yields from the nodes of the box alone, one row axis at a time."""
+    scope, axes = question.scope, question.scope.grid.axes
+    tables = [i for i in scope.tolerances if axes[i].is_row_axis]
+    check_tables([axes[i].name for i in tables], weights or {})
+    found: list[Yield] = []
+    for position in tables:
+        axis, nodes = axes[position], scope.spans[position]
+        apart = replace(scope, box=tuple(i for i in scope.box if i != position))
+        cases = find_worst_cases(block, structure, apart, question.requirements)
+        verdict = np.full(len(axis), UNKNOWN, np.int8)
+        log_radius = np.full(len(axis), np.nan)
+        verdict[nodes] = cases.verdict.reshape(-1)
+        log_radius[nodes] = cases.found.worst[LOG_RADIUS].reshape(-1)
+        own = {axis.name: weights[axis.name]} if weights and axis.name in weights else None
+        found += find_yields([axis], [nodes], verdict, log_radius, confidence, own)
+    return tuple(found)
 
 
 def whole_tolerances(scope: Scope) -> Scope:
@@ -292,7 +359,7 @@ def _processor_line(structure: LoopStructure, scope: Scope) -> Line:
     nodes = {i: int(scope.spans[i][worst[i]]) for i in scope.box if periods.shape[i] > 1}
     late = bool(find_excluded(structure, scope).any())
     return Line(
-        require="processor_time",
+        require=PROCESSOR_TIME,
         text="processor time at most one sample period",
         unit="samples",
         limit=1.0,
@@ -305,6 +372,16 @@ def _processor_line(structure: LoopStructure, scope: Scope) -> Line:
 
 def _place(grid: Grid, nodes: Mapping[int, int]) -> dict[str, Value]:
     return {grid.axes[i].name: value_at(grid.axes[i], nodes[i]) for i in sorted(nodes)}
+
+
+def _brackets(scope: Scope) -> dict[str, tuple[Value, Value]]:
+    """Axes where the design lies between two nodes, with those two."""
+    found = {}
+    for name in scope.bracketed:
+        axis = scope.grid.axis(name)
+        low, high = find_enclosing(axis, scope.at[name], name=name).nodes
+        found[name] = value_at(axis, low), value_at(axis, high)
+    return found
 
 
 def _shaken(question: DesignQuestion) -> dict[str, tuple[str, Value, Value]]:
@@ -324,6 +401,7 @@ class _Tolerances:
         axes = scope.grid.axes
         shape = tuple(len(axes[i]) for i in scope.tolerances)
         self.axes: list[Axis] = [axes[i] for i in scope.tolerances]
+        self.gaps = find_gaps(scope.grid, self.axes, [np.arange(n) for n in shape])
         self.box: list[Indices] = [scope.spans[i] for i in scope.tolerances]
         self.verdict: Codes = everywhere.verdict.reshape(shape)
         worst = everywhere.found.worst[LOG_RADIUS].astype(np.float64)
@@ -334,17 +412,17 @@ class _Tolerances:
             return None
         specs = structure.parameters()
         floors = [-math.inf if a.is_row_axis else specs[a.sets[0]].low for a in self.axes]
-        return find_in_hand(self.axes, self.box, self.verdict, floors)
+        return find_in_hand(self.axes, self.box, self.verdict, floors, self.gaps)
 
     def acceptance(self) -> Acceptance | None:
-        return find_acceptance(self.axes, self.box, self.verdict)
+        return find_acceptance(self.axes, self.box, self.verdict, self.gaps)
 
     def yields(self, confidence: float, weights: Weights | None) -> tuple[Yield, ...]:
         return find_yields(self.axes, self.box, self.verdict, self.log_radius, confidence, weights)
 
     def jump(self) -> float | None:
         unordered = [i for i, a in enumerate(self.axes) if a.is_row_axis and not a.ordered]
-        return find_largest_jump(self.log_radius, self.verdict == MEETS, unordered)
+        return jump_without_gaps(self.log_radius, self.verdict == MEETS, self.gaps, unordered)
 
 
 def _larger(one: float | None, other: float | None) -> float | None:

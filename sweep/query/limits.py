@@ -1,9 +1,9 @@
 """The stability boundary along one axis.
 
 First the largest ``log_radius`` over the tolerance box at each node, then interpolation between
-nodes along the asked axis. Every end names its two nodes; next to an unknown node an interval ends
-at its last stable node. Nothing is interpolated across a node where a gain of exactly 0 changes the
-loop's structure:
+nodes along the asked axis. Every end names its two nodes; next to an unknown node, and next to one
+that cannot be built, an interval ends at its last stable node. Nothing is interpolated across a
+node where a gain of exactly 0 changes the loop's structure:
 
 - a stable node of that sort that ends an interval is the limit, since the term's memory (the
   accumulator's eigenvalue at 1, the filter's eigenvalue) is there as soon as the gain is not 0;
@@ -27,7 +27,14 @@ from sweep.query.answers import LimitsAnswer, LimitsRow
 from sweep.query.blocks import Indices, Readable, read_nodes
 from sweep.query.cautions import BETWEEN_NODES, OVER_A_BOX
 from sweep.query.extremes import Extreme, find_extremes
-from sweep.query.scope import Scope, box_ends, box_span, check_one_purpose, fixed_span
+from sweep.query.scope import (
+    Scope,
+    box_ends,
+    box_span,
+    check_one_purpose,
+    checked_span,
+    fixed_span,
+)
 from sweep.query.select import (
     Asked,
     Span,
@@ -40,8 +47,10 @@ from sweep.query.select import (
     value_at,
 )
 from sweep.query.walk import LimitsQuestion, Walk
+from sweep.query.worst import find_excluded
+from sweep.vocabulary import LoopStructure
 
-Number = TypeVar("Number", np.float64, np.int32)
+Number = TypeVar("Number", np.float64, np.int32, np.bool_)
 
 MOST_ROWS = 200
 """Rows that an answer lists unless it is asked for more."""
@@ -88,7 +97,7 @@ def resolve_limits(
                 between[other.name] = read_value(other, one_value(other.name, asked), name)
                 box.append(position)
         elif other.name in ranges:
-            span = box_span(other, *ranges[other.name])
+            span = box_span(grid, other, *ranges[other.name])
             box.append(position)
             widened += [other.name] * span.widened
         elif other.name == axis.name or other.name in listed:
@@ -97,6 +106,7 @@ def resolve_limits(
             span = Span((other.nominal,))
             at_nominal.append(other.name)
         elif other.role == "tolerance":
+            span = checked_span(grid, other, span)
             box.append(position)
         spans.append(np.array(span.nodes, dtype=np.intp))
     return LimitsQuestion(
@@ -111,7 +121,11 @@ def resolve_limits(
 
 
 def find_limits(
-    stored: Readable, atlas_id: str, question: LimitsQuestion, most_rows: int = MOST_ROWS
+    stored: Readable,
+    atlas_id: str,
+    question: LimitsQuestion,
+    most_rows: int = MOST_ROWS,
+    structure: LoopStructure | None = None,
 ) -> LimitsAnswer:
     """Answer a question about limits.
 
@@ -125,6 +139,8 @@ def find_limits(
         What is asked.
     most_rows
         Rows to list; the answer says how many there are in all.
+    structure
+        Of the loop, which tells where it cannot be built; `None` when that is to play no part.
     """
     grid = question.grid
     sizes = [len(question.spans[axis]) for axis in question.rest]
@@ -133,7 +149,7 @@ def find_limits(
     for cut in _batches(sizes, min(per_batch, most_rows)):
         if len(rows) >= most_rows:
             break
-        rows += _rows(stored, question, cut)
+        rows += _rows(stored, question, cut, structure)
     listed = tuple(grid.axes[axis].name for axis in question.rest if len(question.spans[axis]) > 1)
     tolerances = [
         axis for axis in question.box if grid.axes[axis].name not in question.fixed_between
@@ -189,11 +205,16 @@ def _batches(sizes: Sequence[int], most: int) -> Iterator[tuple[slice, ...]]:
             yield (*cut[:outer], shifted, *cut[outer + 1 :])
 
 
-def _rows(stored: Readable, question: LimitsQuestion, cut: tuple[slice, ...]) -> list[LimitsRow]:
+def _rows(
+    stored: Readable,
+    question: LimitsQuestion,
+    cut: tuple[slice, ...],
+    structure: LoopStructure | None,
+) -> list[LimitsRow]:
     spans = list(question.spans)
     for axis, part in zip(question.rest, cut, strict=True):
         spans[axis] = spans[axis][part]
-    lines = _worst_lines(stored, question, spans)
+    lines = _worst_lines(stored, question, spans, structure)
     shape = [len(spans[axis]) for axis in question.rest]
     places = [np.unravel_index(row, shape) for row in range(len(lines.worst))]
     picked = [
@@ -213,10 +234,15 @@ class _WorstLines:
     """Flat index into the box of the node where it is reached."""
     unknown: NDArray[np.int32]
     """Unknown nodes in the box."""
+    excluded: NDArray[np.bool_]
+    """Whether any node of the box cannot be built."""
 
 
 def _worst_lines(
-    stored: Readable, question: LimitsQuestion, spans: Sequence[Indices]
+    stored: Readable,
+    question: LimitsQuestion,
+    spans: Sequence[Indices],
+    structure: LoopStructure | None,
 ) -> _WorstLines:
     scope = Scope(question.grid, tuple(spans), question.box, {})
     largest = Extreme("log_radius", "max")
@@ -224,10 +250,14 @@ def _worst_lines(
     along = scope.free.index(question.along)
     worst = found.worst[largest].astype(np.float64)
     worst[found.unknown > 0] = np.nan
+    excluded = np.zeros(worst.shape, np.bool_)
+    if structure is not None:
+        excluded[...] = find_excluded(structure, scope)
     return _WorstLines(
         worst=_as_lines(worst, along),
         which=_as_lines(found.which[largest], along),
         unknown=_as_lines(found.unknown, along),
+        excluded=_as_lines(excluded, along),
     )
 
 
@@ -243,7 +273,7 @@ def _lines_to_rows(
     axis = grid.axes[question.along]
     breaks = frozenset(gain_changes_structure(grid, axis))
     walks = [
-        Walk(question, axis, breaks, lines.worst[row], lines.which[row], place)
+        Walk(question, axis, breaks, lines.worst[row], lines.which[row], lines.excluded[row], place)
         for row, place in enumerate(picked)
     ]
     nodes = [node for walk in walks for node in walk.nodes_to_read()]
@@ -259,6 +289,7 @@ def _lines_to_rows(
             intervals=walk.intervals(angles),
             nodes=box_nodes * len(axis),
             unknown=int(lines.unknown[row].sum()),
+            excluded=int(lines.excluded[row].sum()),
             largest_jump=walk.largest_jump(),
         )
         for row, walk in enumerate(walks)

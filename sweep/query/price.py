@@ -14,12 +14,11 @@ from sweep.query.best import Best, find_gain_boxes
 from sweep.query.blocks import Indices, Readable
 from sweep.query.derived import measures_needed
 from sweep.query.extremes import Places
+from sweep.query.gaps import unordered_dimensions
 from sweep.query.memo import Memo
 from sweep.query.periods import Periods
 from sweep.query.question import DesignQuestion
-from sweep.query.robust import unordered_dimensions
 from sweep.query.scope import Scope, box_ends
-from sweep.query.select import SAME_NODE
 from sweep.query.verdicts import MEETS
 from sweep.query.worst import WORTH_KEEPING, WorstCases, wanted_extremes
 
@@ -86,7 +85,7 @@ def find_outcome(cases: WorstCases, best: Best, periods: Periods) -> Outcome:
     best
         What is called best.
     periods
-        The sample periods.
+        The sample periods that the box leaves.
     """
     meets = cases.verdict == MEETS
     count = int(np.count_nonzero(meets))
@@ -183,8 +182,11 @@ def _price(
     if item.halved is not None and halved is not None:
         half = _narrowed(scope, item, item.halved, outcomes[halved])
     gone = _narrowed(scope, item, item.removed, outcomes[removed])
-    same = all(found.changes == whole.changes for found in (half, gone) if found is not None)
     axis = scope.grid.axes[item.axis]
+    # where nature varies the period, a narrower range of it is no gain in the slowest one
+    told = 2 if "sample_period" in axis.sets else 3
+    narrowed = [found for found in (half, gone) if found is not None]
+    same = all(found.changes[:told] == whole.changes[:told] for found in narrowed)
     return Price(axis.name, len(scope.spans[item.axis]), half, gone, halved == 0, same)
 
 
@@ -204,10 +206,9 @@ def _narrowing(scope: Scope, position: int) -> Narrowing:
 def _halved(axis: Axis, nodes: Indices, nominal: int) -> Indices:
     """Places of half the range about the nominal; a bound between nodes takes the next outward."""
     x = axis.coordinates[nodes]
-    slack = SAME_NODE * float(axis.coordinates[-1] - axis.coordinates[0])
-    low, high = ((x[nominal] + end) / 2 for end in (x[0], x[-1]))
-    first = int(np.searchsorted(x, low + slack, side="right")) - 1
-    last = int(np.searchsorted(x, high - slack, side="left"))
+    low, high = axis.snapped((x[nominal] + x[[0, -1]]) / 2)
+    first = int(np.searchsorted(x, low, side="right")) - 1
+    last = int(np.searchsorted(x, high, side="left"))
     return np.arange(first, last + 1, dtype=np.intp)
 
 

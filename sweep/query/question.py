@@ -23,8 +23,8 @@ class Demand:
     """What a design must survive, and what it must meet: a case, or what a question says itself."""
 
     case: Case | None = None
-    """A case of the atlas; its box counts where ``over`` names no range, its requirements where
-    ``require`` does not bound the same."""
+    """A case of the atlas; its box counts where ``over`` names no range. What it requires always
+    counts: where ``require`` bounds the same, the stricter of the two."""
     over: Mapping[str, Asked] = field(default_factory=dict)
     """Ranges of tolerance axes."""
     require: requiring.Asked = field(default_factory=dict)
@@ -34,8 +34,16 @@ class Demand:
 
     @property
     def name(self) -> str | None:
-        """Of the case."""
-        return self.case.name if self.case else None
+        """Of the case, with whatever the question changes in it; ``None`` without a case."""
+        if self.case is None:
+            return None
+        bounds = (
+            self.require.items()
+            if isinstance(self.require, Mapping)
+            else [(item.name, item.limit) for item in self.require]
+        )
+        changes = [f"{name}={_written(value)}" for name, value in [*self.over.items(), *bounds]]
+        return f"{self.case.name} with {', '.join(changes)}" if changes else self.case.name
 
     def requirements(self, held: Sequence[str], title: str) -> tuple[Requirement, ...]:
         """What is required in all, stability first.
@@ -46,11 +54,28 @@ class Demand:
             See `sweep.query.requirement.read_requirements`.
         """
         own = read_requirements(self.require, held, title)
-        bounded = {item.name for item in own}
         cased = self.case.requirements if self.case else ()
-        return read_requirements(
-            [*own, *(item for item in cased if item.name not in bounded)], held, title
-        )
+        return read_requirements(_strictest([*own, *cased]), held, title)
+
+
+def _written(value: object) -> str:
+    """A value, a range or labels as the command line writes them."""
+    if isinstance(value, str | float | int):
+        return str(value)
+    if isinstance(value, Sequence):
+        return ":".join(map(str, value))
+    return str(value)
+
+
+def _strictest(requirements: Sequence[Requirement]) -> list[Requirement]:
+    """One requirement for each quantity and sense: the strictest of them, in order."""
+    found: dict[str, Requirement] = {}
+    for item in requirements:
+        held = found.setdefault(item.name, item)
+        stricter = item.limit < held.limit if item.sense == "max" else item.limit > held.limit
+        if stricter:
+            found[item.name] = item
+    return list(found.values())
 
 
 @dataclass(frozen=True)
@@ -147,6 +172,5 @@ def _with_neighbours(scope: Scope, position: int, reach: Reach, asked: float | s
         scope,
         spans=tuple(spans),
         box=tuple(sorted({*scope.box, position})),
-        bracketed=tuple(name for name in scope.bracketed if name != axis.name),
         shaken=(*scope.shaken, axis.name),
     )

@@ -17,15 +17,19 @@ from sweep.query.answers.robust import LargestBox, RobustAnswer, WorstNode
 from sweep.query.blocks import Indices
 from sweep.query.cautions import OVER_A_BOX
 from sweep.query.derived import derive, measures_needed
-from sweep.query.jump import find_largest_jump
-from sweep.query.largest_box import Around, find_largest_box
+from sweep.query.gaps import (
+    box_without_gaps,
+    design_gaps,
+    jump_without_gaps,
+    regions_without_gaps,
+    unordered_dimensions,
+)
+from sweep.query.largest_box import Around
 from sweep.query.memo import Memo
 from sweep.query.question import DesignQuestion
 from sweep.query.region_data import worst_dataset
-from sweep.query.regions import count_regions
 from sweep.query.scope import Scope
 from sweep.query.select import (
-    SAME_NODE,
     Asked,
     find_enclosing,
     one_value,
@@ -87,12 +91,6 @@ def find_robust(
         cautions=OVER_A_BOX,
         make_dataset=cases.dataset,
     )
-
-
-def unordered_dimensions(scope: Scope) -> tuple[int, ...]:
-    """Dimensions of the designs along which neighbours mean nothing."""
-    axes = [scope.grid.axes[axis] for axis in scope.free]
-    return tuple(i for i, axis in enumerate(axes) if axis.is_row_axis and not axis.ordered)
 
 
 @dataclass(frozen=True)
@@ -167,6 +165,7 @@ def _asked(question: DesignQuestion, around: Around | None) -> dict[str, object]
         "at": dict(scope.at),
         "require": [[r.quantity, r.sense, r.limit] for r in question.requirements],
         "unordered": list(unordered_dimensions(scope)),
+        "gaps": [[axis, *places.tolist()] for axis, places in design_gaps(scope).items()],
         "windows": [
             [w.axis, w.first.tolist(), w.last.tolist(), w.lost.tolist()] for w in question.windows
         ],
@@ -178,7 +177,8 @@ def _asked(question: DesignQuestion, around: Around | None) -> dict[str, object]
 def _summarise(cases: WorstCases, around: Around | None) -> _Summary:
     meets = cases.verdict == MEETS
     unordered = unordered_dimensions(cases.scope)
-    box = find_largest_box(meets, around=around, single=unordered)
+    gaps = design_gaps(cases.scope)
+    box = box_without_gaps(meets, gaps, around=around, single=unordered)
     log_radius = cases.found.worst[LOG_RADIUS]
     return _Summary(
         counts={
@@ -186,11 +186,11 @@ def _summarise(cases: WorstCases, around: Around | None) -> _Summary:
             "fails": int(np.count_nonzero(cases.verdict == FAILS)),
             "unknown": int(np.count_nonzero(cases.verdict == UNKNOWN)),
             "excluded": int(np.count_nonzero(cases.verdict == EXCLUDED)),
-            "regions": count_regions(meets, unordered=unordered),
+            "regions": regions_without_gaps(meets, gaps, unordered),
         },
         box=vars(box) if box else None,
         worst=_find_worst(cases),
-        largest_jump=find_largest_jump(log_radius, meets, unordered),
+        largest_jump=jump_without_gaps(log_radius, meets, gaps, unordered),
         nodes=cases.nodes,
         unknown_nodes=cases.unknown_nodes,
     )
@@ -249,9 +249,9 @@ def _check_held(scope: Scope, axis: Axis, asked: Mapping[str, tuple[str, Asked]]
             remedy=f"leave {axis.name} out of the design; its range is given with --over",
         )
     name, value = asked[axis.name]
-    slack = SAME_NODE * float(axis.coordinates[-1] - axis.coordinates[0])
-    fixed = float(scope.at[axis.name])
-    if abs(read_value(axis, one_value(axis.name, value), name) - fixed) > slack:
+    wanted = read_value(axis, one_value(axis.name, value), name)
+    both = axis.snapped(np.array([wanted, scope.at[axis.name]], dtype=np.float64))
+    if both[0] != both[1]:
         raise _outside(axis, value)
 
 

@@ -222,7 +222,7 @@ def _read_cell(
         if axis.role == "design":
             fixed_span(grid, axis, name, asked)
         else:
-            box_span(axis, name, asked)
+            box_span(grid, axis, name, asked)
     except QuestionError as error:
         table.refuse(line, _shown(error.message, 300), error.remedy)
     return {spelled: text}

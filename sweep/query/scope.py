@@ -148,13 +148,14 @@ def resolve_scope(
         if axis.name in fixed:
             spans.append(fixed_span(grid, axis, *fixed[axis.name]))
         elif axis.name in ranges:
-            spans.append(box_span(axis, *ranges[axis.name]))
+            spans.append(box_span(grid, axis, *ranges[axis.name]))
         elif axis.name in limits:
             spans.append(Span(_nodes_within(axis, *limits[axis.name])))
         elif axis.name in cased:
-            spans.append(box_span(axis, *cased[axis.name]))
+            spans.append(box_span(grid, axis, *cased[axis.name]))
         else:
-            spans.append(Span(tuple(range(len(axis)))))
+            span = Span(tuple(range(len(axis))))
+            spans.append(checked_span(grid, axis, span) if axis.role == "tolerance" else span)
     return _scope(grid, spans, fixed)
 
 
@@ -179,13 +180,14 @@ def fixed_span(grid: Grid, axis: Axis, name: str, asked: Asked) -> Span:
     return span
 
 
-def box_span(axis: Axis, name: str, asked: Asked) -> Span:
+def box_span(grid: Grid, axis: Axis, name: str, asked: Asked) -> Span:
     """The nodes of a tolerance axis that a range takes in, the next node outward included.
 
     Raises
     ------
     QuestionError
-        For a design axis, and a range that leaves the axis or stands upside down.
+        For a design axis, a range that leaves the axis or stands upside down, and one that takes in
+        a gain of exactly 0 beside others, which says nothing about what lies between them.
     """
     if axis.role != "tolerance":
         raise QuestionError(
@@ -193,7 +195,29 @@ def box_span(axis: Axis, name: str, asked: Asked) -> Span:
             where=[axis.name],
             remedy=f"fix it with --at {axis.name}=VALUE, or leave it free",
         )
-    return find_span(axis, asked, name=name)
+    return checked_span(grid, axis, find_span(axis, asked, name=name))
+
+
+def checked_span(grid: Grid, axis: Axis, span: Span) -> Span:
+    """A range of a tolerance axis, unless it cannot be taken at its worst.
+
+    Raises
+    ------
+    QuestionError
+        When it takes in a node at which a gain of 0 changes the loop's structure, and others.
+    """
+    alone = set(gain_changes_structure(grid, axis)).intersection(span.nodes)
+    if alone and len(span.nodes) > 1 and not axis.is_row_axis:
+        others = [node for node in span.nodes if node not in alone]
+        raise QuestionError(
+            f"taking the worst over {axis.name} from {show_node(axis, span.nodes[0])} to "
+            f"{show_node(axis, span.nodes[-1])}: at {show_node(axis, min(alone))} the term is "
+            "absent, which says nothing about the values beside it",
+            where=[axis.name],
+            remedy=f"ask from a node beside it, such as --over {axis.name}="
+            f"{show_node(axis, others[0])}:{show_node(axis, others[-1])}, or at it alone",
+        )
+    return span
 
 
 def box_ends(axis: Axis, nodes: Indices) -> tuple[Value, ...]:
@@ -249,8 +273,8 @@ def _bounds_of(axis: Axis, name: str, asked: Asked) -> tuple[float, float]:
     pieces = asked.split(":") if isinstance(asked, str) else asked
     values = [pieces] if isinstance(pieces, float | int) else list(pieces)
     numbers = sorted(read_value(axis, value, name) for value in values)
-    slack = 1e-9 * float(axis.coordinates[-1] - axis.coordinates[0])
-    return numbers[0] - slack, numbers[-1] + slack
+    low, high = axis.snapped(np.array([numbers[0], numbers[-1]]))
+    return float(low), float(high)
 
 
 def _scope(grid: Grid, spans: Sequence[Span], fixed: Mapping[str, tuple[str, Asked]]) -> Scope:

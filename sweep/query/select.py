@@ -26,9 +26,6 @@ Value = float | str
 Asked = float | str | Sequence[float | str]
 """What a question may give for an axis: a number, a text with a unit, a label, or several."""
 
-SAME_NODE = 1e-9
-"""A value within this share of the axis span of a node is that node."""
-
 _ASSIGNMENT = re.compile(r",(?=\s*[A-Za-z_][A-Za-z0-9_.]*\s*=)")
 
 
@@ -323,14 +320,12 @@ def _has_filter(grid: Grid) -> bool:
 
 
 def _is_node(axis: Axis, value: float, node: int) -> bool:
-    span = float(axis.coordinates[-1] - axis.coordinates[0])
-    return abs(float(axis.coordinates[node]) - value) <= SAME_NODE * span
+    return bool(axis.snapped(np.array(value)) == axis.coordinates[node])
 
 
 def _check_inside(axis: Axis, value: float, asked: float | str) -> None:
-    low, high = float(axis.coordinates[0]), float(axis.coordinates[-1])
-    slack = SAME_NODE * (high - low)
-    if low - slack <= value <= high + slack:
+    meant = float(axis.snapped(np.array(value)))
+    if axis.coordinates[0] <= meant <= axis.coordinates[-1]:
         return
     raise QuestionError(
         f"looking up {axis.name} = {asked}: the axis runs from {show_node(axis, 0)} "

@@ -20,7 +20,7 @@ from sweep.grid import Axis, Grid
 from sweep.quantities import parse_quantity, to_float
 from sweep.query.blocks import Indices
 from sweep.query.extremes import Extreme, Extremes, worst_place
-from sweep.query.select import SAME_NODE, gain_changes_structure
+from sweep.query.select import gain_changes_structure
 
 Asked = Mapping[str, float | str]
 """By axis how far it may move, to either side: ``"10%"`` of the value, or a quantity."""
@@ -113,17 +113,17 @@ def find_window(grid: Grid, position: int, values: NDArray[np.float64], reach: R
     """
     axis = grid.axes[position]
     x = axis.coordinates
-    low, high = reach.around(values)
-    slack = SAME_NODE * float(x[-1] - x[0])
-    first = np.searchsorted(x, low + slack, side="right") - 1
-    last = np.searchsorted(x, high - slack, side="left")
+    low, high = (axis.snapped(ends) for ends in reach.around(axis.snapped(values)))
+    first = np.searchsorted(x, low, side="right") - 1
+    last = np.searchsorted(x, high, side="left")
     lost = (first < 0) | (last > len(x) - 1)
     first, last = np.maximum(first, 0), np.minimum(last, len(x) - 1)
     for node in gain_changes_structure(grid, axis):
-        below = (first == node) & (x[node] < low - slack)
-        above = (last == node) & (x[node] > high + slack)
-        lost |= below | above
-        # outside the range, that node is no neighbour and says nothing about it
+        below = (first == node) & (x[node] < low)
+        above = (last == node) & (x[node] > high)
+        # inside the range that node counts, but what lies beside it is unknown; outside the range
+        # it is no neighbour, and says nothing about it either
+        lost |= (first <= node) & (node <= last) & (first < last)
         first, last = first + below, last - above
     return Window(position, first.astype(np.intp), last.astype(np.intp), lost)
 

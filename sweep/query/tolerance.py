@@ -18,7 +18,8 @@ from numpy.typing import NDArray
 from sweep.grid import Axis
 from sweep.query.answers.plain import plain
 from sweep.query.blocks import Indices
-from sweep.query.largest_box import Box, find_largest_box
+from sweep.query.gaps import Gaps, box_without_gaps
+from sweep.query.largest_box import Box
 from sweep.query.select import Value, value_at
 from sweep.query.verdicts import EXCLUDED, FAILS, MEETS, UNKNOWN, Codes, decide
 
@@ -122,7 +123,11 @@ class _Growth:
 
 
 def find_in_hand(
-    axes: Sequence[Axis], box: Sequence[Indices], verdict: Codes, floors: Sequence[float]
+    axes: Sequence[Axis],
+    box: Sequence[Indices],
+    verdict: Codes,
+    floors: Sequence[float],
+    gaps: Gaps | None = None,
 ) -> InHand | None:
     """By which factor a box of tolerances may grow about its nominal before it no longer meets.
 
@@ -148,6 +153,9 @@ def find_in_hand(
         For each axis the lowest value that its parameter can physically have, in the axis's unit,
         such as 0 for a delay; -inf where there is none. A side that reaches its floor at the first
         node of its axis stays there, and does not leave the axis.
+    gaps
+        For each axis that has some, the nodes after which there is a gap that no bound may cross:
+        what lies beyond counts as unknown, unless it fails. See `sweep.query.gaps`.
 
     Returns
     -------
@@ -176,7 +184,12 @@ def find_in_hand(
     enters = functools.reduce(np.maximum, np.ix_(*(growth.enters for growth in growths)))
     failing = (verdict == FAILS) | (verdict == EXCLUDED)
     first = _first(lies, failing)
-    end, holds_to, stop = _find_stop(lies, enters, failing, verdict == UNKNOWN)
+    beyond = np.zeros(verdict.shape, np.bool_)
+    for position, along in (gaps or {}).items():
+        far = _beyond(box[position], len(axes[position]), along)
+        beyond |= far.reshape([-1 if i == position else 1 for i in range(len(axes))])
+    unknown = (verdict == UNKNOWN) | (beyond & ~failing)
+    end, holds_to, stop = _find_stop(lies, enters, failing, unknown)
     leaves = [growth.leaves for growth in growths]
     stopped_by = _reaching(axes, growths, stop, taken_in=True)
     if min(leaves) < holds_to:
@@ -195,7 +208,10 @@ def find_in_hand(
 
 
 def find_acceptance(
-    axes: Sequence[Axis], box: Sequence[Indices], verdict: Codes
+    axes: Sequence[Axis],
+    box: Sequence[Indices],
+    verdict: Codes,
+    gaps: Gaps | None = None,
 ) -> Acceptance | None:
     """Which tolerances one design accepts, and the largest box of them.
 
@@ -212,6 +228,8 @@ def find_acceptance(
         For each axis the nodes of the case's box; those of plain axes play no part.
     verdict
         One code for each node of all axes, in their order. What cannot be built counts as failing.
+    gaps
+        For each axis that has some, the nodes after which there is a gap that no box may cross.
 
     Returns
     -------
@@ -230,9 +248,11 @@ def find_acceptance(
     codes = _worst_over_rows(axes, box, verdict)
     meets = codes == MEETS
     nominal = tuple(axis.nominal for axis in plain_axes)
-    largest = find_largest_box(meets)
+    plain = [i for i, axis in enumerate(axes) if not axis.is_row_axis]
+    apart = {place: gaps[i] for place, i in enumerate(plain) if gaps and i in gaps}
+    largest = box_without_gaps(meets, apart)
     holds = largest is not None and _holds(largest, nominal)
-    around = largest if holds else find_largest_box(meets, around=(nominal, nominal))
+    around = largest if holds else box_without_gaps(meets, apart, around=(nominal, nominal))
     return Acceptance(
         meets=int(np.count_nonzero(meets)),
         fails=int(np.count_nonzero(codes == FAILS)),
@@ -251,6 +271,18 @@ def find_acceptance(
             if axis.is_row_axis
         },
     )
+
+
+def _beyond(nodes: Indices, size: int, gaps: Indices) -> Mask:
+    """Which nodes of an axis lie on the other side of a gap, as seen from a box."""
+    places = np.arange(size)
+    beyond = np.zeros(size, np.bool_)
+    for gap in gaps:
+        if nodes[-1] <= gap:
+            beyond |= places > gap
+        elif nodes[0] > gap:
+            beyond |= places <= gap
+    return beyond
 
 
 def _grow(axis: Axis, nodes: Indices, floor: float) -> _Growth:
