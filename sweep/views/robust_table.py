@@ -80,8 +80,9 @@ def _ends_text(answer: RobustAnswer, box: LargestBox, name: str) -> str:
 
 def _worst_parts(answer: RobustAnswer, worst: WorstNode) -> Iterable[RenderableType]:
     decay = format_quantity(worst.decay_time_s, "s", digits=4)
+    shaken = " and the neighbours it may move to" if answer.shaken else ""
     yield line(
-        f"nearest to instability among what meets: log_radius {worst.log_radius:.4g}, "
+        f"nearest to instability among what meets{shaken}: log_radius {worst.log_radius:.4g}, "
         f"decay time {decay}, at"
     )
     yield facts_table(
