@@ -76,7 +76,7 @@ def test_verdict_and_every_line_are_those_of_plain_loops(rnd):
 @settings(max_examples=200)
 def test_distances_end_where_plain_loops_leave_the_stable_stretch(asked):
     found = judged(asked)
-    if not plain.is_stable(asked):
+    if not plain.is_stable(asked) or plain.is_excluded(asked):
         assert found.distances == ()
         return
     walked = [axis for axis in asked.axes if not axis.labels or axis.ordered]
@@ -87,13 +87,14 @@ def test_distances_end_where_plain_loops_leave_the_stable_stretch(asked):
         values = plain.line(asked, axis)
         span = asked.spans[axis.name]
         node, step = (span[0], -1) if distance.direction == "down" else (span[-1], 1)
-        stable, other, end = plain.stretch_end(values, node, step)
+        stable, other, end = plain.stretch_end(values, plain.excluded_line(asked, axis), node, step)
         assert distance.end == end
         name = axis.labels or axis.coordinates.tolist()
         start = asked.at[axis.name] if axis.role == "design" else name[node]
         assert distance.start == start
         if end != "boundary":
             assert distance.to == name[stable]
+            assert distance.between == (None if other is None else (name[stable], name[other]))
         else:
             assert distance.between == (name[stable], name[other])
             steps.append(abs(values[stable] - values[other]))
@@ -148,7 +149,7 @@ def test_the_tolerance_that_hurts_most_is_that_of_plain_loops(rnd):
 @settings(max_examples=200)
 def test_conditional_stability_is_that_of_plain_loops(asked):
     fall = judged(asked).gain_fall
-    if not plain.is_stable(asked):
+    if not plain.is_stable(asked) or plain.is_excluded(asked):
         assert fall.conditionally_stable is None
         return
     expected, factor, told = plain.gain_fall(asked)

@@ -13,26 +13,32 @@ from memory_atlas import atlas, axis
 from sweep.errors import QuestionError
 from sweep.query.limits import NODES_AT_ONCE
 from sweep.vocabulary import STABILITY_THRESHOLD as EDGE
+from sweep.vocabulary import LoopStructure
 
 # --- brute force: the same definition, written as plain loops over one node at a time ----------
 
 
-def brute_force(log_radius):
-    """Stretches of stable places of a worst-case line as (first, last, low end, high end)."""
+def brute_force(log_radius, late):
+    """Stretches of stable places of a worst-case line as (first, last, low end, high end).
+
+    ``late``: where the processor takes longer than a period.
+    """
     n = len(log_radius)
     found = []
     place = 0
     while place < n:
-        if not log_radius[place] < EDGE:
+        if late[place] or not log_radius[place] < EDGE:
             place += 1
             continue
         first = place
-        while place + 1 < n and log_radius[place + 1] < EDGE:
+        while place + 1 < n and not late[place + 1] and log_radius[place + 1] < EDGE:
             place += 1
         ends = []
         for other in (first - 1, place + 1):
             if other in (-1, n):
                 ends.append("axis_end")
+            elif late[other]:
+                ends.append("excluded")
             else:
                 ends.append("unknown" if math.isnan(log_radius[other]) else "boundary")
         found.append((first, place, *ends))
@@ -46,12 +52,21 @@ def worst_line(values):
     return [math.nan if any(map(math.isnan, line)) else max(line) for line in flat.tolist()]
 
 
+def late_line(late):
+    """Whether any of the trailing axes is late, at each place."""
+    return [any(line) for line in late.reshape(len(late), -1).tolist()]
+
+
 LEVELS = st.sampled_from([-36.0, -0.3, -1e-3, -2e-9, 0.0, 1e-3, 0.4, math.nan])
 
 
 @st.composite
 def small_atlases(draw):
-    """Design axis, asked axis and two tolerance axes in some order, with unknown nodes."""
+    """Design axis, asked axis and two tolerance axes in some order, with unknown nodes.
+
+    Any of the first two may be the sample period, and any other but the last the processor's time.
+    Both values and what is late have the shape (design, along, left, right).
+    """
     sizes = [
         draw(st.integers(1, 3)),
         draw(st.integers(1, 9)),
@@ -62,7 +77,19 @@ def small_atlases(draw):
     order = draw(st.permutations(range(4)))
     steps = draw(st.lists(st.floats(0.1, 3.0), min_size=sizes[1], max_size=sizes[1]))
     coordinates = [np.arange(size, dtype=float) for size in sizes]
+    coordinates[0] += 0.5
     coordinates[1] = np.cumsum(steps)
+    period = draw(st.sampled_from([None, 0, 1]))
+    compute = draw(st.sampled_from([None, *{0, 1, 2} - {period}]))
+    paths = list(names)
+    fixed = {"sample_period": 1.5}
+    if period is not None:
+        paths[period], fixed = "sample_period", {}
+    if compute is not None:
+        paths[compute] = "delay.compute"
+    shaped = [x.reshape([-1 if i == j else 1 for j in range(4)]) for i, x in enumerate(coordinates)]
+    period_s = 1.5 if period is None else shaped[period]
+    late = np.broadcast_to(False if compute is None else shaped[compute] > period_s, sizes)
     cells = draw(st.lists(LEVELS, min_size=math.prod(sizes), max_size=math.prod(sizes)))
     angles = draw(
         st.lists(st.sampled_from([0.0, 0.5, math.pi]), min_size=len(cells), max_size=len(cells))
@@ -70,10 +97,14 @@ def small_atlases(draw):
     shape = [sizes[i] for i in order]
     tile_shape = tuple(draw(st.integers(1, size)) for size in shape)
     asked = atlas(
-        [axis(names[i], coordinates[i], role=roles[i]) for i in order],
+        [axis(names[i], coordinates[i], sets=paths[i], role=roles[i]) for i in order],
         np.reshape(cells, shape),
         np.reshape(angles, shape),
         tile_shape=tile_shape,
+        fixed=fixed,
+        structure=LoopStructure(
+            "oscillator", "p", delay_parts=() if compute is None else (("compute", "s"),)
+        ),
     )
     plain = np.moveaxis(
         asked.stored.values["log_radius"].astype(float), np.argsort(order), range(4)
@@ -81,21 +112,22 @@ def small_atlases(draw):
     plain_angle = np.moveaxis(
         asked.stored.values["mode_angle"].astype(float), np.argsort(order), range(4)
     )
-    return asked, plain, plain_angle
+    return asked, plain, plain_angle, late
 
 
 @settings(max_examples=150, deadline=None)
 @given(small_atlases())
 def test_limits_are_what_plain_loops_over_every_node_find(made):
-    asked, values, angle = made
+    asked, values, angle, late = made
     answer = asked.limits("along")
     x = asked.grid.axis("along").coordinates
     assert answer.rows_in_all == len(values) == len(answer.rows)
-    for row, block, angles in zip(answer.rows, values, angle, strict=True):
+    for row, block, angles, out in zip(answer.rows, values, angle, late, strict=True):
         line = worst_line(block)
         assert row.unknown == np.isnan(block).sum()
         assert row.nodes == block.size
-        expected = brute_force(line)
+        assert row.excluded == sum(late_line(out))
+        expected = brute_force(line, late_line(out))
         assert len(row.intervals) == len(expected)
         for interval, (first, last, low_end, high_end) in zip(row.intervals, expected, strict=True):
             check_end(interval.low, low_end, x, line, first, first - 1, block, angles)
@@ -108,7 +140,7 @@ def check_end(end, expected, x, line, stable, other, block, angles):
         assert (end.value, end.between, end.kind, end.hz) == (x[stable], None, None, None)
         return
     assert end.between == (x[stable], x[other])
-    if expected == "unknown":
+    if expected in ("unknown", "excluded"):
         assert (end.value, end.kind, end.hz) == (x[stable], None, None)
         return
     assert min(x[stable], x[other]) <= end.value <= max(x[stable], x[other])
@@ -123,20 +155,22 @@ def check_end(end, expected, x, line, stable, other, block, angles):
 @settings(max_examples=60, deadline=None)
 @given(small_atlases(), st.data())
 def test_a_smaller_box_is_the_same_question_to_a_smaller_atlas(made, data):
-    asked, values, _ = made
+    asked, values, _, late = made
     low = data.draw(st.integers(0, values.shape[2] - 1))
     high = data.draw(st.integers(low, values.shape[2] - 1))
     answer = asked.limits("along", over={"left": (float(low), float(high))})
     assert answer.over["left"] == (low, high)
-    for row, block in zip(answer.rows, values[:, :, low : high + 1], strict=True):
+    box = np.s_[:, :, low : high + 1]
+    for row, block, out in zip(answer.rows, values[box], late[box], strict=True):
         found = [(item.low.end, item.high.end) for item in row.intervals]
-        assert found == [(a, b) for _, _, a, b in brute_force(worst_line(block))]
+        expected = brute_force(worst_line(block), late_line(out))
+        assert found == [(a, b) for _, _, a, b in expected]
 
 
 @settings(max_examples=60, deadline=None)
 @given(small_atlases())
 def test_tiles_and_row_batches_do_not_change_the_answer(made):
-    asked, _, _ = made
+    asked = made[0]
     before = asked.limits("along")
     asked.stored.tile_shape = asked.grid.shape
     with pytest.MonkeyPatch.context() as patch:
@@ -149,7 +183,7 @@ def test_tiles_and_row_batches_do_not_change_the_answer(made):
 def test_the_document_is_strict_json_without_nan_or_infinity(made):
     import json
 
-    asked, _, _ = made
+    asked = made[0]
     document = asked.limits("along").to_json()
     assert json.loads(json.dumps(document, allow_nan=False)) == document
     for row in document["rows"]:
@@ -258,6 +292,28 @@ def test_an_unknown_node_in_the_box_ends_the_interval_at_the_last_stable_node():
     assert (above.low.value, above.low.end, above.low.between) == (6.0, "unknown", (6.0, 5.0))
     assert above.high.value == pytest.approx(7.5)
     assert row.unknown == 1
+
+
+def test_what_cannot_be_built_ends_the_interval_at_the_last_node_that_can():
+    """The processor takes up to 2.5 s, so that nothing faster can be built, stable or not."""
+    compute = axis("compute", [0.5, 2.5], sets="delay.compute", role="tolerance")
+    asked = atlas(
+        [compute, axis("sample_period", [1.0, 2, 3, 4, 5])],
+        [[-0.1, -0.1, -0.1, -0.1, 0.1]] * 2,
+        structure=LoopStructure("oscillator", "p", delay_parts=(("compute", "s"),)),
+    )
+    (row,) = asked.limits("sample_period").rows
+    (interval,) = row.intervals
+    low = interval.low
+    assert (low.value, low.end, low.between, low.kind) == (3.0, "excluded", (3.0, 2.0), None)
+    assert interval.high.end == "boundary"
+    assert row.excluded == 2
+    document = asked.limits("sample_period").to_json()
+    assert document["rows"][0]["intervals"][0]["low_end"] == "excluded"
+    assert (document["rows"][0]["excluded"], document["excluded"]) == (2, 2)
+    along = asked.limits("compute", at={"sample_period": 2}).rows[0].intervals
+    assert [(i.low.end, i.high.end, i.high.value) for i in along] == [("axis_end", "excluded", 0.5)]
+    assert asked.limits("compute", at={"sample_period": 2}, over={}).rows[0].excluded == 1
 
 
 @pytest.mark.parametrize(

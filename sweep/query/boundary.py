@@ -3,7 +3,7 @@
 Along every line of nodes, in both directions, the crossings are found as `limits` finds them; cell
 by cell they are then joined by straight pieces (marching squares). So the line meets the limits at
 every grid line, ends where they end, and lies on a node where a gain of exactly 0 changes the
-loop's structure.
+loop's structure. It is that of stability alone: whether a loop can be built plays no part.
 
 References
 ----------
@@ -85,10 +85,11 @@ def _crossings(
     question = LimitsQuestion(grid, along, tuple(spans), (), {}, (), ())
     breaks = frozenset(gain_changes_structure(grid, axis))
     nowhere = np.zeros(len(axis), dtype=np.int64)
+    built = np.zeros(len(axis), dtype=np.bool_)
     found = np.full((len(log_radius), len(axis) - 1), np.nan)
     for row, values in enumerate(log_radius.astype(np.float64)):
         place = {i: index for i, index in enumerate(node) if i != along} | {listed: row}
-        walk = Walk(question, axis, breaks, values, nowhere, place)
+        walk = Walk(question, axis, breaks, values, nowhere, built, place)
         angles = {at: float(mode_angle[row, at[along]]) for at in walk.nodes_to_read()}
         for cell, at in walk.crossing_places(angles):
             found[row, cell] = at

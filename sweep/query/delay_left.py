@@ -35,7 +35,8 @@ def find_delay_left(
     """How much of each delay is left to a design that is stable throughout the box.
 
     Every other tolerance counts at its worst over the box, and so do the neighbours that a bracket
-    or a shaken axis takes in. Between nodes the boundary is interpolated.
+    or a shaken axis takes in. Between nodes the boundary is interpolated, and the processor's time
+    is bounded by the sample period itself rather than by the last node below it.
 
     Parameters
     ----------

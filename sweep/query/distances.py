@@ -2,7 +2,8 @@
 
 Along a design axis the others stay at the design and the box counts at its worst. Along a tolerance
 axis the distance counts from the end of the box outward, with the other tolerances at their worst
-over the box. The boundary is found as `sweep.query.limits` finds it.
+over the box. A distance ends where `sweep.query.limits` ends a stretch: at the boundary, and before
+what is unknown or cannot be built.
 """
 
 from __future__ import annotations
@@ -23,7 +24,8 @@ from sweep.query.held_block import hold
 from sweep.query.scope import Scope
 from sweep.query.select import Value, gain_changes_structure, value_at
 from sweep.query.walk import LimitsQuestion, Walk
-from sweep.query.worst import LOG_RADIUS
+from sweep.query.worst import LOG_RADIUS, find_excluded
+from sweep.vocabulary import LoopStructure
 
 GAINS = ("controller.kp", "controller.ki", "controller.kd", "plant.gain")
 """Parameters whose ratios are also given in dB."""
@@ -48,7 +50,9 @@ class Line:
         return self.walk.axis
 
 
-def walk_lines(stored: Readable, block: Readable, scope: Scope) -> list[Line]:
+def walk_lines(
+    stored: Readable, block: Readable | None, structure: LoopStructure, scope: Scope
+) -> list[Line]:
     """The lines through a design: design axes first, then tolerances; none along unordered rows.
 
     Parameters
@@ -56,7 +60,10 @@ def walk_lines(stored: Readable, block: Readable, scope: Scope) -> list[Line]:
     stored
         The atlas.
     block
-        The same, holding the design at every node of the tolerances.
+        The same, holding the design at every node of the tolerances; `None` when these are too many
+        to be held.
+    structure
+        Of its loop.
     scope
         One design and its box.
     """
@@ -66,32 +73,38 @@ def walk_lines(stored: Readable, block: Readable, scope: Scope) -> list[Line]:
     for along in order:
         axis = scope.grid.axes[along]
         if not axis.is_row_axis or axis.ordered:
-            found.append(_line(stored, block if along in tolerances else None, scope, along))
+            found.append(
+                _line(stored, block if along in tolerances else None, structure, scope, along)
+            )
     return found
 
 
-def _line(stored: Readable, block: Readable | None, scope: Scope, along: int) -> Line:
+def _line(
+    stored: Readable, block: Readable | None, structure: LoopStructure, scope: Scope, along: int
+) -> Line:
     axis = scope.grid.axes[along]
     nodes = scope.spans[along]
     spans = list(scope.spans)
     spans[along] = np.arange(len(axis), dtype=np.intp)
     box = tuple(i for i in scope.box if i != along)
     source = hold(stored, spans) if block is None else block
-    (found,) = find_extremes(source, Scope(scope.grid, tuple(spans), box, {}), [LOG_RADIUS])
+    line = Scope(scope.grid, tuple(spans), box, {})
+    (found,) = find_extremes(source, line, [LOG_RADIUS])
     worst = found.worst[LOG_RADIUS].astype(np.float64).reshape(-1)
     worst[found.unknown.reshape(-1) > 0] = np.nan
     question = LimitsQuestion(scope.grid, along, tuple(spans), box, {}, (), ())
     place = {i: int(spans[i][0]) for i in range(len(spans)) if i != along and i not in box}
     breaks = frozenset(gain_changes_structure(scope.grid, axis))
     which = found.which[LOG_RADIUS].reshape(-1)
-    walk = Walk(question, axis, breaks, worst, which, place)
+    excluded = np.broadcast_to(find_excluded(structure, line), line.design_shape).reshape(-1)
+    walk = Walk(question, axis, breaks, worst, which, excluded, place)
     return Line(walk, int(nodes[0]), int(nodes[-1]), block or stored)
 
 
 def find_distances(lines: list[Line], scope: Scope) -> tuple[Distance, ...]:
     """Distances along every line, down before up.
 
-    Only for a design that is known to be stable at every node of its box.
+    Only for a design that is known to be stable at every node of its box, and that can be built.
     """
     return tuple(distance for line in lines for distance in _both_ways(line, scope))
 

@@ -136,14 +136,19 @@ def design_period_s(scope: Scope) -> NDArray[np.float64]:
     return period.reshape([period.shape[axis] for axis in scope.free])
 
 
+def can_be_held(scope: Scope) -> bool:
+    """Whether there are few enough designs to be held at once."""
+    return math.prod(scope.design_shape) <= MOST_DESIGN_NODES
+
+
 def period_is_in_box(scope: Scope) -> bool:
     """Whether nature, or a bracket, varies the sample period."""
     return any("sample_period" in scope.grid.axes[axis].sets for axis in scope.box)
 
 
 def _check_size(scope: Scope) -> None:
-    designs = math.prod(scope.design_shape)
-    if designs > MOST_DESIGN_NODES:
+    if not can_be_held(scope):
+        designs = math.prod(scope.design_shape)
         raise QuestionError(
             f"taking the worst over a box for {designs:,} designs at once: at most "
             f"{MOST_DESIGN_NODES:,} are held",

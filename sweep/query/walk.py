@@ -64,6 +64,9 @@ class Walk:
     """Shape (n,): largest log_radius over the box; NaN where unknown."""
     which: NDArray[np.integer]
     """Shape (n,): flat index into the box of the node where it is reached."""
+    excluded: NDArray[np.bool_]
+    """Shape (n,): where the loop cannot be built, somewhere in the box. A stretch ends there; the
+    log_radius there is known all the same and may shape the curve between two other nodes."""
     place: Mapping[int, int]
     """Node of every axis that is neither asked along nor in the box, by position."""
 
@@ -78,8 +81,9 @@ class Walk:
         return found
 
     def runs(self) -> list[tuple[int, int]]:
-        """Stretches of stable nodes as (first, last)."""
-        stable = np.concatenate([[False], self.worst < STABILITY_THRESHOLD, [False]])
+        """Stretches of stable nodes that can be built, as (first, last)."""
+        holds = (self.worst < STABILITY_THRESHOLD) & ~self.excluded
+        stable = np.concatenate([[False], holds, [False]])
         edges = np.flatnonzero(stable[1:] != stable[:-1])
         return [(int(a), int(b) - 1) for a, b in zip(edges[::2], edges[1::2], strict=True)]
 
@@ -116,6 +120,8 @@ class Walk:
     def _end_kind(self, other: int) -> EndKind:
         if not 0 <= other < len(self.worst):
             return "axis_end"
+        if self.excluded[other]:
+            return "excluded"
         return "unknown" if math.isnan(self.worst[other]) else "boundary"
 
     def _end(self, stable: int, other: int, angles: Angles) -> End:
@@ -124,7 +130,7 @@ class Walk:
         if kind == "axis_end":
             return End(here, kind)
         between = (here, value_at(self.axis, other))
-        if kind == "unknown":
+        if kind != "boundary":
             return End(here, kind, between)
         at = self._crossing(stable, other, angles)
         x = self.axis.coordinates

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import difflib
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -189,7 +189,7 @@ def find_yields(
         When the confidence is out of its range.
     """
     tables = {axis.name: position for position, axis in enumerate(axes) if axis.is_row_axis}
-    _check_tables(tables, weights or {})
+    check_tables(tables, weights or {})
     inside = np.ix_(*box)
     codes, radii = verdict[inside], log_radius[inside]
     found = []
@@ -272,7 +272,14 @@ def _weights_of(axis: Axis, nodes: Indices, given: Mapping[str, float]) -> Float
     return weights
 
 
-def _check_tables(tables: Mapping[str, int], weights: Mapping[str, object]) -> None:
+def check_tables(tables: Collection[str], weights: Mapping[str, object]) -> None:
+    """Refuse weights of what is not among the row axes.
+
+    Raises
+    ------
+    QuestionError
+        Names the first.
+    """
     for name in weights:
         if name not in tables:
             raise QuestionError(

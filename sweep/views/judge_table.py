@@ -26,6 +26,7 @@ from sweep.query.yields import Yield
 from sweep.views.box_lines import jump_line, range_text
 from sweep.views.columns import head, number
 from sweep.views.sheet import (
+    CANNOT_BE_BUILT,
     caution_text,
     cells,
     half_sample_text,
@@ -119,6 +120,8 @@ def _block(grid: Grid, found: DesignVerdict) -> Iterable[RenderableType]:
     if found.distances:
         yield line("")
         yield _distances_table(grid, found.distances)
+        if any(distance.end == "excluded" for distance in found.distances):
+            yield line(CANNOT_BE_BUILT, "dim")
     yield line("")
     yield from _remarks(grid, found)
 
@@ -130,9 +133,12 @@ def _box_texts(grid: Grid, found: DesignVerdict) -> Iterable[tuple[str, str]]:
     if found.widened:
         names = ", ".join(found.widened)
         yield f"a bound of {names} lay between nodes: the next node outward was taken in", "yellow"
-    for name, (low, high) in found.brackets.items():
-        ends_text = range_text(grid.axis(name), (low, high))
-        yield f"{name} bracketed: the worst of the nodes {ends_text} counts", "yellow"
+    for name, pair in found.brackets.items():
+        ends_text = range_text(grid.axis(name), pair)
+        if name in found.shaken:
+            yield f"{name} lies between the nodes {ends_text}", "yellow"
+        else:
+            yield f"{name} bracketed: the worst of the nodes {ends_text} counts", "yellow"
     for name, (reach, low, high) in found.shaken.items():
         ends_text = range_text(grid.axis(name), (low, high))
         yield f"{name} shaken by {reach}: the worst of the nodes {ends_text} counts", ""
@@ -175,6 +181,8 @@ def _distance_cell(axis: Axis, distance: Distance) -> Text:
         cell = line(f"beyond the axis end, {at}")
     elif distance.end == "unknown":
         cell = line(f"{at}, next node unknown", "yellow")
+    elif distance.end == "excluded":
+        cell = line(f"{at}, next node cannot be built")
     else:
         cell = line(f"{at}, {_how(distance)}")
     if far := _far_text(axis, distance):
@@ -191,7 +199,7 @@ def _how(distance: Distance) -> str:
 def _far_text(axis: Axis, distance: Distance) -> str:
     if distance.by is None or distance.by == 0.0:
         return ""
-    more = "by " if distance.end == "boundary" else "by more than "
+    more = {"boundary": "by ", "excluded": "by at least "}.get(distance.end, "by more than ")
     texts = [f"{more}{number(axis, distance.by)}"]
     if distance.percent is not None:
         texts.append(f"{distance.percent:.3g} %")
@@ -203,9 +211,9 @@ def _far_text(axis: Axis, distance: Distance) -> str:
 def _remarks(grid: Grid, found: DesignVerdict) -> Iterable[RenderableType]:
     """What is left, and what to beware of."""
     if not found.distances:
-        fails = found.lines[0].verdict == "fails"
-        known = "is not stable" if fails else "is not known to be stable"
-        yield line(f"no distances: it {known} at every node of the box", "yellow")
+        yield line(f"no distances: it {_what_is_missing(found)} at every node of the box", "yellow")
+    if found.tolerances_skipped:
+        yield line(f"not told: {found.tolerances_skipped}", "yellow")
     if found.in_hand:
         yield line(_in_hand_text(grid, found.in_hand))
     yield from (line(text) for text in _hurt_texts(grid, found))
@@ -217,6 +225,11 @@ def _remarks(grid: Grid, found: DesignVerdict) -> Iterable[RenderableType]:
         text, style = _gain_fall_text(grid, found.gain_fall)
         yield line(text, style)
     yield from (line(text, "dim") for text in jump_line(found.largest_jump))
+
+
+def _what_is_missing(found: DesignVerdict) -> str:
+    stable = {"fails": "is not stable", "unknown": "is not known to be stable"}
+    return stable.get(found.lines[0].verdict, "cannot be built")
 
 
 def _in_hand_text(grid: Grid, found: InHand) -> str:

@@ -16,6 +16,7 @@ from sweep.query.select import Value
 from sweep.views.box_lines import box_lines, jump_line
 from sweep.views.columns import head, number
 from sweep.views.sheet import (
+    CANNOT_BE_BUILT,
     caution_text,
     cells,
     facts_table,
@@ -49,6 +50,8 @@ def limits_view(answer: LimitsAnswer) -> RenderableType:
     same, differing = _deciding(answer)
     parts += [line(""), _limits_table(answer, axis, differing)]
     parts.append(line(ENDS + (WORST_BELOW if differing else ""), "dim"))
+    if answer.excluded:
+        parts.append(line(CANNOT_BE_BUILT, "dim"))
     if same:
         parts.append(line(f"{_place_text(answer, same)}: the worst at every end"))
     parts.append(line(""))
@@ -116,15 +119,23 @@ def _interval_lines(
 ) -> Iterable[tuple[tuple[str, str], tuple[Text, Text]]]:
     """For each interval its two numbers and its two ends."""
     if not row.intervals:
-        found = "unknown" if row.unknown == row.nodes else "none stable"
-        found += "" if row.unknown in (0, row.nodes) else ", some unknown"
-        yield ("", ""), (line(found), line(""))
+        yield ("", ""), (line(_nothing_text(row, len(axis))), line(""))
     for interval in row.intervals:
         low, high = interval.low, interval.high
         yield (
             (number(axis, low.value), number(axis, high.value)),
             (_end_cell(answer, low, axis, differing), _end_cell(answer, high, axis, differing)),
         )
+
+
+def _nothing_text(row: LimitsRow, nodes: int) -> str:
+    """Why a row has no interval."""
+    if row.excluded == nodes:
+        return "cannot be built"
+    if row.unknown == row.nodes:
+        return "unknown"
+    some = [", some unknown"] * (row.unknown > 0) + [", some cannot be built"] * (row.excluded > 0)
+    return "none stable" + "".join(some)
 
 
 def _end_cell(answer: LimitsAnswer, end: End, axis: Axis, differing: Sequence[str]) -> Text:
@@ -141,7 +152,7 @@ def _end_text(end: End, axis: Axis) -> str:
         return "beyond the axis end"
     if end.end == "unknown" or end.between is None:
         return "next node unknown"
-    how: str = end.kind or "boundary"
+    how: str = "cannot be built" if end.end == "excluded" else end.kind or "boundary"
     if end.kind == "oscillation" and end.hz is not None:
         how = f"oscillation {format_quantity(end.hz, 'Hz', digits=4)}"
     stable, other = (number(axis, value) for value in end.between)

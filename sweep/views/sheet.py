@@ -24,6 +24,9 @@ from sweep.query.select import Value
 HALF_SAMPLE = "the hold's own half sample is in the model already"
 """Said wherever delay is shown."""
 
+CANNOT_BE_BUILT = "cannot be built: there the processor takes longer than a sample period"
+"""Said wherever that ends a stable stretch."""
+
 
 class _Sheet(io.StringIO):
     """Paper that knows which letters the terminal has: rich asks its file for ``encoding``."""

@@ -81,7 +81,8 @@ class Distance:
     """Where the stable stretch ends, in the unit of the axis; of rows the last stable one."""
     end: EndKind
     """``boundary``: the loop becomes unstable there; ``axis_end``: stable as far as the axis goes;
-    ``unknown``: the next node is not known."""
+    ``unknown``: the next node is not known; ``excluded``: it cannot be built, since the processor
+    takes longer than a sample period."""
     by: float | None
     """Distance in the unit of the axis, at least 0; ``None`` along rows."""
     percent: float | None
@@ -183,15 +184,20 @@ class DesignVerdict:
     requirements: tuple[Requirement, ...]
     """What is required, stability first."""
     distances: tuple[Distance, ...]
-    """Design axes first; empty unless the design is known to be stable in the whole box."""
+    """Design axes first; empty unless the design can be built and is known to be stable at every
+    node of the box."""
     hurts_most: tuple[Hurt, ...]
     """Tolerances with more than one node in the box, the one that hurts most first."""
     gain_fall: GainFall
     """Whether the loop is conditionally stable."""
     in_hand: InHand | None
-    """How far the box may grow; ``None`` when no tolerance has a range to grow."""
+    """How far the box may grow; ``None`` when no tolerance has a range to grow, and when it is
+    skipped."""
     acceptance: Acceptance | None
-    """Tolerances that are safe; ``None`` when there is no plain tolerance axis."""
+    """Tolerances that are safe; ``None`` when there is no plain tolerance axis, and when it is
+    skipped."""
+    tolerances_skipped: str
+    """Why ``in_hand`` and ``acceptance`` are left out; empty when they are not."""
     yields: tuple[Yield, ...]
     """Share of rows that meet, for each row axis of the box."""
     largest_jump: float | None
@@ -235,6 +241,7 @@ class DesignVerdict:
             "gain_fall": self.gain_fall.to_json(),
             "in_hand": self.in_hand and self.in_hand.to_json(),
             "acceptance": self.acceptance and self.acceptance.to_json(),
+            "tolerances_skipped": self.tolerances_skipped or None,
             "yield": [found.to_json() for found in self.yields],
         }
         return document | {

@@ -10,7 +10,7 @@ from sweep.grid import Grid
 from sweep.query.answers.plain import plain, show_value
 from sweep.query.select import Value
 
-EndKind = Literal["boundary", "axis_end", "unknown"]
+EndKind = Literal["boundary", "axis_end", "unknown", "excluded"]
 CrossingKind = Literal["drift", "alternation", "oscillation"]
 
 
@@ -22,7 +22,8 @@ class End:
     """Coordinate in the axis's stored unit; a row's label on a row axis."""
     end: EndKind
     """``boundary``: the loop becomes unstable; ``axis_end``: stable as far as the axis goes;
-    ``unknown``: the next node is not computed."""
+    ``unknown``: the next node is not computed; ``excluded``: it cannot be built, since the
+    processor takes longer than a sample period."""
     between: tuple[Value, Value] | None = None
     """The stable node and the other node; ``None`` at an axis end."""
     kind: CrossingKind | None = None
@@ -75,6 +76,9 @@ class LimitsRow:
     """Nodes of the line, tolerance nodes included."""
     unknown: int
     """How many of them are not computed."""
+    excluded: int = 0
+    """Nodes along the asked axis at which the loop cannot be built: somewhere in the box the
+    processor takes longer than a sample period."""
     largest_jump: float | None = None
     """Largest difference of log_radius between the two nodes of a boundary; ``None`` without."""
 
@@ -122,6 +126,11 @@ class LimitsAnswer:
         return sum(row.unknown for row in self.rows)
 
     @property
+    def excluded(self) -> int:
+        """Nodes along the asked axis at which the loop cannot be built, of all rows."""
+        return sum(row.excluded for row in self.rows)
+
+    @property
     def largest_jump(self) -> float | None:
         """Largest difference of log_radius between the two nodes of any boundary."""
         jumps = [row.largest_jump for row in self.rows if row.largest_jump is not None]
@@ -133,6 +142,7 @@ class LimitsAnswer:
             {
                 "at": row.at,
                 "unknown": row.unknown,
+                "excluded": row.excluded,
                 "nodes": row.nodes,
                 "intervals": [interval.to_json() for interval in row.intervals],
             }
@@ -142,7 +152,8 @@ class LimitsAnswer:
         document |= {"unit": self.unit, "rows": rows}
         names = ("rows_in_all", "listed", "over", "widened", "bracketed", "nominal", "largest_jump")
         document |= {name: getattr(self, name) for name in names}
-        document |= {"nodes": self.nodes, "unknown": self.unknown, "cautions": self.cautions}
+        document |= {"nodes": self.nodes, "unknown": self.unknown, "excluded": self.excluded}
+        document["cautions"] = self.cautions
         found: dict[str, Any] = plain(document)
         return found
 
@@ -155,7 +166,9 @@ class LimitsAnswer:
                 f"{show_value(axis, item.low.value)} to {show_value(axis, item.high.value)}"
                 for item in row.intervals
             )
-            lines.append(f"  {place or 'everywhere'}: {stable or 'no stable node'}")
+            lines.append(
+                f"  {place or 'everywhere'}: {stable or 'no stable node that can be built'}"
+            )
         if self.rows_in_all > 20:
             lines.append(f"  and {self.rows_in_all - 20:,} more rows")
         lines.append(f"  {self.nodes:,} nodes, {self.unknown:,} unknown; cautions: see .cautions")
