@@ -14,7 +14,7 @@ from sweep.query.question import make_demand
 from sweep.vocabulary import STABILITY_THRESHOLD as EDGE
 from sweep.vocabulary import LoopStructure
 
-LEVELS = [-36.0, -0.6, -0.3, -0.3, -0.05, -1e-3, 0.0, 0.4, math.nan]
+LEVELS = [-36.0, -0.6, -0.3, -0.3, -0.05, -1e-3, 0.0, 0.4, math.inf, math.nan]
 ANGLES = [0.0, 0.2, 1.0, 3.0, math.nan]
 BOUNDS = {
     "max_decay_time": ("decay_time", "max", 0.025),
@@ -38,6 +38,8 @@ class Asked:
     price: bool = False
     at: dict[str, int] = field(default_factory=dict)
     """Design axis -> the node that it is fixed at."""
+    within: dict[str, list[int]] = field(default_factory=dict)
+    """Design axis -> the nodes that it is kept to."""
 
     def demand(self, shake=None):
         over = {}
@@ -53,6 +55,19 @@ class Asked:
     def fixed(self):
         grid = self.atlas.grid
         return {name: float(grid.axis(name).coordinates[node]) for name, node in self.at.items()}
+
+    def limited(self):
+        found = {}
+        for name, nodes in self.within.items():
+            x = self.atlas.grid.axis(name).coordinates
+            found[name] = float(x[nodes[0]]), float(x[nodes[-1]])
+        return found
+
+    def span(self, name):
+        """Nodes of a design axis that take part."""
+        if name in self.at:
+            return [self.at[name]]
+        return self.within.get(name, range(len(self.atlas.grid.axis(name))))
 
 
 @st.composite
@@ -70,7 +85,9 @@ def questions(draw, best=("decay_time", "log_radius", "dominant_damping", "gain_
         ),
     ]
     if draw(st.booleans()):
-        axes.append(axis("sample_period", PERIODS[: draw(st.integers(1, 4))], unit="s"))
+        periods = PERIODS[: draw(st.integers(1, 4))]
+        role = draw(st.sampled_from(["design", "design", "tolerance"]))
+        axes.append(axis("sample_period", periods, unit="s", role=role))
     if draw(st.booleans()):
         number = draw(size)
         labels = [f"rule {i}" for i in range(number)]
@@ -106,13 +123,12 @@ def questions(draw, best=("decay_time", "log_radius", "dominant_damping", "gain_
     box = {one.name: draw(_nodes(one)) for one in axes if one.role == "tolerance"}
     require = draw(st.lists(st.sampled_from(list(BOUNDS)), unique=True, max_size=2))
     at = {"kp": draw(st.integers(0, len(found.grid.axis("kp")) - 1))}
-    return Asked(
-        found,
-        box,
-        require,
-        draw(st.sampled_from(best)),
-        at=at if draw(st.integers(0, 4)) == 0 else {},
-    )
+    at = at if draw(st.integers(0, 4)) == 0 else {}
+    kept = [
+        one for one in axes if one.role == "design" and one.labels is None and one.name not in at
+    ]
+    within = {one.name: draw(_nodes(one)) for one in kept if draw(st.integers(0, 3)) == 0}
+    return Asked(found, box, require, draw(st.sampled_from(best)), at=at, within=within)
 
 
 @st.composite
@@ -140,18 +156,19 @@ class ByHand:
         self.values = asked.atlas.stored.values
         self.required = [("log_radius", "max", EDGE), *(BOUNDS[name] for name in asked.require)]
         self.free = [one.name for one in self.grid.axes if one.role == "design"]
-        spans = [
-            [asked.at[name]] if name in asked.at else range(len(self.grid.axis(name)))
-            for name in self.free
-        ]
-        self.designs = list(itertools.product(*spans))
+        self.designs = list(itertools.product(*map(asked.span, self.free)))
         self.judged = {design: self.judge(design) for design in self.designs}
 
     def period(self, design):
+        """Of a design; the largest in the box when nature varies it."""
         if "sample_period" in self.free:
-            return self.grid.axis("sample_period").coordinates[
-                design[self.free.index("sample_period")]
-            ]
+            return self.period_at({"sample_period": design[self.free.index("sample_period")]})
+        nodes = self.box.get("sample_period", [0])
+        return max(self.period_at({"sample_period": node}) for node in nodes)
+
+    def period_at(self, node):
+        if "sample_period" in self.grid.names:
+            return self.grid.axis("sample_period").coordinates[node["sample_period"]]
         return 0.01
 
     def nodes(self, design):
@@ -169,7 +186,7 @@ class ByHand:
             for inner in itertools.product(*(self.box[name] for name in names)):
                 yield moved | dict(zip(names, inner, strict=True))
 
-    def value(self, quantity, node, design):
+    def value(self, quantity, node):
         index = tuple(node[name] for name in self.grid.names)
         level = float(self.values["log_radius"][index])
         angle = float(self.values["mode_angle"][index])
@@ -180,7 +197,9 @@ class ByHand:
         if quantity == "decay_time":
             if math.isnan(level):
                 return math.nan
-            return -self.period(design) / level if level < EDGE else math.inf
+            return -self.period_at(node) / level if level < EDGE else math.inf
+        if level == math.inf:
+            return math.nan if math.isnan(angle) else -1.0
         size = math.sqrt(level * level + angle * angle)
         return -level / (size or 1.0)
 
@@ -190,10 +209,12 @@ class ByHand:
         wanted = {("log_radius", "max"), ("decay_time", "max")}
         wanted |= {(quantity, sense) for quantity, sense, _ in self.required}
         wanted |= {(best, SENSE[best])} if best != "gain_box" else set()
-        unknown, worst, where = 0, {}, {}
+        unknown, worst, where, shortest = 0, {}, {}, math.inf
         for node in self.nodes(design):
+            if node is not None:
+                shortest = min(shortest, self.period_at(node))
             found = {
-                (quantity, sense): math.nan if node is None else self.value(quantity, node, design)
+                (quantity, sense): math.nan if node is None else self.value(quantity, node)
                 for quantity, sense in wanted
             }
             unknown += any(map(math.isnan, found.values()))
@@ -210,7 +231,7 @@ class ByHand:
             else:
                 fails |= value > limit if sense == "max" else value < limit
         compute = next(one.value for one in self.grid.fixed if one.path == "delay.compute")
-        if compute > self.period(design):
+        if compute > shortest:
             verdict = "excluded"
         else:
             verdict = "fails" if fails else "unknown" if unknown else "meets"
@@ -221,7 +242,7 @@ class ByHand:
         if "sample_period" not in self.free:
             return [self.designs]
         along = self.free.index("sample_period")
-        places = range(len(self.grid.axis("sample_period")))
+        places = self.asked.span("sample_period")
         return [[design for design in self.designs if design[along] == p] for p in places]
 
     def rank(self, design):

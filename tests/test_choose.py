@@ -21,7 +21,12 @@ from sweep.vocabulary import LoopStructure
 
 def choose(asked, **more):
     return choose_designs(
-        asked.atlas.stored, asked.demand(), best=asked.best, at=asked.fixed(), **more
+        asked.atlas.stored,
+        asked.demand(),
+        best=asked.best,
+        at=asked.fixed(),
+        within=asked.limited(),
+        **more,
     )
 
 
@@ -43,10 +48,11 @@ def check_row(row, by_hand, designs):
     if expected is None and ("fails" in words or "unknown" not in words):
         expected = False
     assert row.meets is expected
+    assert row.excluded == (set(words) == {"excluded"})
     assert row.sample_period_s == by_hand.period(designs[0])
     if design is None:
         assert (row.design, row.worst, row.at, row.delay_left) == (None, {}, {}, None)
-        assert row.axis_ends == row.beside_failing == ()
+        assert row.axis_ends == row.range_ends == row.beside_failing == ()
         return
     assert row.design == named(by_hand.grid, dict(zip(by_hand.free, design, strict=True)))
     assert (row.box.nodes if row.box else None) == held
@@ -62,10 +68,15 @@ def check_row(row, by_hand, designs):
 
 
 def check_neighbours(row, by_hand, design):
-    ends, beside = [], []
+    ends, limits, beside = [], [], []
     for place, name in enumerate(by_hand.free):
-        one = by_hand.grid.axis(name)
+        one, span = by_hand.grid.axis(name), by_hand.asked.span(name)
         if len(one) == 1 or name in by_hand.asked.at or (one.labels and not one.ordered):
+            continue
+        nodes = [design[place] - 1, design[place] + 1]
+        if any(node in range(len(one)) and node not in span for node in nodes):
+            limits.append(name)
+        if len(span) == 1:
             continue
         if design[place] in (0, len(one) - 1):
             ends.append(name)
@@ -73,6 +84,7 @@ def check_neighbours(row, by_hand, design):
         if any(by_hand.judged[d][0] != "meets" for d in around if d in by_hand.judged):
             beside.append(name)
     assert row.axis_ends == tuple(ends)
+    assert row.range_ends == tuple(limits)
     assert row.beside_failing == (tuple(beside) if row.meets else ())
 
 
@@ -111,7 +123,7 @@ def test_every_row_is_what_plain_loops_over_every_node_find(asked):
 @settings(max_examples=60)
 @given(questions(best=("decay_time", "dominant_damping")), st.sampled_from([1, 2]))
 def test_shaken_designs_count_at_the_worst_of_their_neighbours(asked, reach):
-    if asked.at or len(asked.atlas.grid.axis("kp")) == 1:
+    if asked.at or asked.within or len(asked.atlas.grid.axis("kp")) == 1:
         return
     by_hand = ByHand(asked, reach=reach)
     answer = choose_designs(asked.atlas.stored, asked.demand({"kp": float(reach)}), best=asked.best)
@@ -189,6 +201,53 @@ def test_the_slowest_period_at_the_axis_end_is_said_to_lie_beyond_it():
     inner = choose_designs(found.stored, STABLE, within={"sample_period": "1ms:2ms"})
     assert not inner.slowest_is_axis_end
     assert inner.slowest.sample_period_s == 0.002
+
+
+def test_a_design_at_the_end_of_the_range_asked_for_is_not_taken_to_be_inside():
+    """Beyond kp 3 nothing meets, beyond 4 ms something does; neither is judged."""
+    levels = np.array([[-0.1, -0.2, -0.3, -0.4, 0.2]] * 3)
+    found = line_atlas(levels)
+    whole = choose_designs(found.stored, STABLE).slowest
+    assert (whole.design["kp"], whole.beside_failing, whole.range_ends) == (3.0, ("kp",), ())
+    kept = choose_designs(found.stored, STABLE, within={"kp": (1, 3), "sample_period": "1ms:2ms"})
+    assert kept.slowest.design == {"sample_period": 0.002, "kp": 3.0}
+    assert (kept.slowest.beside_failing, kept.slowest.axis_ends) == ((), ())
+    assert kept.slowest.range_ends == ("sample_period", "kp")
+    assert (kept.slowest_is_axis_end, kept.slowest_is_range_end) == (False, True)
+    inside = choose_designs(found.stored, STABLE, within={"kp": (0, 4)})
+    assert (inside.slowest.range_ends, inside.slowest_is_range_end) == ((), False)
+    one = choose_designs(found.stored, STABLE, within={"sample_period": "1ms"})
+    assert (one.slowest.range_ends, one.slowest_is_range_end) == (("sample_period",), True)
+    fixed = choose_designs(found.stored, STABLE, at={"sample_period": "1ms", "kp": 1})
+    assert (fixed.slowest.range_ends, fixed.slowest_is_range_end) == ((), False)
+    document = kept.to_json()
+    assert document["slowest"]["range_ends"] == ["sample_period", "kp"]
+    assert document["slowest_is_range_end"] is True
+
+
+def test_a_gain_box_says_where_the_range_asked_for_ends_it():
+    found = line_atlas([[-0.1] * 6], (0.001,))
+    (row,) = choose_designs(found.stored, STABLE, best="gain_box", within={"kp": (1, 4)}).rows
+    assert (row.design["kp"], row.range_ends, row.box.axis_ends) == (2.0, (), ())
+    assert row.box_range_ends == (("kp", "low"), ("kp", "high"))
+    assert row.to_json()["box_range_ends"] == [["kp", "low"], ["kp", "high"]]
+
+
+def test_a_period_at_which_nothing_can_be_built_is_told_from_one_that_fails():
+    structure = LoopStructure("oscillator", "p", delay_parts=(("compute", "s"),))
+    found = line_atlas(
+        [[-0.1, -0.1], [0.1, 0.1], [-0.1, 0.1]],
+        fixed={"delay.compute": 0.0015},
+        structure=structure,
+    )
+    rows_found = choose_designs(found.stored, STABLE).rows
+    assert [(row.meets, row.excluded) for row in rows_found] == [
+        (False, True),
+        (False, False),
+        (True, False),
+    ]
+    assert rows_found[0].design is None
+    assert [row.to_json()["excluded"] for row in rows_found] == [True, False, False]
 
 
 def test_equal_designs_are_told_apart_by_log_radius_and_then_by_their_order():

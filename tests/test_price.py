@@ -47,7 +47,12 @@ def check(outcome, asked, name, nodes):
 @given(questions())
 def test_every_price_is_what_plain_loops_over_the_narrowed_box_find(asked):
     answer = choose_designs(
-        asked.atlas.stored, asked.demand(), best=asked.best, at=asked.fixed(), price=True
+        asked.atlas.stored,
+        asked.demand(),
+        best=asked.best,
+        at=asked.fixed(),
+        within=asked.limited(),
+        price=True,
     )
     several = [name for name, nodes in asked.box.items() if len(nodes) > 1]
     assert sorted(price.axis for price in answer.price) == sorted(several)
@@ -62,7 +67,9 @@ def test_every_price_is_what_plain_loops_over_the_narrowed_box_find(asked):
         else:
             outcomes.append(check(price.halved, asked, price.axis, halved(one, nodes)))
             assert price.halved_is_whole == (halved(one, nodes) == nodes)
-        assert price.brings_nothing == all(found == whole for found in outcomes)
+        # a narrower range of the period is no gain in the slowest one
+        told = 2 if price.axis == "sample_period" else 3
+        assert price.brings_nothing == all(found[:told] == whole[:told] for found in outcomes)
     gains = [(p.removed.meets, p.halved.meets if p.halved else 0) for p in answer.price]
     assert gains == sorted(gains, reverse=True)
 
@@ -123,6 +130,16 @@ def test_a_narrower_box_excludes_fewer_designs():
     assert answer.rows[0].design is None
     assert answer.rows[0].meets is False
     assert answer.price[0].removed.meets == answer.price[0].halved.meets == 1
+
+
+def test_the_slowest_period_of_a_narrowed_box_is_the_largest_in_it():
+    clock = axis("clock", [0.01, 0.02, 0.03], sets="sample_period", role="tolerance", unit="s")
+    found = atlas([clock, axis("kp", [0, 1], sets="controller.kp")], np.full((3, 2), -0.1))
+    answer = choose_designs(found.stored, STABLE, best="log_radius", price=True)
+    (price,) = answer.price
+    assert answer.base.slowest_s == 0.03
+    assert (price.halved.slowest_s, price.removed.slowest_s) == (0.02, 0.01)
+    assert price.brings_nothing
 
 
 def test_rows_are_removed_to_the_nominal_row():

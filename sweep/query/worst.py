@@ -146,14 +146,19 @@ def find_worst_of_parts(
     plan = plan_reduction(asked, wanted_extremes(requirements, also))
     reduced = recall_extremes(stored, asked, list(dict.fromkeys(plan.values())), memo, parts)
     for part, found in zip(parts, reduced, strict=True):
-        spans = list(scope.spans)
-        for axis, places in zip(scope.box, part, strict=True):
-            spans[axis] = spans[axis][places]
-        narrowed = replace(scope, spans=tuple(spans))
+        narrowed = narrow_box(scope, part)
         derived = derive_extremes(asked, plan, found)
         cases = judge_extremes(structure, narrowed, requirements, derived, windows)
         # places in the box are counted in the whole of it
         yield replace(cases, scope=scope)
+
+
+def narrow_box(scope: Scope, part: Places) -> Scope:
+    """A scope with a part of its box, given as places along every axis of it."""
+    spans = list(scope.spans)
+    for axis, places in zip(scope.box, part, strict=True):
+        spans[axis] = spans[axis][places]
+    return replace(scope, spans=tuple(spans))
 
 
 def wanted_extremes(

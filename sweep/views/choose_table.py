@@ -31,10 +31,14 @@ ROWS = 24
 """Sample periods that the table shows unless it is asked for more."""
 
 _WORDS = {True: "meets", False: "fails", None: "unknown"}
-_END, _EDGE = "|", "!"
+_END, _EDGE, _RANGE_END = "|", "!", "*"
 _MARKS = (
     f"'{_END}': at an axis end, so that more may lie beyond; "
     f"'{_EDGE}': along this axis a neighbour does not meet, or is not known to"
+)
+_RANGE_MARK = (
+    f"'{_RANGE_END}': at the end of the range asked for with --within; what lies beyond it was not "
+    "judged"
 )
 _MORE = ">"
 _LEFT = "left: from the box until stability is lost; what else is required may fail sooner"
@@ -87,7 +91,7 @@ def pick_rows(answer: ChooseAnswer, most: int) -> list[int]:
     if count <= most:
         return list(range(count))
     told = [i for i, row in enumerate(rows) if row in (answer.slowest, answer.best_row)]
-    changes = [i for i in range(1, count) if rows[i].meets != rows[i - 1].meets]
+    changes = [i for i in range(1, count) if _verdict_word(rows[i]) != _verdict_word(rows[i - 1])]
     sides = [side for i in changes for side in (i - 1, i)]
     kept = list(dict.fromkeys([*told, *sides]))[: max(most, len(told))]
     free = [i for i in range(count) if i not in set(kept)]
@@ -102,6 +106,10 @@ def _best_words(answer: ChooseAnswer) -> str:
 
 def _words(quantity: str) -> str:
     return quantity.replace("_", " ")
+
+
+def _verdict_word(row: ChooseRow) -> str:
+    return "cannot be built" if row.excluded else _WORDS[row.meets]
 
 
 def _fixed_lines(answer: ChooseAnswer) -> Iterable[str]:
@@ -155,9 +163,7 @@ def _slowest_warnings(answer: ChooseAnswer) -> Iterable[str]:
     if slowest is not None:
         if answer.slowest_is_axis_end:
             yield "the slowest that still meets lies beyond the axis end: no slower one was swept"
-        elif len(answer.rows) > 1 and slowest.sample_period_s == max(
-            row.sample_period_s for row in answer.rows
-        ):
+        elif answer.slowest_is_range_end:
             yield "no slower period was asked about: widen --within to see whether one meets"
         missed = sum(
             row.meets is not True and row.sample_period_s < slowest.sample_period_s
@@ -179,6 +185,12 @@ def _warnings(answer: ChooseAnswer, row: ChooseRow) -> Iterable[str]:
     ends = [name for name in row.axis_ends if not _is_period(answer, name)]
     if ends:
         yield f"at the end of {', '.join(ends)}: a better design may lie beyond the axis end"
+    limited = [name for name in row.range_ends if not _is_period(answer, name)]
+    if limited:
+        yield (
+            f"at the end of the range asked for, along {', '.join(limited)}: what lies beyond it "
+            "was not judged, better or failing"
+        )
     if row.beside_failing:
         yield (
             f"beside a node that does not meet, along {', '.join(row.beside_failing)}: nothing is "
@@ -194,6 +206,8 @@ def _table_parts(answer: ChooseAnswer, most_rows: int) -> Iterable[RenderableTyp
         yield line(f"{_place_text(answer, same)}: the worst in every row")
     if any(row.axis_ends or row.beside_failing or _box_ends(row) for row in shown):
         yield line(_MARKS, "dim")
+    if any(row.range_ends or row.box_range_ends for row in shown):
+        yield line(_RANGE_MARK, "dim")
     ends = {item.end for row in shown for item in row.delay_left or ()}
     if ends:
         yield line(_LEFT, "dim")
@@ -246,7 +260,8 @@ def _table(answer: ChooseAnswer, rows: Sequence[ChooseRow], differing: Sequence[
     for row in rows:
         period = period_text(answer, row.sample_period_s).partition(" ")[0]
         edged = any(_is_period(answer, name) for name in row.beside_failing)
-        texts = [_EDGE * edged + period, _WORDS[row.meets]]
+        limited = any(_is_period(answer, name) for name in row.range_ends)
+        texts = [_EDGE * edged + _RANGE_END * limited + period, _verdict_word(row)]
         texts += [_design_text(axis, row) for axis in axes]
         if answer.best == GAIN_BOX:
             texts.append(_nodes_text(row))
@@ -271,7 +286,8 @@ def _design_text(axis: Axis, row: ChooseRow) -> str:
     if row.design is None:
         return ""
     ended = axis.name in row.axis_ends or axis.name in _box_ends(row)
-    marks = _EDGE * (axis.name in row.beside_failing) + _END * ended
+    limited = axis.name in (*row.range_ends, *(name for name, _ in row.box_range_ends))
+    marks = _EDGE * (axis.name in row.beside_failing) + _END * ended + _RANGE_END * limited
     value = marks + number(axis, row.design[axis.name])
     if row.box is None or axis.name not in row.box.ends or axis.is_row_axis:
         return value

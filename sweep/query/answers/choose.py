@@ -34,6 +34,7 @@ _PLAIN_FIELDS = (
     "shaken",
     "free",
     "slowest_is_axis_end",
+    "slowest_is_range_end",
     "slower_unknown",
     "largest_jump",
     "nodes",
@@ -85,16 +86,28 @@ class ChooseRow:
     """For each tolerance axis that is a delay; ``None`` when there is none, or it does not meet."""
     axis_ends: tuple[str, ...]
     """Axes left free at whose end the design lies: a better one may lie beyond."""
+    range_ends: tuple[str, ...]
+    """Axes left free at which the design lies at the end of the range asked for, though the axis
+    goes on: its neighbour there is not judged."""
     beside_failing: tuple[str, ...]
     """Axes left free along which a neighbour of a design that meets is not known to meet."""
     box: LargestBox | None
     """The widest gain box at this period, when that is called best."""
+    box_range_ends: tuple[tuple[str, str], ...]
+    """Axes and sides, low or high, at which that box lies at the end of the range asked for, though
+    the axis goes on."""
     verdicts: Mapping[str, int]
     """Designs at this period: how many meet, fail, are unknown, are excluded."""
+
+    @property
+    def excluded(self) -> bool:
+        """Whether no design at this period can be built: the processor takes longer than it."""
+        return self.verdicts["excluded"] == sum(self.verdicts.values())
 
     def to_json(self) -> dict[str, Any]:
         """The row as programs read it."""
         row = {name: value for name, value in vars(self).items() if name != "sample_period_s"}
+        row["excluded"] = self.excluded
         row["delay_left"] = self.delay_left and [vars(item) for item in self.delay_left]
         row["box"] = self.box and self.box.ends
         row["box_nodes"] = self.box.nodes if self.box else None
@@ -207,6 +220,8 @@ class ChooseAnswer:
     """The row that meets with the best of what is called best; the fastest of equals."""
     slowest_is_axis_end: bool
     """Whether no slower period is in the atlas: the slowest lies beyond the axis end."""
+    slowest_is_range_end: bool
+    """Whether the atlas holds slower periods, all of them beyond the range asked for."""
     slower_unknown: int
     """Designs at slower periods than the slowest (at any period when none meets) of which it is
     not known whether they meet."""
