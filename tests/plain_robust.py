@@ -80,6 +80,8 @@ def quantity_at(question: Question, quantity: str, node: Node) -> float:
     if quantity == "decay_time":
         period_s = parameter(question, "sample_period", node)
         return -period_s / log_radius if log_radius < THRESHOLD else math.inf
+    if math.isinf(log_radius):
+        return math.nan if math.isnan(angle) else -math.copysign(1.0, log_radius)
     size = math.hypot(log_radius, angle)
     return -log_radius / size if size else -log_radius
 

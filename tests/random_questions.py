@@ -16,7 +16,7 @@ from plain_robust import THRESHOLD, Question, changes_structure
 from sweep.query.atlas import Atlas
 from sweep.vocabulary import LoopStructure
 
-LEVELS = (-36.0, -1.0, -0.5, -0.125, -0.01, -2e-9, -5e-10, 0.0, 0.25)
+LEVELS = (-36.0, -1.0, -0.5, -0.125, -0.01, -2e-9, -5e-10, 0.0, 0.25, math.inf)
 ANGLES = (0.0, 0.01, 0.4, math.pi)
 BOUNDS = {
     "log_radius": (-0.7, -0.05, 0.1),
@@ -125,7 +125,7 @@ def random_atlas(rnd: Random, *, wide: bool = False) -> Atlas:
     noise = np.random.default_rng(rnd.randrange(2**32))
     stable = rnd.choice((0.6, 0.9, 1.0, 1.0, 0.0))
     unknown = rnd.choice((0.0, 0.0, 0.03, 0.2))
-    weights = np.where(np.array(LEVELS) < THRESHOLD, stable / 6 + 1e-12, (1 - stable) / 3 + 1e-12)
+    weights = np.where(np.array(LEVELS) < THRESHOLD, stable / 6 + 1e-12, (1 - stable) / 4 + 1e-12)
     log_radius = noise.choice(LEVELS, size=shape, p=weights / weights.sum())
     log_radius = np.where(noise.random(shape) < unknown, np.nan, log_radius)
     tiles = tuple(rnd.randint(1, n) for n in shape)

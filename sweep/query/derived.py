@@ -16,6 +16,9 @@ from numpy.typing import NDArray
 
 from sweep.vocabulary import DERIVED, MEASURES, STABILITY_THRESHOLD, MeasureSpec
 
+UNBOUNDED = 1e100
+"""Beyond every float32, and its square is a float64."""
+
 Block = NDArray[Any]
 """Values over a block of nodes, float32 as stored or float64."""
 
@@ -48,7 +51,8 @@ def _decay_time(measures: Mapping[str, Block], period_s: Block) -> Block:
 
 
 def _dominant_damping(measures: Mapping[str, Block], _period_s: Block) -> Block:
-    log_radius = measures["log_radius"].astype(np.float64)
+    # an unbounded log_radius stands for its limit, a ratio of -1 or 1
+    log_radius = np.clip(measures["log_radius"].astype(np.float64), -UNBOUNDED, UNBOUNDED)
     angle = measures["mode_angle"].astype(np.float64)
     # neither square can overflow or vanish: both numbers were float32
     size = np.sqrt(log_radius * log_radius + angle * angle)
