@@ -85,6 +85,8 @@ COMMANDS = (
         "bounds of its own, with the delay that is left to it; name the slowest period at which "
         "one still meets; and warn where an answer lies at the end of an axis or beside a node "
         "that fails. Where no design meets, the row shows the one that comes nearest.\n\n"
+        "It ends with 0 also when no design meets, and with 3 only when nothing is known: what has "
+        "to stop a build is asked with judge.\n\n"
         f"{BARE_NUMBERS}",
         "sweep choose first-look --case normal --price",
         _options,

@@ -73,7 +73,9 @@ COMMANDS = (
         "Judge every design of the atlas against a case, or against a box and bounds of its own: "
         "how many meet, in how many separate regions, the largest box of gains and sample periods "
         "in which every node meets, and the node that comes nearest to instability. What is not "
-        f"computed counts as unknown and never as meeting.\n\n{BARE_NUMBERS}",
+        "computed counts as unknown and never as meeting.\n\n"
+        "It ends with 0 also when no design meets, and with 3 only when nothing is known: what has "
+        f"to stop a build is asked with judge.\n\n{BARE_NUMBERS}",
         "sweep robust first-look --case normal --around slow",
         _options,
         _robust,
