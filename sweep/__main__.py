@@ -7,6 +7,7 @@ import sys
 import traceback
 from collections.abc import Sequence
 
+from sweep.cli.grammar import read_arguments
 from sweep.cli.output import (
     hush_broken_pipe,
     make_streams_safe,
@@ -60,7 +61,7 @@ def _report(given: list[str]) -> int:
 
 def _run(given: list[str]) -> int:
     parser = build_parser()
-    options = parser.parse_args(given)
+    options = read_arguments(parser, given)
     if options.version:
         from sweep.identity import PROGRAM_VERSION
 

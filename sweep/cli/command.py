@@ -3,12 +3,9 @@
 from __future__ import annotations
 
 import argparse
-from collections.abc import Callable, Sequence
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
-from typing import NoReturn
-
-from sweep.errors import InputError
 
 HALF_SAMPLE = (
     "Delay counts from the sampling instant to the instant the output changes. The hold's own half "
@@ -40,18 +37,6 @@ class Command:
     """Declares its arguments."""
     run: Callable[[argparse.Namespace], int]
     """Does it; returns the exit code."""
-
-
-class Parser(argparse.ArgumentParser):
-    """A parser whose mistakes are errors of the program's own tree."""
-
-    def error(self, message: str) -> NoReturn:
-        """Raise instead of printing a usage text and leaving."""
-        raise InputError(
-            f"reading the command line: {message}",
-            where=[self.prog],
-            remedy=f"see `{self.prog} --help`",
-        )
 
 
 def add_json(parser: argparse.ArgumentParser) -> None:
@@ -140,8 +125,8 @@ def add_require(parser: argparse.ArgumentParser) -> None:
         metavar="BOUND=VALUE,...",
         action="append",
         default=[],
-        help="bounds to meet, max_ or min_ before a measure, such as max_decay_time=80ms; being "
-        "stable is always required",
+        help="bounds to meet beside those of the case (of two the stricter counts), max_ or min_ "
+        "before a measure, such as max_decay_time=80ms; being stable is always required",
     )
     parser.add_argument(
         "--shake",
@@ -160,12 +145,3 @@ def add_nearest(parser: argparse.ArgumentParser) -> None:
         action="store_true",
         help="where a value lies between nodes take the nearest node, and say so",
     )
-
-
-def flatten(values: Sequence[str]) -> tuple[str, ...]:
-    """Names given as ``--each a,b --each c``, one by one.
-
-    >>> flatten(["a,b", "c"])
-    ('a', 'b', 'c')
-    """
-    return tuple(name.strip() for text in values for name in text.split(",") if name.strip())

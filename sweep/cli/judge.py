@@ -5,7 +5,8 @@ from __future__ import annotations
 import argparse
 from pathlib import Path
 
-from sweep.cli.command import BARE_NUMBERS, Command, add_atlas, add_require, flatten
+from sweep.cli.command import BARE_NUMBERS, Command, add_atlas, add_require
+from sweep.cli.grammar import flatten
 from sweep.cli.output import print_document, print_view
 
 NOT_MET = 1
@@ -73,9 +74,10 @@ def _judge(arguments: argparse.Namespace) -> int:
     from sweep.query.atlas import open_atlas
     from sweep.query.select import parse_assignments, parse_single
 
+    designs, cases = flatten(arguments.design, "--design"), flatten(arguments.case, "--case")
     answer = open_atlas(arguments.atlas, arguments.shelf).judge(
-        flatten(arguments.design),
-        case=flatten(arguments.case),
+        designs,
+        case=cases,
         at=parse_single(arguments.at),
         schedule=arguments.schedule,
         over=parse_assignments(arguments.over),

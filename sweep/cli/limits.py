@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import argparse
 
-from sweep.cli.command import BARE_NUMBERS, Command, add_atlas, add_over, add_place, flatten
+from sweep.cli.command import BARE_NUMBERS, Command, add_atlas, add_over, add_place
+from sweep.cli.grammar import flatten
 from sweep.cli.output import print_document, print_view
 
 INCOMPLETE = 3
@@ -39,12 +40,13 @@ def _limits(arguments: argparse.Namespace) -> int:
     from sweep.query.atlas import open_atlas
     from sweep.query.select import parse_assignments
 
+    each = flatten(arguments.each, "--each")
     atlas = open_atlas(arguments.atlas, arguments.shelf)
     answer = atlas.limits(
         arguments.along,
         at=parse_assignments(arguments.at),
         over=parse_assignments(arguments.over),
-        each=flatten(arguments.each),
+        each=each,
         nominal=arguments.nominal,
         design=arguments.design,
         case=arguments.case,

@@ -8,7 +8,8 @@ import textwrap
 from collections.abc import Sequence
 
 from sweep.cli import choose, judge, keep, limits, look, make, robust
-from sweep.cli.command import Command, Parser
+from sweep.cli.command import Command
+from sweep.cli.grammar import Parser
 
 COMMANDS: tuple[Command, ...] = (
     *make.COMMANDS,
