@@ -86,6 +86,8 @@ def survey_sweep(
     ------
     QuestionError
         When the shelf is a file, or the tile shape does not fit the grid.
+    DamagedAtlas
+        When the atlas of this config is there and cannot be read.
     """
     identity = atlas_id(config.structure, config.grid)
     shelf = Shelf(shelf_folder)
@@ -98,6 +100,10 @@ def survey_sweep(
         missing = {name: np.ones(tiling.counts, np.bool_) for name in config.measures}
         path = shelf.place_for(config.title, identity)
         shards, notes = ShardFormat.for_tile(shape), _many_tiles(len(tiling), config.grid, chosen)
+        notes += tuple(
+            f"{entry.path} is damaged and cannot be read: its zarr.json is not what was written"
+            for entry in shelf.list_damaged()
+        )
         return Survey(config, identity, None, path, shards, missing, notes)
     _check_measure_versions(config, atlas)
     missing = {name: ~atlas.done_mask(name) for name in config.measures}

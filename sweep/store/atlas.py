@@ -24,6 +24,7 @@ from sweep.store.arrays import Objects, group_objects, open_arrays, open_dataset
 from sweep.store.blocks import NotAsWritten, read_block
 from sweep.store.layout import (
     STORE_VERSION,
+    SUFFIX,
     atlas_attributes,
     atlas_variables,
 )
@@ -40,6 +41,10 @@ _UNREADABLE = (ValueError, KeyError, TypeError, IndexError, AttributeError, Runt
 """What zarr, numpy and json raise when stored bytes are not what they should be."""
 _NAME_IS_TAKEN = {errno.EEXIST, errno.ENOTEMPTY, errno.ENOTDIR}
 """How systems word it that a folder cannot be renamed to a name that is in use."""
+_ALWAYS_ON_A_COVER = {"atlas_id", "physics_id", "program_version"}
+"""Attributes that tell a cover of ours with one of them lost from somebody else's group."""
+REPLACE_IT = "take a whole copy of it, or move it away and run its config again"
+"""What to do about an atlas whose metadata is damaged."""
 _MOST_METADATA_BYTES = 256 * 2**20
 """A group's metadata holds the config, tables of rows included, and is never near this."""
 
@@ -245,7 +250,7 @@ def open_stored(path: Path | str) -> StoredAtlas:
         raise DamagedAtlas(
             f"opening the atlas {folder}: {_one_line(cause)}",
             where=[str(folder)],
-            remedy="take a whole copy of it, or move it away and run its config again",
+            remedy=REPLACE_IT,
         ) from cause
     known = {f.name: getattr(contents, f.name) for f in fields(contents)}
     return StoredAtlas(path=folder, **known)
@@ -264,6 +269,41 @@ def read_cover(folder: Path) -> Mapping[str, Any] | None:
     if not isinstance(attributes, dict) or "store_version" not in attributes:
         return None
     return attributes
+
+
+def find_cover_damage(folder: Path) -> str:
+    """What is wrong with the cover of an atlas, such as after a flipped bit; empty when nothing is.
+
+    A folder counts as an atlas by its name and by holding a ``zarr.json``. What is whole and
+    somebody else's is no damage.
+    """
+    path = folder / "zarr.json"
+    if folder.suffix != SUFFIX or not os.path.lexists(path) or read_cover(folder) is not None:
+        return ""
+    try:
+        if not path.stat().st_size:
+            return "it is empty"
+        node = json.loads(path.read_text(encoding="utf-8"))
+    except OSError as error:
+        return f"the system says: {error.strerror}"
+    except (ValueError, RecursionError):
+        return "it is no JSON text"
+    attributes = node.get("attributes") if isinstance(node, dict) else None
+    if not isinstance(attributes, dict) or not attributes:
+        return "it has no attributes"
+    if _ALWAYS_ON_A_COVER.isdisjoint(attributes):
+        return ""
+    return "its attribute store_version is lost"
+
+
+def damaged_cover(folder: Path, found: str, attempt: str = "opening the atlas") -> DamagedAtlas:
+    """The error that says so."""
+    return DamagedAtlas(
+        f"{attempt} {folder}: expected the zarr.json that `sweep run` wrote there, found that "
+        f"{found}",
+        where=[str(folder / "zarr.json")],
+        remedy=REPLACE_IT,
+    )
 
 
 def _read_attributes(folder: Path) -> Mapping[str, Any]:

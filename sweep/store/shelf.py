@@ -11,8 +11,15 @@ from pathlib import Path
 
 from sweep.config import Config
 from sweep.errors import DamagedAtlas, QuestionError
-from sweep.store.atlas import StoredAtlas, create_atlas, open_stored, read_cover
-from sweep.store.layout import SHORT_ID, folder_name
+from sweep.store.atlas import (
+    StoredAtlas,
+    create_atlas,
+    damaged_cover,
+    find_cover_damage,
+    open_stored,
+    read_cover,
+)
+from sweep.store.layout import SHORT_ID, SUFFIX, folder_name
 from sweep.store.shards import PARTIAL
 
 _ATTEMPTS = 5
@@ -29,8 +36,12 @@ class ShelfEntry:
     """Its title."""
     atlas_id: str
     """Its full id."""
+    damage: str = ""
+    """What is wrong with its cover; title and id are then empty."""
 
     def __str__(self) -> str:
+        if self.damage:
+            return f"{self.path.name} (damaged)"
         return f"{self.path.name} ({self.title}, {self.atlas_id[:SHORT_ID]})"
 
 
@@ -52,6 +63,13 @@ class Shelf:
                 title, identity = str(cover.get("title", "")), str(cover.get("atlas_id", ""))
                 entries.append(ShelfEntry(path, title, identity))
         return tuple(entries)
+
+    def list_damaged(self) -> tuple[ShelfEntry, ...]:
+        """Every folder here that is called as an atlas and whose cover cannot be read."""
+        if not self.folder.is_dir():
+            return ()
+        found = ((path, find_cover_damage(path)) for path in sorted(self.folder.iterdir()))
+        return tuple(ShelfEntry(path, "", "", damage) for path, damage in found if damage)
 
     def check(self) -> None:
         """Make sure that the shelf is a folder, or can become one.
@@ -98,17 +116,19 @@ class Shelf:
         ------
         QuestionError
             When none or several atlases match; names the candidates.
+        DamagedAtlas
+            When the one that matches has a cover that cannot be read.
         """
         for path in (Path(text), self.folder / text):
             if str(text).strip() and _is_there(path / "zarr.json"):
-                return path
+                return _with_a_cover(path, find_cover_damage(path))
         self.check()
-        entries = self.list()
+        entries = (*self.list(), *self.list_damaged())
         wanted = str(text).strip().casefold()
         matches = [e for e in entries if wanted and wanted in _names(e)]
         matches = matches or [e for e in entries if any(wanted in name for name in _names(e))]
         if len(matches) == 1:
-            return matches[0].path
+            return _with_a_cover(matches[0].path, matches[0].damage)
         raise self._not_one(str(text), matches, entries)
 
     def open_or_create(
@@ -131,11 +151,23 @@ class Shelf:
         raise AssertionError("unreachable: the loop returns or raises")
 
     def place_for(self, title: str, atlas_id: str) -> Path:
-        """Where a new atlas goes: a free name with as many digits of its id as that takes."""
+        """Where a new atlas goes: a free name with as many digits of its id as that takes.
+
+        Raises
+        ------
+        DamagedAtlas
+            When a folder here is this very atlas by its name, and cannot be read.
+        """
+        for entry in self.list_damaged():
+            if entry.path.name.endswith(f"-{atlas_id[:SHORT_ID]}{SUFFIX}"):
+                raise damaged_cover(entry.path, entry.damage, "looking for the nodes computed in")
         for digits in range(SHORT_ID, len(atlas_id)):
             path = self.folder / folder_name(title, atlas_id, digits)
             if not path.exists():
                 return path
+            if read_cover(path) is not None:
+                with suppress(QuestionError):
+                    open_stored(path)  # another atlas by chance, or this one with a damaged id
         return self.folder / folder_name(title, atlas_id, len(atlas_id))
 
     def remove_leftovers(self) -> int:
@@ -181,6 +213,12 @@ class Shelf:
             if entries
             else "run a config first, or say with --shelf where the atlases are",
         )
+
+
+def _with_a_cover(path: Path, damage: str) -> Path:
+    if damage:
+        raise damaged_cover(path, damage)
+    return path
 
 
 def _is_there(path: Path) -> bool:
