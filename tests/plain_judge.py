@@ -141,6 +141,18 @@ def place(asked, node):
     return found
 
 
+def brackets(asked):
+    """The two nodes around every value that lies between nodes, shaken or not."""
+    found = {}
+    for axis in asked.axes:
+        if axis.name in asked.at and not axis.labels:
+            value = asked.at[axis.name]
+            nodes = outward(axis.coordinates, value, value)
+            if len(nodes) == 2:
+                found[axis.name] = tuple(float(axis.coordinates[i]) for i in nodes)
+    return found
+
+
 def worst(asked, nodes, quantity, sense):
     """(value, first node that gives it, unknown nodes), over the known ones."""
     values = [quantity_at(asked.question, quantity, node) for node in nodes]
@@ -245,86 +257,3 @@ def jump_over(axes, codes, radii):
             if (codes[node] == 1) != (codes[other] == 1):
                 steps.append(abs(radii[node] - radii[other]))
     return [step for step in steps if not math.isnan(step)]
-
-
-def around(axis, value):
-    """The node at a value, or the two beside it."""
-    x = axis.coordinates
-    same = [i for i in range(len(x)) if abs(x[i] - value) <= 1e-9 * (x[-1] - x[0])]
-    return same[:1] or [max(i for i in range(len(x)) if x[i] < value), _above(x, value)]
-
-
-def _above(x, value):
-    return min(i for i in range(len(x)) if x[i] > value)
-
-
-def gain_fall(asked):
-    """(conditionally stable or None, factor, how far down it is told)."""
-    sets_gains = [axis for axis in asked.axes if set(axis.sets) & set(GAINS)]
-    if any(axis.labels or axis.role == "tolerance" for axis in sets_gains):
-        return plant_gain_fall(asked)
-    scaled = {axis.name: asked.at[axis.name] for axis in sets_gains if asked.at[axis.name] != 0}
-    if not scaled:
-        return None, None, None
-    down_to = 0.0
-    for name, value in scaled.items():
-        axis = asked.question.atlas.grid.axis(name)
-        same_sign = [x / value for x in axis.coordinates if x * value > 0]
-        reaches_0 = any(x * value <= 0 for x in axis.coordinates)
-        breaks = name == "ki" and 0.0 in axis.coordinates
-        if breaks or not reaches_0:
-            down_to = max(down_to, min([1.0, *same_sign]))
-    if down_to >= 1.0:
-        return None, None, None
-    factors = [f for f in falling_factors(asked, scaled) if f >= down_to * (1 - 1e-9)]
-    told = [(factor, place_is_left(asked, scaled, factor)) for factor in factors]
-    for factor, left in told:
-        if left is True:
-            return True, factor, down_to
-    return (None, None, None) if any(left is None for _, left in told) else (False, None, down_to)
-
-
-def falling_factors(asked, scaled):
-    found = set()
-    for name, value in scaled.items():
-        for x in asked.question.atlas.grid.axis(name).coordinates:
-            if x * value > 0 and abs(x) < abs(value) * (1 - 1e-9):
-                found.add(float(x / value))
-    return sorted(found, reverse=True)
-
-
-def place_is_left(asked, scaled, factor):
-    """Whether all enclosing nodes are known to fail; `None` when they might."""
-    choices = {}
-    for axis in asked.axes:
-        if axis.name in scaled:
-            choices[axis.name] = around(axis, factor * scaled[axis.name])
-        elif axis.role == "design" and axis.name not in asked.shake:
-            choices[axis.name] = asked.spans[axis.name]
-    states = []
-    for picked in itertools.product(*choices.values()):
-        fixed = {name: [i] for name, i in zip(choices, picked, strict=True)}
-        value, _, unknown = worst(asked, nodes_of(asked, **fixed), "log_radius", "max")
-        states.append("fails" if value >= THRESHOLD else "unknown" if unknown else "stable")
-    if set(states) == {"fails"}:
-        return True
-    return False if "stable" in states else None
-
-
-def plant_gain_fall(asked):
-    for axis in asked.axes:
-        if axis.role == "tolerance" and axis.sets == ("plant.gain",) and not axis.labels:
-            break
-    else:
-        return None, None, None
-    x, first, told = axis.coordinates, asked.spans[axis.name][0], 1.0
-    for node in range(first - 1, -1, -1):  # gains of these atlases are above 0
-        value, _, unknown = worst(
-            asked, nodes_of(asked, **{axis.name: [node]}), "log_radius", "max"
-        )
-        if unknown:
-            return None, None, None
-        told = float(x[node] / x[first])
-        if value >= THRESHOLD:
-            return True, told, told
-    return False, None, told

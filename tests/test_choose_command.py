@@ -17,6 +17,7 @@ from sweep.query.question import make_demand
 from sweep.store.atlas import create_atlas
 from sweep.views.choose_table import choose_view, pick_rows
 from sweep.views.sheet import to_text
+from sweep.vocabulary import LoopStructure
 
 CONFIG = """
 title = "Bench"
@@ -165,6 +166,7 @@ def long_atlas(count=400):
 
 
 STABLE = make_demand((), "", None, None, None)
+PAGE = {"width": 108, "terminal": False}
 
 
 @pytest.mark.parametrize("most", [1, 2, 8, 24, 399])
@@ -194,6 +196,50 @@ def test_the_slowest_at_the_axis_end_is_shown_as_beyond_it():
     part = choose_designs(long_atlas(90).stored, STABLE, within={"sample_period": "1s:50s"})
     text = to_text(choose_view(part), width=108, terminal=False)
     assert "no slower period was asked about" in text
+
+
+def test_what_lies_beyond_the_range_asked_for_is_said_not_to_be_judged():
+    levels = [[-0.1, -0.2, -0.3, 0.2]] * 2
+    axes = [
+        axis("sample_period", [1e-3, 2e-3], unit="s"),
+        axis("kp", [0, 1, 2, 3], sets="controller.kp"),
+    ]
+    answer = choose_designs(
+        atlas(axes, levels).stored, STABLE, within={"kp": (1, 2), "sample_period": 1e-3}
+    )
+    text = to_text(choose_view(answer), width=108, terminal=False)
+    assert "at the end of the range asked for, along kp: what lies beyond it was not judged" in text
+    assert "no slower period was asked about" in text
+    assert "'*': at the end of the range asked for with --within" in text
+    row = next(found for found in text.splitlines() if found.lstrip().startswith("*1"))
+    assert row.split()[:3] == ["*1", "meets", "*2"]
+    whole = to_text(choose_view(choose_designs(atlas(axes, levels).stored, STABLE)), **PAGE)
+    assert "*" not in whole
+
+
+def test_a_period_at_which_nothing_can_be_built_is_shown_as_that():
+    axes = [
+        axis("sample_period", [1e-3, 2e-3], unit="s"),
+        axis("kp", [0, 1], sets="controller.kp"),
+    ]
+    structure = LoopStructure("oscillator", "p", delay_parts=(("compute", "s"),))
+    found = atlas(axes, [[-0.1] * 2] * 2, fixed={"delay.compute": 1.5e-3}, structure=structure)
+    answer = choose_designs(found.stored, STABLE)
+    text = to_text(choose_view(answer), **PAGE)
+    row = next(found for found in text.splitlines() if "cannot be built" in found and "1" in found)
+    assert "2 cannot be built" in row
+    assert [found.split() for found in text.splitlines() if found.lstrip().startswith("1 ")] == [
+        ["1", "cannot", "be", "built"]
+    ]
+    assert pick_rows(answer, 1) == [1]
+
+
+@pytest.mark.parametrize("command", ["choose", "robust"])
+def test_the_help_says_that_no_design_that_meets_is_no_failure(capsys, command):
+    with pytest.raises(SystemExit):
+        main([command, "--help"])
+    said = " ".join(capsys.readouterr().out.split())
+    assert "ends with 0 also when no design meets" in said
 
 
 def test_hostile_names_reach_the_terminal_without_control_characters():
