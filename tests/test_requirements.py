@@ -13,6 +13,7 @@ from memory_atlas import atlas, axis, rows
 
 from sweep.config import Requirement
 from sweep.errors import QuestionError
+from sweep.query.derived import values_of
 from sweep.query.requirement import STABLE, read_requirements, requirement_text
 from sweep.vocabulary import DERIVED, MEASURES, MeasureSpec
 
@@ -201,6 +202,16 @@ def test_a_loop_that_is_not_stable_has_no_decay_time():
         answer = asked.robust(require=require)
         assert answer.dataset["decay_time"].item() == math.inf
         assert answer.fails == 1
+
+
+def test_an_unbounded_log_radius_has_the_damping_ratio_that_it_tends_to():
+    measures = {
+        "log_radius": np.array([np.inf, np.inf, -np.inf, np.nan, 1e38, 0.0, np.inf], np.float32),
+        "mode_angle": np.array([0.0, 3.0, 1.0, 1.0, 0.1, 0.0, np.nan], np.float32),
+    }
+    found = values_of("dominant_damping", measures, np.ones(1))
+    assert found[[0, 1, 2, 4, 5]].tolist() == [-1.0, -1.0, 1.0, -1.0, 0.0]
+    assert np.isnan(found[[3, 6]]).all()
 
 
 def test_both_sides_of_one_quantity_are_two_variables():
