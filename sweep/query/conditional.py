@@ -4,55 +4,85 @@ An actuator that saturates lets less through, as a smaller gain would. A loop th
 at a smaller gain may therefore never come back from a large disturbance (C5 stands all the same:
 saturation itself is not in the model).
 
-All controller gains are scaled by one factor that falls from 1 to 0. At a factor where one of them
-passes a node, the nodes that enclose the others decide: stability is left there only if every one
-of them is known and not stable at the worst of the box. Between two such factors nothing new is
-asked, since the enclosing nodes there include those at either end. Nodes at which every gain is 0
-never count: there is no loop. Where a fixed gain, or a table of gains, cannot fall, the gain of the
-plant does instead, if it is a tolerance: from the lower end of its box.
+All controller gains are scaled by one factor that falls from 1 to 0. Where a fixed gain, or a table
+of gains, cannot fall, the gain of the plant does instead, if it is a tolerance: from the end of its
+box that is nearest to 0. A place is a factor at which one of the scaled axes passes a node; between
+places lie stretches. At either the enclosing nodes decide, as they do when a design is judged, and
+bracketed and shaken axes bring all of their nodes:
+
+- stable where every one of them is known and stable at the worst of the box;
+- left where every one of them is not stable at the worst of the box;
+- undecided otherwise, where an axis ends, and where a gain of 0 takes its own memory out of the
+  loop, so that its node says nothing about small gains.
+
+The loop is conditionally stable when some place is left. It is not when every stretch down to no
+gain at all is stable, which is when a design anywhere on the way would be judged stable too; and
+some node has to lie on the way. The node without any gain helps to tell that its last stretch is
+stable, but is no place: there is no loop that could be left. Anything else cannot be told.
 """
 
 from __future__ import annotations
 
 import itertools
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
+from typing import Literal
 
 import numpy as np
+from numpy.typing import NDArray
 
-from sweep.grid import Axis, Grid
+from sweep.grid import SAME_NODE, Axis
 from sweep.query.answers.judge import GainFall
 from sweep.query.blocks import Indices, Readable
-from sweep.query.distances import Line
 from sweep.query.extremes import find_extremes
 from sweep.query.held_block import hold
 from sweep.query.scope import Scope
-from sweep.query.select import SAME_NODE, gain_changes_structure, value_at
+from sweep.query.select import gain_changes_structure
 from sweep.query.worst import LOG_RADIUS
 from sweep.vocabulary import STABILITY_THRESHOLD
 
 CONTROLLER_GAINS = ("controller.kp", "controller.ki", "controller.kd")
 CANNOT_FALL = GainFall(None, stopped_by="a gain that is fixed, or set by a table")
 
-Place = tuple[float, dict[int, tuple[int, ...]]]
-"""A factor, and the nodes that enclose each scaled axis there, by position."""
+State = Literal["stable", "left", "mixed", "unknown"]
+
+Nodes = Mapping[int, tuple[int, int]]
+"""Lowest and highest enclosing node of each scaled axis, by position."""
 
 
 @dataclass(frozen=True)
-class _Ray:
-    """Where the gains fall along."""
+class _Scaled:
+    """An axis that falls."""
 
-    values: Mapping[int, float]
-    """Value of each scaled axis at factor 1, by position; none is 0."""
-    places: tuple[Place, ...]
-    """Factors below 1 that are looked at, falling."""
-    stopped_by: str
-    """Why not further down."""
-    followed_to: float
-    """Lowest factor that the nodes tell about."""
+    axis: Axis
+    value: float
+    """At factor 1; not 0."""
+    low: float
+    """Lowest coordinate taken in at factor 1: the value, or less where it is shaken."""
+    high: float
+    """Highest one."""
+    breaks: tuple[int, ...]
+    """Nodes where the gain is 0 and its memory is absent."""
 
 
-def find_gain_fall(stored: Readable, scope: Scope, lines: list[Line]) -> GainFall:
+_Ray = Mapping[int, _Scaled]
+"""What falls, by position."""
+
+
+@dataclass(frozen=True)
+class _Piece:
+    """A place or a stretch on the way down."""
+
+    top: float
+    """Its factor, or the upper end of the stretch."""
+    is_place: bool
+    nodes: Nodes
+    """Empty where they say nothing."""
+    silent: str = ""
+    """Why they say nothing."""
+
+
+def find_gain_fall(stored: Readable, scope: Scope) -> GainFall:
     """Whether a design leaves stability as its gain falls.
 
     Only for a design that is known to be stable at every node of its box.
@@ -63,30 +93,27 @@ def find_gain_fall(stored: Readable, scope: Scope, lines: list[Line]) -> GainFal
         The atlas.
     scope
         The design and its box.
-    lines
-        Along every axis through the design; see `sweep.query.distances.walk_lines`.
     """
-    scaled = _scaled_axes(scope)
-    if scaled is None:
-        return _by_plant_gain(lines)
-    names = tuple(scope.grid.axes[i].name for i in scaled)
-    if not scaled:
+    ray = _controller_ray(scope)
+    if ray is None:
+        ray = _plant_ray(scope)
+        if ray is None:
+            return CANNOT_FALL
+    names = tuple(one.axis.name for one in ray.values())
+    if not ray:
         return GainFall(None, stopped_by="gains that are all 0")
-    ray = _cast(scope.grid, scaled)
-    if ray.followed_to >= 1.0:
-        return GainFall(None, names, stopped_by=ray.stopped_by)
-    verdicts = _read_places(stored, scope, ray)
-    for (factor, _), verdict in zip(ray.places, verdicts, strict=True):
-        if verdict is False:
-            at = {scope.grid.axes[i].name: factor * value for i, value in ray.values.items()}
-            return GainFall(True, names, factor, at, ray.followed_to, ray.stopped_by)
-    if None in verdicts:
-        return GainFall(None, names, stopped_by="nodes that are not known")
-    return GainFall(False, names, None, {}, ray.followed_to, ray.stopped_by)
+    if any(one.low * one.high <= 0 for one in ray.values()):
+        return GainFall(None, names, stopped_by="a range of its gain that holds 0")
+    pieces = _cut(ray)
+    told = list(zip(pieces, _read(stored, scope, ray, pieces), strict=True))
+    return _conclude(names, told, ray)
 
 
-def _scaled_axes(scope: Scope) -> dict[int, float] | None:
-    """Design axes of controller gains that are not 0, with their values; `None` if one is stuck."""
+# --- what falls ---------------------------------------------------------------------------------
+
+
+def _controller_ray(scope: Scope) -> _Ray | None:
+    """Design axes of controller gains that are not 0; `None` if a gain cannot fall."""
     for fixed in scope.grid.fixed:
         if fixed.path in CONTROLLER_GAINS and fixed.value != 0.0:
             return None
@@ -98,147 +125,182 @@ def _scaled_axes(scope: Scope) -> dict[int, float] | None:
         if axis.is_row_axis or value is None or isinstance(value, str):
             return None
         if value != 0.0:
-            found[position] = value
+            low = high = value
+            if axis.name in scope.shaken:
+                low, high = _ends(axis, scope.spans[position])
+            breaks = gain_changes_structure(scope.grid, axis)
+            found[position] = _Scaled(axis, value, low, high, breaks)
     return found
 
 
-def _cast(grid: Grid, values: Mapping[int, float]) -> _Ray:
-    """The factors at which some scaled axis passes a node, as far down as every axis tells."""
-    lowest, stopped_by = 0.0, ""
-    factors = set()
-    for position, value in values.items():
-        axis = grid.axes[position]
-        passed = [float(x / value) for x in axis.coordinates if _is_between(float(x), value)]
-        factors.update(passed)
-        end, reason = _end_of(grid, axis, value)
-        if end > lowest:
-            lowest, stopped_by = end, reason
-    kept = sorted((f for f in factors if f >= lowest * (1 - SAME_NODE)), reverse=True)
-    return _Ray(values, tuple((f, _enclosing(grid, values, f)) for f in kept), stopped_by, lowest)
+def _plant_ray(scope: Scope) -> _Ray | None:
+    """The tolerance of the plant's gain, from the end of its box that is nearest to 0."""
+    for position in scope.tolerances:
+        axis = scope.grid.axes[position]
+        if not axis.is_row_axis and axis.sets == ("plant.gain",):
+            low, high = _ends(axis, scope.spans[position])
+            value = min(low, high, key=abs)
+            if low * high > 0:
+                low = high = value
+            return {position: _Scaled(axis, value, low, high, ())}
+    return None
 
 
-def _end_of(grid: Grid, axis: Axis, value: float) -> tuple[float, str]:
-    """Down to which factor one axis tells, and why not further; 0 where it tells all."""
-    same_side = [float(x / value) for x in axis.coordinates if x * value > 0]
-    if any(axis.coordinates[node] == 0.0 for node in gain_changes_structure(grid, axis)):
-        reason = f"{axis.name} = 0, where its term is absent and says nothing about small gains"
-        return min(1.0, *same_side), reason
-    if len(same_side) == len(axis):
-        return min(1.0, *same_side), f"the end of the axis {axis.name}"
-    return 0.0, ""
+def _ends(axis: Axis, nodes: Indices) -> tuple[float, float]:
+    return float(axis.coordinates[nodes[0]]), float(axis.coordinates[nodes[-1]])
 
 
-def _is_between(node: float, value: float) -> bool:
-    """Whether a gain passes a node as it falls from a value to 0."""
-    return node * value > 0 and abs(node) < abs(value) * (1 - SAME_NODE)
+# --- the way down -------------------------------------------------------------------------------
 
 
-def _enclosing(
-    grid: Grid, values: Mapping[int, float], factor: float
-) -> dict[int, tuple[int, ...]]:
-    """Nodes around a scaled gain on each axis."""
-    return {
-        position: _nodes_around(grid.axes[position], factor * value)
-        for position, value in values.items()
-    }
+def _cut(ray: _Ray) -> list[_Piece]:
+    """Stretches and places in turn, falling; first and last a stretch."""
+    factors = _factors(ray)
+    pieces = []
+    for top, bottom in itertools.pairwise([1.0, *factors, 0.0]):
+        if top < 1.0:
+            pieces.append(_piece(ray, top, top, is_place=True))
+        pieces.append(_piece(ray, top, 0.5 * (top + bottom), is_place=False))
+    return pieces
 
 
-def _nodes_around(axis: Axis, value: float) -> tuple[int, ...]:
-    x = axis.coordinates
-    near = int(np.abs(x - value).argmin())
-    if abs(float(x[near]) - value) <= SAME_NODE * float(x[-1] - x[0]):
-        return (near,)
-    high = int(np.searchsorted(x, value))
-    return high - 1, high
+def _factors(ray: _Ray) -> list[float]:
+    """Where an end of what is taken in of an axis passes a node, falling; each once."""
+    passed = sorted(
+        (
+            float(x / end)
+            for one in ray.values()
+            for end in {one.low, one.high}
+            for x in one.axis.coordinates
+            if x * end > 0 and abs(x) < abs(end) * (1 - SAME_NODE)
+        ),
+        reverse=True,
+    )
+    kept: list[float] = []
+    for factor in passed:
+        if not kept or factor < kept[-1] * (1 - SAME_NODE):
+            kept.append(factor)
+    return kept
 
 
-def _read_places(stored: Readable, scope: Scope, ray: _Ray) -> list[bool | None]:
-    """At each place whether the loop may still be stable; `None` where a node is not known.
+def _piece(ray: _Ray, top: float, factor: float, *, is_place: bool) -> _Piece:
+    found = {}
+    for position, one in ray.items():
+        nodes = _enclosing(one, factor)
+        if nodes is None:
+            return _Piece(top, is_place, {}, f"the end of the axis {one.axis.name}")
+        if any(nodes[0] <= node <= nodes[1] for node in one.breaks):
+            silent = (
+                f"{one.axis.name} = 0, where its term is absent and says nothing of small gains"
+            )
+            return _Piece(top, is_place, {}, silent)
+        found[position] = nodes
+    return _Piece(top, is_place, found)
+
+
+def _enclosing(one: _Scaled, factor: float) -> tuple[int, int] | None:
+    """Lowest and highest node around a scaled gain, which is never 0; `None` past the axis."""
+    x = one.axis.coordinates
+    ends = np.array([factor * one.low, factor * one.high])
+    met = one.axis.snapped(ends)
+    low, high = np.where(met == 0.0, ends, met)
+    first, last = int(np.searchsorted(x, low, "right")) - 1, int(np.searchsorted(x, high, "left"))
+    return (first, last) if first >= 0 and last < len(x) else None
+
+
+# --- what the nodes say -------------------------------------------------------------------------
+
+
+def _read(
+    stored: Readable, scope: Scope, ray: _Ray, pieces: Sequence[_Piece]
+) -> list[State | None]:
+    """What every piece is; `None` where nodes say nothing.
 
     Read in groups that lie in one tile of the scaled axes, so that memory stays bounded.
     """
-    found: list[bool | None] = []
-    for group in _by_tile(stored, ray):
+    # of tolerances the worst counts; of the nodes of a bracket, or of a shaken axis, all have to
+    box = tuple(i for i in scope.tolerances if i not in ray)
+    found: list[State | None] = []
+    for is_silent, group in _by_tile(stored, pieces):
+        if is_silent:
+            found += [None] * len(group)
+            continue
         spans = list(scope.spans)
-        for position in ray.values:
-            touched = [node for _, nodes in group for node in nodes[position]]
-            spans[position] = np.arange(min(touched), max(touched) + 1, dtype=np.intp)
-        # neighbours that nature moves to count at their worst; those of a bracket all have to fail
-        box = tuple(
-            i for i in scope.box if i in scope.tolerances or scope.grid.axes[i].name in scope.shaken
-        )
-        box = tuple(i for i in box if i not in ray.values)
+        for position in ray:
+            low = min(piece.nodes[position][0] for piece in group)
+            high = max(piece.nodes[position][1] for piece in group)
+            spans[position] = np.arange(low, high + 1, dtype=np.intp)
         narrowed = replace(scope, spans=tuple(spans), box=box, bracketed=(), shaken=())
         (extremes,) = find_extremes(hold(stored, spans), narrowed, [LOG_RADIUS])
-        worst = extremes.worst[LOG_RADIUS]
-        unknown = (extremes.unknown > 0) & ~(worst >= STABILITY_THRESHOLD)
-        fails = worst >= STABILITY_THRESHOLD
-        for _, nodes in group:
-            picked = _pick(narrowed, spans, nodes)
-            found.append(_still_stable(fails[picked], unknown[picked]))
+        fails = extremes.worst[LOG_RADIUS] >= STABILITY_THRESHOLD
+        unknown = (extremes.unknown > 0) & ~fails
+        for piece in group:
+            picked = _pick(narrowed, piece.nodes)
+            found.append(_state(fails[picked], unknown[picked]))
     return found
 
 
-def _by_tile(stored: Readable, ray: _Ray) -> Iterator[list[Place]]:
+def _by_tile(stored: Readable, pieces: Sequence[_Piece]) -> Iterator[tuple[bool, list[_Piece]]]:
+    """Runs of pieces that lie in one tile, and whether they say nothing."""
     sizes = stored.tiling.tile_shape
 
-    def tile(place: Place) -> tuple[int, ...]:
-        return tuple(nodes[0] // sizes[position] for position, nodes in place[1].items())
+    def tile(piece: _Piece) -> tuple[int, ...]:
+        return tuple(low // sizes[position] for position, (low, _) in piece.nodes.items())
 
-    for _, group in itertools.groupby(ray.places, key=tile):
-        yield list(group)
-
-
-def _pick(
-    scope: Scope, spans: list[Indices], nodes: Mapping[int, tuple[int, ...]]
-) -> tuple[slice, ...]:
-    """A place's nodes within what was reduced; all nodes of every other axis."""
-    return tuple(
-        slice(nodes[i][0] - int(spans[i][0]), nodes[i][-1] + 1 - int(spans[i][0]))
-        if i in nodes
-        else slice(None)
-        for i in scope.free
-    )
+    for key, group in itertools.groupby(pieces, key=tile):
+        yield not key, list(group)
 
 
-def _still_stable(fails: np.ndarray, unknown: np.ndarray) -> bool | None:
+def _pick(scope: Scope, nodes: Nodes) -> tuple[slice, ...]:
+    """A piece's nodes within what was reduced; all nodes of every other axis."""
+    picked = []
+    for axis in scope.free:
+        low, high = nodes.get(axis, (0, -1))
+        first = int(scope.spans[axis][0])
+        picked.append(slice(low - first, high + 1 - first) if axis in nodes else slice(None))
+    return tuple(picked)
+
+
+def _state(fails: NDArray[np.bool_], unknown: NDArray[np.bool_]) -> State:
     if fails.all():
-        return False
-    return None if (fails | unknown).all() else True
+        return "left"
+    if fails.any():
+        return "mixed"
+    return "unknown" if unknown.any() else "stable"
 
 
-def _by_plant_gain(lines: list[Line]) -> GainFall:
-    """The same with the gain of the plant, where it is a tolerance.
-
-    A node counts as soon as it is not stable for the worst of the other tolerances.
-    """
-    for line in lines:
-        axis = line.axis
-        if axis.is_row_axis or axis.role != "tolerance" or axis.sets != ("plant.gain",):
-            continue
-        return _along_plant_gain(line)
-    return CANNOT_FALL
+# --- what follows from it -----------------------------------------------------------------------
 
 
-def _along_plant_gain(line: Line) -> GainFall:
-    axis, worst = line.axis, line.walk.worst
-    x = axis.coordinates
-    low, high = float(x[line.first]), float(x[line.last])
-    if low * high <= 0:
-        return GainFall(None, (axis.name,), stopped_by="a box that holds a gain of 0")
-    start, step = (line.first, -1) if low > 0 else (line.last, 1)
-    value = float(x[start])
-    followed, node = 1.0, start + step
-    stopped_by = f"the end of the axis {axis.name}"
-    while 0 <= node < len(axis):
-        if float(x[node]) * value <= 0:
-            followed, stopped_by = 0.0, ""
-            break
-        if np.isnan(worst[node]):
-            return GainFall(None, (axis.name,), stopped_by="nodes that are not known")
-        followed = float(x[node]) / value
-        if worst[node] >= STABILITY_THRESHOLD:
-            at = {axis.name: value_at(axis, node)}
-            return GainFall(True, (axis.name,), followed, at, followed, "")
-        node += step
-    return GainFall(False, (axis.name,), None, {}, followed, stopped_by)
+def _conclude(
+    names: tuple[str, ...], told: Sequence[tuple[_Piece, State | None]], ray: _Ray
+) -> GainFall:
+    """The answer from pieces, the highest first."""
+    states = [state for _, state in told]
+    undecided = next((i for i, state in enumerate(states) if state != "stable"), None)
+    left = next((i for i, (p, s) in enumerate(told) if p.is_place and s == "left"), None)
+    if left is None:
+        if len(told) == 1:
+            return GainFall(None, names, stopped_by="no node between its gain and none at all")
+        if undecided is None:
+            return GainFall(False, names, None, {}, 0.0)
+        return GainFall(None, names, None, {}, *_stop(told, undecided))
+    factor = told[left][0].top
+    at = {one.axis.name: factor * one.value for one in ray.values()}
+    followed_to, stopped_by = _stop(told, left if undecided is None else undecided)
+    # in the stretch that ends at a place that is left stability is lost: that one is mixed anyway
+    is_first = undecided is None or undecided >= left - 1
+    return GainFall(True, names, factor, at, followed_to, "" if is_first else stopped_by)
+
+
+def _stop(told: Sequence[tuple[_Piece, State | None]], undecided: int) -> tuple[float, str]:
+    """Down to which factor every piece is stable, and what is in the way of the next one."""
+    piece, state = told[undecided]
+    followed_to = told[undecided - 1][0].top if piece.is_place else piece.top
+    if state is None:
+        return followed_to, piece.silent
+    if state == "unknown":
+        return followed_to, "nodes that are not known"
+    if undecided == len(told) - 1:
+        return followed_to, "the last cell, beside no gain at all, has a node that is not stable"
+    return followed_to, "nodes around it of which only some are stable"

@@ -191,9 +191,7 @@ def _judge(
         requirements=question.requirements,
         distances=distances,
         hurts_most=find_hurts(block, scope),
-        gain_fall=(
-            GainFall(None, stopped_by=start) if start else find_gain_fall(stored, scope, walked)
-        ),
+        gain_fall=GainFall(None, stopped_by=start) if start else find_gain_fall(stored, scope),
         in_hand=tolerance.in_hand(structure) if tolerance else None,
         acceptance=tolerance.acceptance() if tolerance else None,
         tolerances_skipped="" if tolerance else _too_many(whole),

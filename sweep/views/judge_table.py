@@ -308,15 +308,17 @@ def _gain_fall_text(grid: Grid, fall: GainFall) -> tuple[str, str]:
             f"conditionally stable: scaled down to {fall.factor:.3g} "
             f"({place_text(grid, fall.at)}) it is not stable; saturation does that to a gain"
         )
+        if fall.stopped_by:
+            text += f"; perhaps earlier, below {fall.followed_to:.3g}: {fall.stopped_by}"
         return text, "bold yellow"
-    if fall.conditionally_stable is None:
-        return f"whether it is conditionally stable cannot be told: {fall.stopped_by}", "yellow"
-    if not fall.stopped_by:
+    if fall.conditionally_stable is not None:
         return f"not conditionally stable: it stays stable as {names} scaled down to 0", ""
+    if fall.followed_to is None or fall.followed_to == 1.0:
+        return f"whether it is conditionally stable cannot be told: {fall.stopped_by}", "yellow"
     return (
-        f"stays stable as {names} scaled down to {fall.followed_to:.3g}, which is as far as can "
-        f"be told: {fall.stopped_by}"
-    ), ""
+        f"as far as the nodes tell, it stays stable as {names} scaled down to "
+        f"{fall.followed_to:.3g}; below that cannot be told: {fall.stopped_by}"
+    ), "yellow"
 
 
 def place_text(grid: Grid, place: Mapping[str, Value]) -> str:

@@ -133,17 +133,20 @@ class GainFall:
     """What happens when the loop's gain falls, as saturation makes it do."""
 
     conditionally_stable: bool | None
-    """Whether the loop leaves stability as its gain falls; ``None`` when the atlas cannot tell."""
+    """``True`` when some place on the way down to no gain is known not to be stable; ``False`` when
+    all of the way is known to be stable; ``None`` when the atlas cannot tell."""
     scaled: tuple[str, ...] = ()
     """What falls by a common factor: axes of controller gains, or the axis of the plant's gain."""
     factor: float | None = None
-    """Largest factor at which stability is left."""
+    """Largest factor at which it is known not to be stable; 1 is the design itself."""
     at: Mapping[str, Value] = field(default_factory=dict)
     """The scaled axes there."""
     followed_to: float | None = None
-    """Down to which factor the nodes tell; ``None`` when they tell nothing."""
+    """Down to which factor it is known to stay stable: 0 when all the way, 1 when no node below the
+    design tells; ``None`` when nothing falls."""
     stopped_by: str = ""
-    """Why not further down; empty when nothing stopped it."""
+    """What is in the way of telling more. With a ``factor`` it is empty unless stability may be
+    left earlier, below ``followed_to`` already."""
 
     def to_json(self) -> dict[str, Any]:
         """Its document."""
