@@ -66,15 +66,15 @@ def shown_answers(which: str) -> dict[str, str]:
     return {
         command: shown
         for command, kind, atlas, shown in found
-        if atlas == which and kind in {"limits", "judge", "robust", "choose"}
+        if atlas == which and kind in {"limits", "point", "judge", "robust", "choose"}
     }
 
 
 FIRST_LOOK, OVERNIGHT = shown_answers("first-look"), shown_answers("overnight")
 
 
-def test_readme_shows_limits_and_a_verdict_and_a_whole_review():
-    assert [command.split()[1] for command in FIRST_LOOK] == ["limits", "judge"]
+def test_readme_shows_limits_a_node_and_a_verdict_and_a_whole_review():
+    assert [command.split()[1] for command in FIRST_LOOK] == ["limits", "point", "judge"]
     assert [command.split()[1] for command in OVERNIGHT] == ["judge", "robust", "choose"]
 
 

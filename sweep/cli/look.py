@@ -70,10 +70,13 @@ def compute_now(structure: LoopStructure, answer: PointAnswer) -> dict[str, Any]
     -------
     ``modes``, each with ``eigenvalue`` [real, imaginary] and ``magnitude``, its frequency ``hz``,
     its ``damping`` ratio and its ``decay_time`` in s ("inf" when it is not stable); and
-    ``coefficients`` of the polynomials in z, highest power first.
+    ``coefficients`` of the polynomials in z, highest power first, down to z^0, with the power of z
+    in ``whole_delay`` that comes to the plant's denominator; and ``delay_samples``, the whole delay
+    as it is.
     """
     from sweep.loop.closed_loop import modes, realise
     from sweep.query.answers import plain
+    from sweep.query.facts import delay_in_samples
 
     values = answer.parameters
     realised = realise(structure, values)
@@ -89,6 +92,7 @@ def compute_now(structure: LoopStructure, answer: PointAnswer) -> dict[str, Any]
                 }
                 for mode in modes(structure, values)
             ],
+            "delay_samples": delay_in_samples(structure, values),
             "coefficients": {
                 "plant_numerator": realised.plant_numerator,
                 "plant_denominator": realised.plant_denominator,

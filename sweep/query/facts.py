@@ -142,7 +142,7 @@ def read_facts(stored: StoredAtlas) -> AtlasFacts:
             _delay_part(stored.grid, name, unit, nominal)
             for name, unit in stored.structure.delay_parts
         ),
-        nominal_delay_samples=_delay_samples(stored.structure, nominal),
+        nominal_delay_samples=delay_in_samples(stored.structure, nominal),
         nominal_period_s=nominal["sample_period"],
         measures=measures,
         tiles=len(stored.tiling),
@@ -180,12 +180,20 @@ def _delay_part(grid: Grid, name: str, unit: str, nominal: Mapping[str, float]) 
     return DelayPart(name, unit, float(low), float(high), nominal[path])
 
 
-def _delay_samples(structure: LoopStructure, nominal: Mapping[str, float]) -> float:
-    """Delay in samples; within 1e-12 of a whole number it is that number."""
-    period_s = nominal["sample_period"]
+def delay_in_samples(structure: LoopStructure, values: Mapping[str, float]) -> float:
+    """The sum of the delay's parts in samples; within 1e-12 of a whole number it is that number.
+
+    Parameters
+    ----------
+    structure
+        Names the parts, each with its unit.
+    values
+        Every parameter of one node by dotted path, in its stored unit.
+    """
+    period_s = values["sample_period"]
     parts = {"samples": 0.0, "s": 0.0}
     for name, unit in structure.delay_parts:
-        parts[unit] += nominal[f"delay.{name}"]
+        parts[unit] += values[f"delay.{name}"]
     total = parts["samples"] + parts["s"] / period_s
     whole = float(round(total))
     return whole if math.isclose(total, whole, rel_tol=0.0, abs_tol=1e-12) else total

@@ -156,7 +156,7 @@ def point_view(answer: PointAnswer, computed: Mapping[str, Any]) -> RenderableTy
     parts += moved_lines(answer.grid, answer.moved, answer.at)
     parts += [line(verdict[answer.stable], style), facts_table(stored)]
     parts += [line("computed now, from this node's parameters:", "bold"), _modes(computed)]
-    parts += [_coefficients(computed["coefficients"]), caution_text(answer.cautions)]
+    parts += [_coefficients(computed), caution_text(answer.cautions)]
     return Group(*parts)
 
 
@@ -220,15 +220,24 @@ def _modes(computed: Mapping[str, Any]) -> Table:
     return table
 
 
-def _coefficients(found: Mapping[str, Any]) -> RenderableType:
-    rows = []
-    for name, value in found.items():
-        texts = [f"{item:.10g}" for item in value] if isinstance(value, list) else [str(value)]
-        text = ", ".join(texts)
+def _coefficients(computed: Mapping[str, Any]) -> RenderableType:
+    """The delay as it is, and the difference equations with what they split off of it."""
+    delay = format_quantity(computed["delay_samples"], "samples")
+    rows = [("delay", f"{delay}; {HALF_SAMPLE}")]
+    for name, value in computed["coefficients"].items():
         if name == "whole_delay":
-            text = f"{format_quantity(float(value), 'samples')}; {HALF_SAMPLE}"
-        rows.append((name.replace("_", " "), text))
+            whole = format_quantity(float(value), "samples").replace(" ", " whole ")
+            factor = f", a further z^{value} in the plant's denominator" if value else ""
+            rows.append(("split off", f"{whole}{factor}"))
+        else:
+            texts = ", ".join(f"{item:.10g}" for item in value)
+            rows.append((name.replace("_", " "), f"{_powers(len(value))}: {texts}"))
     return facts_table(rows)
+
+
+def _powers(count: int) -> str:
+    """The powers of z that a list of coefficients stands for, highest first."""
+    return f"z^{count - 1} to z^0" if count > 1 else "z^0"
 
 
 def _delay_text(facts: AtlasFacts) -> str:
