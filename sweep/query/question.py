@@ -13,9 +13,10 @@ from sweep.grid import Grid
 from sweep.query import requirement as requiring
 from sweep.query.requirement import find_case, read_requirements
 from sweep.query.scope import Scope, resolve_scope
-from sweep.query.select import Asked, resolve_names, show_node
+from sweep.query.select import Asked, resolve_names
 from sweep.query.shake import Asked as Shaking
-from sweep.query.shake import Reach, Window, find_window, read_reach
+from sweep.query.shake import Reach, Window, find_window, read_reach, spell_reach
+from sweep.query.spoken import is_rate, spell_asked, spell_ends
 
 
 @dataclass(frozen=True)
@@ -142,9 +143,9 @@ def _shaken(scope: Scope, shake: Shaking) -> tuple[Scope, tuple[Window, ...]]:
         position = scope.grid.names.index(name)
         if not isinstance(asked, str | float | int):
             raise QuestionError(
-                f"shaking {name}: it is given more than once",
+                f"shaking {spelled}: it is given more than once",
                 where=[name],
-                remedy=f"write --shake {name}=10% once",
+                remedy=f"write --shake {spelled}=10% once",
             )
         reach = read_reach(axis, spelled, asked)
         if name in scope.at:
@@ -160,9 +161,12 @@ def _with_neighbours(scope: Scope, position: int, reach: Reach, asked: float | s
     value = np.array([scope.at[axis.name]], dtype=np.float64)
     window = find_window(scope.grid, position, value, reach)
     if window.lost[0]:
+        low, high = spell_ends(axis, reach.name)
+        number = 1.0 / float(value[0]) if is_rate(axis, reach.name) else float(value[0])
+        at = spell_asked(axis, reach.name, number)
         raise QuestionError(
-            f"shaking {axis.name} = {float(value[0]):g} by {asked}: that leaves what the axis can "
-            f"tell, which runs from {show_node(axis, 0)} to {show_node(axis, len(axis) - 1)}",
+            f"shaking {at} by {spell_reach(axis, reach.name, asked)}: that leaves what the axis "
+            f"can tell, which runs from {low} to {high}",
             where=[axis.name],
             remedy="shake it by less, or sweep further or more finely in a config of its own",
         )

@@ -37,6 +37,7 @@ from sweep.query.select import (
     resolve_names,
     value_at,
 )
+from sweep.query.spoken import spell_asked
 from sweep.query.verdicts import EXCLUDED, FAILS, MEETS, UNKNOWN
 from sweep.query.worst import LOG_RADIUS, WORTH_KEEPING, WorstCases, find_worst_cases
 
@@ -252,15 +253,15 @@ def _check_held(scope: Scope, axis: Axis, asked: Mapping[str, tuple[str, Asked]]
     wanted = read_value(axis, one_value(axis.name, value), name)
     both = axis.snapped(np.array([wanted, scope.at[axis.name]], dtype=np.float64))
     if both[0] != both[1]:
-        raise _outside(axis, value)
+        raise _outside(axis, name, value)
 
 
-def _outside(axis: Axis, value: Asked) -> QuestionError:
+def _outside(axis: Axis, name: str, value: Asked) -> QuestionError:
     return QuestionError(
-        f"finding the largest box around {axis.name} = {value}: it lies outside the designs "
-        "that were asked about",
+        f"finding the largest box around {spell_asked(axis, name, value)}: it lies outside the "
+        "designs that were asked about",
         where=[axis.name],
-        remedy=f"take {axis.name} out of --at and --within, or name a value inside",
+        remedy=f"take {name} out of --at and --within, or name a value inside",
     )
 
 
@@ -280,7 +281,7 @@ def _places_on(
     around = find_enclosing(axis, one_value(axis.name, value), name=name).nodes
     places = [int(place) for place in np.flatnonzero(np.isin(nodes, around))]
     if len(places) < len(around):
-        raise _outside(axis, value)
+        raise _outside(axis, name, value)
     return places[0], places[-1]
 
 

@@ -31,6 +31,7 @@ from sweep.query.select import (
     show_node,
     value_at,
 )
+from sweep.query.spoken import is_rate, spell_asked, spell_node
 
 FloatArray = NDArray[np.float64]
 
@@ -167,12 +168,12 @@ def fixed_span(grid: Grid, axis: Axis, name: str, asked: Asked) -> Span:
     QuestionError
         When it lies between nodes and at one of them a gain of 0 changes the loop's structure.
     """
-    value = one_value(axis.name, asked)
+    value = one_value(name, asked)
     span = find_enclosing(axis, value, name=name)
     breaks = set(gain_changes_structure(grid, axis)) if span.widened else set()
     if breaks.intersection(span.nodes):
         raise QuestionError(
-            f"fixing {axis.name} = {asked}: it lies between nodes, and at the one where "
+            f"fixing {spell_asked(axis, name, asked)}: it lies between nodes, and at the one where "
             f"{axis.name} is 0 the term is absent, which says nothing about its neighbours",
             where=[axis.name],
             remedy=f"ask at a node, or sweep {axis.name} more finely",
@@ -191,9 +192,9 @@ def box_span(grid: Grid, axis: Axis, name: str, asked: Asked) -> Span:
     """
     if axis.role != "tolerance":
         raise QuestionError(
-            f"taking the worst over {axis.name}: it is a design axis, which the engineer chooses",
+            f"taking the worst over {name}: it is a design axis, which the engineer chooses",
             where=[axis.name],
-            remedy=f"fix it with --at {axis.name}=VALUE, or leave it free",
+            remedy=f"fix it with --at {name}=VALUE, or leave it free",
         )
     return checked_span(grid, axis, find_span(axis, asked, name=name))
 
@@ -250,9 +251,9 @@ def check_one_purpose(purposes: Sequence[tuple[str, Mapping[str, object] | Seque
 def _nodes_within(axis: Axis, name: str, asked: Asked) -> tuple[int, ...]:
     if axis.role == "tolerance":
         raise QuestionError(
-            f"keeping {axis.name} within a range: it is a tolerance axis, which nature chooses",
+            f"keeping {name} within a range: it is a tolerance axis, which nature chooses",
             where=[axis.name],
-            remedy=f"give its range with --over {axis.name}=LOW:HIGH",
+            remedy=f"give its range with --over {name}=LOW:HIGH",
         )
     span = find_span(axis, asked, name=name)
     if not span.widened:
@@ -260,9 +261,10 @@ def _nodes_within(axis: Axis, name: str, asked: Asked) -> tuple[int, ...]:
     low, high = _bounds_of(axis, name, asked)
     inside = [node for node in span.nodes if low <= axis.coordinates[node] <= high]
     if not inside:
+        around = [spell_node(axis, name, node) for node in (span.nodes[0], span.nodes[-1])]
         raise QuestionError(
-            f"keeping {axis.name} within {asked}: it holds no node; the nodes around it are "
-            f"{show_node(axis, span.nodes[0])} and {show_node(axis, span.nodes[-1])}",
+            f"keeping {name} within {asked}: it holds no node; the nodes around it are "
+            f"{' and '.join(around[::-1] if is_rate(axis, name) else around)}",
             where=[axis.name],
             remedy="widen the range to the nearest nodes",
         )

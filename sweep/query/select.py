@@ -19,6 +19,7 @@ from sweep.quantities import (
     reciprocal,
     to_float,
 )
+from sweep.query.spoken import is_rate, spell_asked, spell_ends, spell_node, spell_value
 
 Value = float | str
 """A coordinate, in the unit of the stored axis, or the label of a row."""
@@ -160,18 +161,16 @@ def find_node(axis: Axis, asked: float | str, *, name: str = "", nearest: bool =
     if axis.labels is not None:
         return _find_row(axis, asked)
     value = read_value(axis, asked, name)
-    _check_inside(axis, value, asked)
+    _check_inside(axis, value, asked, name)
     node = int(np.abs(axis.coordinates - value).argmin())
     if nearest or _is_node(axis, value, node):
         return node
-    exact = format_quantity(
-        float(axis.coordinates[node]), axis.unit, axis.display_unit, digits=None
-    ).replace(" ", "")
+    exact = spell_node(axis, name, node, digits=None).replace(" ", "")
     raise QuestionError(
-        f"looking up {axis.name} = {asked}: it lies between nodes, "
-        f"the nearest is {show_node(axis, node)}",
+        f"looking up {spell_asked(axis, name, asked)}: it lies between nodes, "
+        f"the nearest is {spell_node(axis, name, node)}",
         where=[axis.name],
-        remedy=f"ask for {axis.name}={exact}, or take the nearest node with --nearest",
+        remedy=f"ask for {name or axis.name}={exact}, or take the nearest node with --nearest",
     )
 
 
@@ -180,7 +179,7 @@ def find_enclosing(axis: Axis, asked: float | str, *, name: str = "") -> Span:
     if axis.labels is not None:
         return Span((_find_row(axis, asked),))
     value = read_value(axis, asked, name)
-    _check_inside(axis, value, asked)
+    _check_inside(axis, value, asked, name)
     node = int(np.abs(axis.coordinates - value).argmin())
     if _is_node(axis, value, node):
         return Span((node,))
@@ -208,14 +207,15 @@ def find_span(axis: Axis, asked: Asked, *, name: str = "") -> Span:
     """
     if axis.labels is not None:
         return Span(_find_rows(axis, [asked] if isinstance(asked, str | float | int) else asked))
-    bounds = _bounds(axis, asked)
+    bounds = _bounds(axis, asked, name)
     ends = [find_enclosing(axis, bound, name=name) for bound in bounds]
     values = [read_value(axis, bound, name) for bound in bounds]
-    if name == "sample_rate":
+    if is_rate(axis, name):
         ends, values = ends[::-1], values[::-1]
     if values[0] > values[-1]:
         raise QuestionError(
-            f"reading the range of {axis.name}: {bounds[0]} lies above {bounds[-1]}",
+            f"reading the range of {name or axis.name}: {spell_value(axis, name, bounds[0])} lies "
+            f"above {spell_value(axis, name, bounds[-1])}",
             where=[axis.name],
             remedy="write the lower bound first: NAME=LOW:HIGH",
         )
@@ -225,14 +225,15 @@ def find_span(axis: Axis, asked: Asked, *, name: str = "") -> Span:
 
 def read_value(axis: Axis, asked: float | str, name: str = "") -> float:
     """A number or a text as a coordinate of ``axis``, in its stored unit."""
-    as_rate = name == "sample_rate" != axis.name
+    as_rate = is_rate(axis, name)
     try:
         value = parse_quantity(asked, "Hz" if as_rate else axis.unit)
     except QuantityError as error:
         raise QuestionError(
             f"reading {name or axis.name} = {asked}: {error.message}",
             where=[axis.name],
-            remedy=error.remedy or f"write a number in {axis.unit}, or one with a unit",
+            remedy=error.remedy
+            or f"write a number in {'Hz' if as_rate else axis.unit}, or one with a unit",
         ) from error
     if as_rate and value <= 0:
         raise QuestionError(
@@ -323,19 +324,19 @@ def _is_node(axis: Axis, value: float, node: int) -> bool:
     return bool(axis.snapped(np.array(value)) == axis.coordinates[node])
 
 
-def _check_inside(axis: Axis, value: float, asked: float | str) -> None:
+def _check_inside(axis: Axis, value: float, asked: float | str, name: str) -> None:
     meant = float(axis.snapped(np.array(value)))
     if axis.coordinates[0] <= meant <= axis.coordinates[-1]:
         return
+    low, high = spell_ends(axis, name)
     raise QuestionError(
-        f"looking up {axis.name} = {asked}: the axis runs from {show_node(axis, 0)} "
-        f"to {show_node(axis, len(axis) - 1)}",
+        f"looking up {spell_asked(axis, name, asked)}: the axis runs from {low} to {high}",
         where=[axis.name],
         remedy=f"stay within the axis, or sweep {axis.name} further in a config of its own",
     )
 
 
-def _bounds(axis: Axis, asked: Asked) -> list[float | str]:
+def _bounds(axis: Axis, asked: Asked, name: str) -> list[float | str]:
     parts: list[float | str]
     if isinstance(asked, str):
         parts = [part.strip() for part in asked.split(":")]
@@ -345,9 +346,9 @@ def _bounds(axis: Axis, asked: Asked) -> list[float | str]:
         parts = list(asked)
     if len(parts) not in (1, 2) or "" in parts:
         raise QuestionError(
-            f"reading the range of {axis.name}: expected LOW:HIGH, found {asked}",
+            f"reading the range of {name or axis.name}: expected LOW:HIGH, found {asked}",
             where=[axis.name],
-            remedy=f"write --over {axis.name}=LOW:HIGH",
+            remedy=f"write {name or axis.name}=LOW:HIGH",
         )
     return parts
 

@@ -21,6 +21,7 @@ from sweep.quantities import parse_quantity, to_float
 from sweep.query.blocks import Indices
 from sweep.query.extremes import Extreme, Extremes, worst_place
 from sweep.query.select import gain_changes_structure
+from sweep.query.spoken import spell_value
 
 Asked = Mapping[str, float | str]
 """By axis how far it may move, to either side: ``"10%"`` of the value, or a quantity."""
@@ -80,7 +81,7 @@ def read_reach(axis: Axis, name: str, asked: float | str) -> Reach:
     if axis.role == "tolerance" or axis.is_row_axis:
         what = "a tolerance axis" if axis.role == "tolerance" else "a table of rows"
         raise QuestionError(
-            f"shaking {axis.name}: it is {what}",
+            f"shaking {name}: it is {what}",
             where=[axis.name],
             remedy="shake design axes; what nature does is the box, given with --over",
         )
@@ -90,9 +91,9 @@ def read_reach(axis: Axis, name: str, asked: float | str) -> Reach:
     try:
         value = parse_quantity(text if isinstance(asked, str) else asked, unit)
     except QuantityError as error:
-        raise _not_a_reach(axis, asked, error.message) from error
+        raise _not_a_reach(name, asked, error.message) from error
     if not (value.is_finite() and value > 0 and (not as_share or value < 1)):
-        raise _not_a_reach(axis, asked, "expected a percentage below 100 or a quantity above 0")
+        raise _not_a_reach(name, asked, "expected a percentage below 100 or a quantity above 0")
     amount = to_float(value)
     return Reach(name, relative=amount) if as_share else Reach(name, absolute=amount)
 
@@ -178,9 +179,15 @@ def _worst_places(
     return np.moveaxis(np.stack(found, axis=-1), -1, dimension)
 
 
-def _not_a_reach(axis: Axis, asked: object, problem: str) -> QuestionError:
+def spell_reach(axis: Axis, name: str, asked: float | str) -> str:
+    """How far an axis is shaken as it was asked: a bare number with its unit."""
+    text = str(asked).strip()
+    return text if text.endswith("%") else spell_value(axis, name, asked)
+
+
+def _not_a_reach(name: str, asked: object, problem: str) -> QuestionError:
     return QuestionError(
-        f"shaking {axis.name} by {asked}: {problem}",
-        where=[axis.name],
-        remedy=f"write --shake {axis.name}=10%, or a distance with a unit",
+        f"shaking {name} by {asked}: {problem}",
+        where=[name],
+        remedy=f"write --shake {name}=10%, or a distance with a unit",
     )
