@@ -30,6 +30,12 @@ from sweep.query.price import PriceList, find_outcome, find_prices, plan_prices,
 from sweep.query.question import Demand, DesignQuestion, resolve_question
 from sweep.query.scope import Scope
 from sweep.query.select import Asked, resolve_names, value_at
+from sweep.query.surroundings import (
+    find_axis_ends,
+    find_beside_failing,
+    find_box_range_ends,
+    find_range_ends,
+)
 from sweep.query.verdicts import FAILS, MEETS, NAMES, Codes
 from sweep.query.worst import (
     LOG_RADIUS,
@@ -198,7 +204,8 @@ class _Choice:
 
     def row(self, number: int) -> ChooseRow:
         """The choice at one sample period."""
-        periods, codes = self.periods, self.periods.designs(self.cases.verdict, number)
+        scope, periods = self.cases.scope, self.periods
+        codes = periods.designs(self.cases.verdict, number)
         counts = _count_words(codes)
         meets = _meets(counts)
         box = find_gain_box(self.cases, periods, number) if self.best.is_box else None
@@ -210,11 +217,15 @@ class _Choice:
             worst={} if design is None else self._worst(design),
             at={} if design is None else self.cases.place_of(self.best.extreme, design),
             delay_left=self._delay_left(design) if design is not None and meets else None,
-            axis_ends=() if design is None else self._axis_ends(design),
-            range_ends=() if design is None else self._range_ends(design),
-            beside_failing=self._beside(design) if design is not None and meets else (),
+            axis_ends=() if design is None else find_axis_ends(scope, design),
+            range_ends=() if design is None else find_range_ends(scope, design),
+            beside_failing=find_beside_failing(self.cases, design)
+            if design is not None and meets
+            else (),
             box=None if box is None else self._named(box),
-            box_range_ends=() if box is None else self._box_range_ends(box),
+            box_range_ends=(
+                () if box is None else find_box_range_ends(scope, box, periods.dimension)
+            ),
             verdicts=counts,
         )
 
@@ -259,73 +270,6 @@ class _Choice:
     def _delay_left(self, design: tuple[int, ...]) -> tuple[DelayLeft, ...] | None:
         return find_delay_left(self.stored, self.cases.scope, self.question.windows, design)
 
-    def _axis_ends(self, design: tuple[int, ...]) -> tuple[str, ...]:
-        """Axes with several nodes to choose from at whose end the design lies."""
-        scope, ends = self.cases.scope, []
-        for dimension, position in self._chosen_from():
-            axis = scope.grid.axes[position]
-            if scope.spans[position][design[dimension]] in (0, len(axis) - 1):
-                ends.append(axis.name)
-        return tuple(ends)
-
-    def _range_ends(self, design: tuple[int, ...]) -> tuple[str, ...]:
-        """Axes that go on beside the design, where the question does not."""
-        scope, ends = self.cases.scope, []
-        for dimension, position in self._limited():
-            nodes, place = scope.spans[position], design[dimension]
-            if _goes_on(scope, position, nodes[place] - 1) or _goes_on(
-                scope, position, nodes[place] + 1
-            ):
-                ends.append(scope.grid.axes[position].name)
-        return tuple(ends)
-
-    def _box_range_ends(self, box: Box) -> tuple[tuple[str, str], ...]:
-        """The same of the sides of a gain box."""
-        scope = self.cases.scope
-        others = [d for d in range(len(scope.free)) if d != self.periods.dimension]
-        corners = dict(zip(others, zip(box.low, box.high, strict=True), strict=True))
-        ends = []
-        for dimension, position in self._limited():
-            if dimension in corners:
-                nodes, (low, high) = scope.spans[position], corners[dimension]
-                beside = (("low", nodes[low] - 1), ("high", nodes[high] + 1))
-                name = scope.grid.axes[position].name
-                ends += [(name, side) for side, node in beside if _goes_on(scope, position, node)]
-        return tuple(ends)
-
-    def _limited(self) -> list[tuple[int, int]]:
-        """Dimension and position of the free axes of which a range was asked for."""
-        scope = self.cases.scope
-        unordered = unordered_dimensions(scope)
-        return [
-            (dimension, position)
-            for dimension, position in enumerate(scope.free)
-            if scope.grid.axes[position].name not in scope.at
-            and len(scope.spans[position]) < len(scope.grid.axes[position])
-            and dimension not in unordered
-        ]
-
-    def _beside(self, design: tuple[int, ...]) -> tuple[str, ...]:
-        """Axes along which a neighbour is not known to meet."""
-        scope, codes, beside = self.cases.scope, self.cases.verdict, []
-        for dimension, position in self._chosen_from():
-            place, last = design[dimension], codes.shape[dimension] - 1
-            around = [i for i in (place - 1, place + 1) if 0 <= i <= last]
-            before, after = design[:dimension], design[dimension + 1 :]
-            if any(codes[(*before, i, *after)] != MEETS for i in around):
-                beside.append(scope.grid.axes[position].name)
-        return tuple(beside)
-
-    def _chosen_from(self) -> list[tuple[int, int]]:
-        """Dimension and position of the free axes with several nodes whose neighbours count."""
-        scope = self.cases.scope
-        unordered = unordered_dimensions(scope)
-        return [
-            (dimension, position)
-            for dimension, position in enumerate(scope.free)
-            if len(scope.spans[position]) > 1 and dimension not in unordered
-        ]
-
     def _named(self, box: Box) -> LargestBox:
         scope = self.cases.scope
         others = [axis for i, axis in enumerate(scope.free) if i != self.periods.dimension]
@@ -338,11 +282,6 @@ class _Choice:
                 sides = (("low", first == 0), ("high", last == len(axis) - 1))
                 axis_ends += [(axis.name, side) for side, is_end in sides if is_end]
         return LargestBox(ends, box.nodes, box.exact, box.at_most, tuple(axis_ends))
-
-
-def _goes_on(scope: Scope, position: int, node: int) -> bool:
-    """Whether an axis holds a node that the question leaves out."""
-    return 0 <= node < len(scope.grid.axes[position]) and node not in scope.spans[position]
 
 
 def _count_words(codes: Codes) -> dict[str, int]:

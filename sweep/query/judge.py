@@ -14,9 +14,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from sweep.config import Design, Requirement
+from sweep.config import Design
 from sweep.errors import QuestionError
-from sweep.grid import Axis, Grid
+from sweep.grid import Axis
 from sweep.query.answers.judge import (
     DesignVerdict,
     GainFall,
@@ -28,13 +28,12 @@ from sweep.query.answers.judge import (
 from sweep.query.blocks import Indices, Readable
 from sweep.query.cautions import OVER_A_BOX
 from sweep.query.conditional import find_gain_fall
-from sweep.query.derived import spec_of
 from sweep.query.distances import find_distances, find_hurts, largest_step, walk_lines
-from sweep.query.extremes import MOST_DESIGN_NODES, Extreme, can_be_held, find_extremes
+from sweep.query.extremes import MOST_DESIGN_NODES, Extreme, can_be_held
 from sweep.query.gaps import find_gaps, jump_without_gaps
 from sweep.query.held_block import hold
+from sweep.query.lines import PROCESSOR_TIME, find_lines, is_lost
 from sweep.query.question import Demand, DesignQuestion, resolve_question
-from sweep.query.requirement import is_violated, requirement_name, requirement_text
 from sweep.query.scope import Scope
 from sweep.query.select import (
     Asked,
@@ -45,8 +44,8 @@ from sweep.query.select import (
     value_at,
 )
 from sweep.query.tolerance import Acceptance, InHand, find_acceptance, find_in_hand
-from sweep.query.verdicts import MEETS, NAMES, UNKNOWN, Codes, decide
-from sweep.query.worst import LOG_RADIUS, WorstCases, find_excluded, find_worst_cases
+from sweep.query.verdicts import MEETS, UNKNOWN, Codes
+from sweep.query.worst import LOG_RADIUS, WorstCases, find_worst_cases
 from sweep.query.yields import Yield, check_tables, find_yields
 from sweep.vocabulary import LoopStructure
 
@@ -57,9 +56,6 @@ CONFIDENCE = 0.95
 """Of the intervals of yields, unless a question says otherwise."""
 
 DECAY_TIME = Extreme("decay_time", "max")
-
-PROCESSOR_TIME = "processor_time"
-"""The line that says whether the loop can be built."""
 
 Weights = Mapping[str, Mapping[str, float]]
 """By row axis, the weight of each row by its label."""
@@ -167,13 +163,13 @@ def _judge(
     fits = can_be_held(whole)
     block = hold(stored, whole.spans if fits else scope.spans)
     cases = find_worst_cases(block, structure, scope, question.requirements, also=[DECAY_TIME])
-    lines = _lines(block, structure, scope, question.requirements)
+    lines = find_lines(block, structure, scope, question.requirements)
     tolerance = _tolerances(block, structure, question, whole) if fits else None
     start = _no_start(lines)
     walked = [] if start else walk_lines(stored, block if fits else None, structure, scope)
     distances = find_distances(walked, scope)
     radius, decay = _reached(cases, LOG_RADIUS), _reached(cases, DECAY_TIME)
-    if _is_lost("decay_time", decay.value):
+    if is_lost("decay_time", decay.value):
         decay = replace(decay, at=radius.at)
     return DesignVerdict(
         design=design.name,
@@ -310,66 +306,6 @@ def whole_tolerances(scope: Scope) -> Scope:
 def _reached(cases: WorstCases, extreme: Extreme) -> Reached:
     place = (0,) * len(cases.scope.free)
     return Reached(float(cases.found.worst[extreme][place]), cases.place_of(extreme, place))
-
-
-def _lines(
-    block: Readable, structure: LoopStructure, scope: Scope, requirements: Sequence[Requirement]
-) -> tuple[Line, ...]:
-    lines = [_line(block, scope, requirement) for requirement in requirements]
-    lines = [
-        replace(line, at=lines[0].at) if _is_lost(line.require, line.worst) else line
-        for line in lines
-    ]
-    if "compute" in dict(structure.delay_parts):
-        lines.append(_processor_line(structure, scope))
-    return tuple(lines)
-
-
-def _is_lost(quantity: str, worst: float) -> bool:
-    """Whether a decay time is unbounded: of all nodes that are not stable the worst is named."""
-    return quantity.endswith("decay_time") and worst == math.inf
-
-
-def _line(block: Readable, scope: Scope, requirement: Requirement) -> Line:
-    extreme = Extreme(requirement.quantity, requirement.sense)
-    (found,) = find_extremes(block, scope, [extreme])
-    worst = found.worst[extreme]
-    code = decide(is_violated(requirement, worst), found.unknown > 0)
-    nodes = scope.box_node(int(found.which[extreme].item()))
-    return Line(
-        require=requirement_name(requirement),
-        text=requirement_text(requirement),
-        unit=spec_of(requirement.quantity).unit,
-        limit=requirement.limit,
-        worst=float(worst.item()),
-        at=_place(scope.grid, nodes),
-        unknown=found.unknown_nodes,
-        verdict=NAMES[int(code.item())],
-    )
-
-
-def _processor_line(structure: LoopStructure, scope: Scope) -> Line:
-    """Whether the processor is done within the period, at every node of the box."""
-    in_samples = dict(structure.delay_parts)["compute"] == "samples"
-    compute = scope.parameter("delay.compute")
-    periods = compute if in_samples else compute / scope.parameter("sample_period")
-    worst = np.unravel_index(int(periods.argmax()), periods.shape)
-    nodes = {i: int(scope.spans[i][worst[i]]) for i in scope.box if periods.shape[i] > 1}
-    late = bool(find_excluded(structure, scope).any())
-    return Line(
-        require=PROCESSOR_TIME,
-        text="processor time at most one sample period",
-        unit="samples",
-        limit=1.0,
-        worst=float(periods[worst]),
-        at=_place(scope.grid, nodes),
-        unknown=0,
-        verdict="fails" if late else "meets",
-    )
-
-
-def _place(grid: Grid, nodes: Mapping[int, int]) -> dict[str, Value]:
-    return {grid.axes[i].name: value_at(grid.axes[i], nodes[i]) for i in sorted(nodes)}
 
 
 def _brackets(scope: Scope) -> dict[str, tuple[Value, Value]]:
