@@ -368,7 +368,7 @@ def test_what_cannot_be_compared_is_refused_with_what_can():
     with pytest.raises(QuestionError, match="one of radius, decay_time") as error:
         choose_designs(found.stored, STABLE, best="decay_tme")
     assert error.value.remedy == "write decay_time, which was probably meant"
-    with pytest.raises(QuestionError, match="what less or more is better of"):
+    with pytest.raises(QuestionError, match="by which one design is better than another"):
         choose_designs(found.stored, STABLE, best="mode_angle")
 
 

@@ -133,7 +133,7 @@ def test_an_atlas_in_which_nothing_is_known_ends_with_3(capsys, shelf):
 @pytest.mark.parametrize(
     ("arguments", "message"),
     [
-        (["--best", "speed"], "choosing by speed: expected what less or more is better of"),
+        (["--best", "speed"], "choosing by speed: expected one of radius"),
         (["--best", "mode_angle"], "choosing by mode_angle"),
         (["--require", "max_decay=3"], "reading the requirement max_decay"),
         (["--over", "damping=0.02:0.01"], "0.02 lies above 0.01"),

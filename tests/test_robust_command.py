@@ -185,7 +185,7 @@ BAD = {
     "an axis for two purposes": (["--at", "kp=0", "--within", "kp=0:1"], "--at and by --within"),
     "an axis twice": (["--at", "sample_period=5ms,sample_rate=100Hz"], "given twice"),
     "a fixed parameter": (["--at", "natural_frequency=40Hz"], "it has the one value"),
-    "no assignment": (["--over", "damping"], "expected NAME=VALUE"),
+    "no assignment": (["--over", "damping"], "expected NAME=LOW:HIGH"),
     "no range": (["--over", "damping=1:2:3"], "expected LOW:HIGH"),
     "the wrong unit": (["--at", "sample_period=5Hz"], "5Hz"),
     "seconds on an axis of samples": (["--over", "bus=0:1ms"], "1ms"),

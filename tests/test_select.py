@@ -11,12 +11,12 @@ from hypothesis import strategies as st
 from memory_atlas import atlas, axis, rows
 
 from sweep.errors import QuestionError
+from sweep.query.assignments import parse_assignments
 from sweep.query.select import (
     find_enclosing,
     find_node,
     find_span,
     gain_changes_structure,
-    parse_assignments,
 )
 
 PERIOD = axis("sample_period", [0.001, 0.002, 0.005, 0.01], unit="s", display_unit="ms", nominal=1)

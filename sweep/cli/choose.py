@@ -47,17 +47,17 @@ def _options(parser: argparse.ArgumentParser) -> None:
 
 
 def _choose(arguments: argparse.Namespace) -> int:
+    from sweep.query.assignments import parse_assignments, parse_single
     from sweep.query.atlas import open_atlas
-    from sweep.query.select import parse_assignments, parse_single
 
     answer = open_atlas(arguments.atlas, arguments.shelf).choose(
         arguments.case,
         best=arguments.best,
         at=parse_assignments(arguments.at),
-        over=parse_assignments(arguments.over),
-        within=parse_assignments(arguments.within),
-        require=parse_single(arguments.require),
-        shake=parse_single(arguments.shake),
+        over=parse_assignments(arguments.over, "--over"),
+        within=parse_assignments(arguments.within, "--within"),
+        require=parse_single(arguments.require, "--require"),
+        shake=parse_single(arguments.shake, "--shake"),
         design=arguments.design,
         price=arguments.price,
     )

@@ -71,8 +71,8 @@ def _options(parser: argparse.ArgumentParser) -> None:
 
 
 def _judge(arguments: argparse.Namespace) -> int:
+    from sweep.query.assignments import parse_assignments, parse_single
     from sweep.query.atlas import open_atlas
-    from sweep.query.select import parse_assignments, parse_single
 
     designs, cases = flatten(arguments.design, "--design"), flatten(arguments.case, "--case")
     answer = open_atlas(arguments.atlas, arguments.shelf).judge(
@@ -80,9 +80,9 @@ def _judge(arguments: argparse.Namespace) -> int:
         case=cases,
         at=parse_single(arguments.at),
         schedule=arguments.schedule,
-        over=parse_assignments(arguments.over),
-        require=parse_single(arguments.require),
-        shake=parse_single(arguments.shake),
+        over=parse_assignments(arguments.over, "--over"),
+        require=parse_single(arguments.require, "--require"),
+        shake=parse_single(arguments.shake, "--shake"),
         confidence=arguments.confidence,
         weights=arguments.weights,
     )

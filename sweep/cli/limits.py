@@ -37,15 +37,15 @@ def _limits_options(parser: argparse.ArgumentParser) -> None:
 
 
 def _limits(arguments: argparse.Namespace) -> int:
+    from sweep.query.assignments import parse_assignments
     from sweep.query.atlas import open_atlas
-    from sweep.query.select import parse_assignments
 
     each = flatten(arguments.each, "--each")
     atlas = open_atlas(arguments.atlas, arguments.shelf)
     answer = atlas.limits(
         arguments.along,
         at=parse_assignments(arguments.at),
-        over=parse_assignments(arguments.over),
+        over=parse_assignments(arguments.over, "--over"),
         each=each,
         nominal=arguments.nominal,
         design=arguments.design,

@@ -46,8 +46,8 @@ def _point_options(parser: argparse.ArgumentParser) -> None:
 
 
 def _point(arguments: argparse.Namespace) -> int:
+    from sweep.query.assignments import parse_assignments
     from sweep.query.atlas import open_atlas
-    from sweep.query.select import parse_assignments
 
     atlas = open_atlas(arguments.atlas, arguments.shelf)
     answer = atlas.point(
@@ -121,8 +121,8 @@ def _map_options(parser: argparse.ArgumentParser) -> None:
 
 
 def _map(arguments: argparse.Namespace) -> int:
+    from sweep.query.assignments import parse_assignments
     from sweep.query.atlas import open_atlas
-    from sweep.query.select import parse_assignments
 
     atlas = open_atlas(arguments.atlas, arguments.shelf)
     plane = atlas.plane(

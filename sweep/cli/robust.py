@@ -34,16 +34,16 @@ def _options(parser: argparse.ArgumentParser) -> None:
 
 
 def _robust(arguments: argparse.Namespace) -> int:
+    from sweep.query.assignments import parse_assignments, parse_single
     from sweep.query.atlas import open_atlas
-    from sweep.query.select import parse_assignments, parse_single
 
     answer = open_atlas(arguments.atlas, arguments.shelf).robust(
         arguments.case,
         at=parse_assignments(arguments.at),
-        over=parse_assignments(arguments.over),
-        within=parse_assignments(arguments.within),
-        require=parse_single(arguments.require),
-        shake=parse_single(arguments.shake),
+        over=parse_assignments(arguments.over, "--over"),
+        within=parse_assignments(arguments.within, "--within"),
+        require=parse_single(arguments.require, "--require"),
+        shake=parse_single(arguments.shake, "--shake"),
         around=_place(arguments.around),
         design=arguments.design,
     )
@@ -58,10 +58,10 @@ def _robust(arguments: argparse.Namespace) -> int:
 
 
 def _place(text: str) -> Mapping[str, str] | str | None:
-    from sweep.query.select import parse_single
+    from sweep.query.assignments import parse_single
 
     if "=" in text:
-        return parse_single([text])
+        return parse_single([text], "--around")
     return text or None
 
 

@@ -178,9 +178,10 @@ def find_by_path(path: str, place: str, loop: LoopDraft, findings: Findings) -> 
     section, _, part = path.partition(".")
     if section == "delay" and part:
         return delay_target(part) if check_name(part, place, "delay part", findings) else None
-    by_name = loop.find(path)
+    by_name = loop.find(path) or loop.find(part)
     choices = [*loop.targets, "delay.NAME"]
-    remedy = f'write "{by_name.path}"' if by_name else suggest(path, choices)
+    near = suggest(path, choices) or "write one of these paths"
+    remedy = f'write "{by_name.path}"' if by_name else near
     findings.add(place, describe(path), f"the path of a parameter: {listed(choices)}", remedy)
     return None
 

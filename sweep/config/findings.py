@@ -13,6 +13,10 @@ from sweep.errors import ConfigError, Problem
 MOST_PROBLEMS = 200
 """Mistakes listed one by one; the rest are counted."""
 
+_NEAR = 0.78
+"""Share of letters in common from which a word was probably meant: a letter or two are wrong, and
+not half of them as in ``bogus`` for ``bus``."""
+
 _BARE_KEY = re.compile(r"[A-Za-z0-9_-]{1,60}")
 
 
@@ -115,14 +119,18 @@ def below(place: str, name: str) -> str:
 def find_near(word: object, choices: Iterable[str]) -> str:
     """Find the choice that was probably meant; empty when none is near.
 
-    >>> find_near("Dampening", ["damping", "gain"])
-    'damping'
+    >>> find_near("Dampening", ["damping", "gain"]), find_near("bogus", ["bus", "kp"])
+    ('damping', '')
     """
     if not isinstance(word, str):
         return ""
-    folded = word[:80].strip().lower().replace("-", "_").replace(" ", "_")
-    near = difflib.get_close_matches(folded, list(choices), 1, 0.6)
-    return near[0] if near else ""
+    by_folded = {_folded(choice): choice for choice in choices}
+    near = difflib.get_close_matches(_folded(word), by_folded, 1, _NEAR)
+    return by_folded[near[0]] if near else ""
+
+
+def _folded(word: str) -> str:
+    return word[:80].strip().lower().replace("-", "_").replace(" ", "_")
 
 
 def suggest(word: object, choices: Iterable[str]) -> str:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from typing import Literal
 
-from sweep.config.findings import describe, listed, suggest
+from sweep.config.findings import describe, find_near, listed
 from sweep.config.model import Requirement
 from sweep.errors import QuantityError
 from sweep.quantities import describe_unit, parse_quantity, to_float
@@ -36,7 +36,7 @@ def read_requirement(name: str, value: object) -> Requirement:
     spec = DERIVED.get(quantity) or MEASURES.get(quantity)
     if sense not in ("max", "min") or spec is None:
         names = [f"{s}_{q}" for q in (*DERIVED, *MEASURES) for s in ("max", "min")]
-        remedy = suggest(name, names) or "name a measure after max_ or min_"
+        remedy = _meant(name) or "name a measure after max_ or min_"
         raise QuantityError(describe(name), f"a requirement: {listed(names)}", remedy)
     limit = to_float(parse_quantity(value, spec.unit))
     if quantity == "decay_time" and not (math.isfinite(limit) and limit > 0):
@@ -44,3 +44,18 @@ def read_requirement(name: str, value: object) -> Requirement:
         raise QuantityError(describe(value), expected, "give a positive time")
     chosen: Literal["max", "min"] = "max" if sense == "max" else "min"
     return Requirement(quantity, chosen, limit)
+
+
+def _meant(name: str) -> str:
+    """The remedy that names the requirement that was probably meant; empty when none is near.
+
+    Without ``max_`` or ``min_`` it is the sense in which the measure is good to be bounded.
+    """
+    sense, _, rest = name.partition("_")
+    specs = MEASURES | DERIVED
+    quantity = find_near(rest if sense in ("max", "min") else name, specs)
+    if not quantity:
+        return ""
+    if sense not in ("max", "min"):
+        sense = {"low": "max", "high": "min"}.get(specs[quantity].better, "")
+    return f'"{sense}_{quantity}" was probably meant' if sense else ""

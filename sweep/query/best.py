@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-import difflib
 from collections.abc import Sequence
 from dataclasses import dataclass
 
+from sweep.config.findings import find_near
 from sweep.errors import QuestionError
 from sweep.query.answers.choose import GAIN_BOX
 from sweep.query.derived import spec_of
@@ -54,12 +54,12 @@ def read_best(name: str, held: Sequence[str], title: str) -> Best:
         return Best(name, LOG_RADIUS)
     ranked = [q for q in (*DERIVED, *MEASURES) if spec_of(q).better]
     if name not in ranked:
-        near = difflib.get_close_matches(name, [*ranked, GAIN_BOX], n=1)
+        near = find_near(name, [*ranked, GAIN_BOX])
         raise QuestionError(
-            f"choosing by {name}: expected what less or more is better of, one of "
-            f"{', '.join([*ranked, GAIN_BOX])}",
+            f"choosing by {name}: expected one of {', '.join([*ranked, GAIN_BOX])}, by which one "
+            "design is better than another",
             where=[name],
-            remedy=f"write {near[0]}, which was probably meant" if near else "name one of them",
+            remedy=f"write {near}, which was probably meant" if near else "name one of them",
         )
     check_held(name, held, name, title)
     return Best(name, Extreme(name, "max" if spec_of(name).better == "low" else "min"))

@@ -2,14 +2,13 @@
 
 from __future__ import annotations
 
-import difflib
-import re
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from decimal import Decimal
 
 import numpy as np
 
+from sweep.config.findings import find_near
 from sweep.errors import QuantityError, QuestionError
 from sweep.grid import Axis, Grid
 from sweep.quantities import (
@@ -27,8 +26,6 @@ Value = float | str
 Asked = float | str | Sequence[float | str]
 """What a question may give for an axis: a number, a text with a unit, a label, or several."""
 
-_ASSIGNMENT = re.compile(r",(?=\s*[A-Za-z_][A-Za-z0-9_.]*\s*=)")
-
 
 @dataclass(frozen=True)
 class Span:
@@ -38,63 +35,6 @@ class Span:
     """Indices, increasing."""
     widened: bool = False
     """Whether a bound lay between nodes, so that the next node outward was taken in."""
-
-
-def parse_assignments(texts: Iterable[str]) -> dict[str, str | list[str]]:
-    """Read ``kp=0.3,sample_period=5ms``; a name given again collects its values in a list.
-
-    Raises
-    ------
-    QuestionError
-        When a piece has no ``=`` or nothing on one side of it.
-
-    Examples
-    --------
-    >>> parse_assignments(["kp=0.3,sample_period=5ms"])
-    {'kp': '0.3', 'sample_period': '5ms'}
-    >>> parse_assignments(["unit=A, left", "unit=B"])
-    {'unit': ['A, left', 'B']}
-    """
-    found: dict[str, str | list[str]] = {}
-    for piece in (piece for text in texts for piece in _ASSIGNMENT.split(text)):
-        name, equals, value = (part.strip() for part in piece.partition("="))
-        if not (name and equals and value):
-            raise QuestionError(
-                f"reading {piece.strip()!r}: expected NAME=VALUE, such as kp=0.3",
-                where=[piece.strip()],
-                remedy="separate several by commas: --at kp=0.3,sample_period=5ms",
-            )
-        earlier = found.get(name)
-        if earlier is None:
-            found[name] = value
-        else:
-            found[name] = [*(earlier if isinstance(earlier, list) else [earlier]), value]
-    return found
-
-
-def parse_single(texts: Iterable[str]) -> dict[str, str]:
-    """As `parse_assignments`, where each name has one value.
-
-    Raises
-    ------
-    QuestionError
-        When a name is given twice.
-
-    Examples
-    --------
-    >>> parse_single(["max_decay_time=80ms,max_radius=0.9"])
-    {'max_decay_time': '80ms', 'max_radius': '0.9'}
-    """
-    found = {}
-    for name, value in parse_assignments(texts).items():
-        if not isinstance(value, str):
-            raise QuestionError(
-                f"reading {name}: it is given {len(value)} times",
-                where=[name],
-                remedy=f"give {name} once",
-            )
-        found[name] = value
-    return found
 
 
 def find_axis(grid: Grid, name: str) -> Axis:
@@ -118,11 +58,11 @@ def find_axis(grid: Grid, name: str) -> Axis:
                 remedy=f"leave {name} out of the question, or sweep it in a config of its own",
             )
     axes = ", ".join(grid.names) or "none"
-    near = difflib.get_close_matches(name, grid.names, n=1)
+    near = find_near(name, grid.names)
     raise QuestionError(
         f"asking about {name}: this atlas has no such axis; its axes are {axes}",
         where=[name],
-        remedy=f"write {near[0]}, which was probably meant" if near else "name one of its axes",
+        remedy=f"write {near}, which was probably meant" if near else "name one of its axes",
     )
 
 
@@ -357,12 +297,12 @@ def _find_row(axis: Axis, asked: float | str) -> int:
     labels = axis.labels or ()
     if str(asked) in labels:
         return labels.index(str(asked))
-    near = difflib.get_close_matches(str(asked), labels, n=1)
+    near = find_near(str(asked), labels)
     listed = ", ".join(labels[:8]) + (", …" if len(labels) > 8 else "")
     raise QuestionError(
         f"looking up {axis.name} = {asked}: it has no such row; its rows are {listed}",
         where=[axis.name],
-        remedy=f"write {near[0]}, which was probably meant" if near else "name a row by its label",
+        remedy=f"write {near}, which was probably meant" if near else "name a row by its label",
     )
 
 

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import difflib
 import math
 from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass
@@ -11,6 +10,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from sweep.config.findings import find_near
 from sweep.errors import QuestionError
 from sweep.grid import Axis
 from sweep.query.answers.plain import plain
@@ -294,13 +294,11 @@ def _check_label(axis: Axis, label: str) -> None:
     labels = axis.labels or ()
     if label in labels:
         return
-    near = difflib.get_close_matches(label, labels, n=1)
+    near = find_near(label, labels)
     raise QuestionError(
         f"weighting the rows of {axis.name}: it has no row {label}",
         where=[axis.name, label],
-        remedy=f"write {near[0]}, which was probably meant"
-        if near
-        else "name rows by their labels",
+        remedy=f"write {near}, which was probably meant" if near else "name rows by their labels",
     )
 
 
