@@ -100,7 +100,7 @@ def test_every_option_reaches_the_question(ask):
     code, out, _ = ask("bench", "--json", *box, *designs, "--around", "kp=0.1")
     document = json.loads(out)
     assert code == 0
-    assert document["case"] == "cold"
+    assert document["case"] == "cold with bus=0:0.3, max_radius=0.8"
     assert document["over"] == {"damping": [0.01, 0.03], "bus": [0.0, 0.5]}
     assert document["widened"] == ["damping", "bus"]
     assert document["at"] == {"sample_period": 0.005}

@@ -133,8 +133,8 @@ SIMILAR = (
     {"over": {"plant_gain": 1}},
     {"over": {"plant_gain": 2}},
     {"within": {"ki": (0, 3)}},
-    {"at": {"ki": 1}},
-    {"at": {"ki": 1}, "shake": {"ki": 2}},
+    {"at": {"kp": 1}},
+    {"at": {"kp": 1}, "shake": {"kp": 0.5}},
 )
 
 

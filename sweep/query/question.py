@@ -9,11 +9,11 @@ import numpy as np
 
 from sweep.config import Case, Requirement
 from sweep.errors import QuestionError
-from sweep.grid import Grid
+from sweep.grid import Axis, Grid
 from sweep.query import requirement as requiring
 from sweep.query.requirement import find_case, read_requirements
 from sweep.query.scope import Scope, resolve_scope
-from sweep.query.select import Asked, resolve_names
+from sweep.query.select import Asked, gain_changes_structure, resolve_names
 from sweep.query.shake import Asked as Shaking
 from sweep.query.shake import Reach, Window, find_window, read_reach, spell_reach
 from sweep.query.spoken import is_rate, spell_asked, spell_ends
@@ -156,6 +156,13 @@ def _shaken(scope: Scope, shake: Shaking) -> tuple[Scope, tuple[Window, ...]]:
     return scope, tuple(windows)
 
 
+def _but_for_zero(grid: Grid, axis: Axis) -> str:
+    """What an axis cannot tell beside the nodes at which a gain of 0 changes the structure."""
+    if not gain_changes_structure(grid, axis):
+        return ""
+    return ", and at 0 the term is absent, which says nothing about the values beside it"
+
+
 def _with_neighbours(scope: Scope, position: int, reach: Reach, asked: float | str) -> Scope:
     axis = scope.grid.axes[position]
     value = np.array([scope.at[axis.name]], dtype=np.float64)
@@ -166,7 +173,7 @@ def _with_neighbours(scope: Scope, position: int, reach: Reach, asked: float | s
         at = spell_asked(axis, reach.name, number)
         raise QuestionError(
             f"shaking {at} by {spell_reach(axis, reach.name, asked)}: that leaves what the axis "
-            f"can tell, which runs from {low} to {high}",
+            f"can tell: it runs from {low} to {high}{_but_for_zero(scope.grid, axis)}",
             where=[axis.name],
             remedy="shake it by less, or sweep further or more finely in a config of its own",
         )
