@@ -245,3 +245,19 @@ def test_nothing_heavy_is_loaded(shelf):
         [sys.executable, "-c", script], capture_output=True, text=True, cwd=ROOT, check=False
     )
     assert (done.returncode, done.stderr.strip()) == (0, "[]")
+
+
+def test_a_row_of_a_table_may_not_be_called_as_a_design_that_is_judged_beside_it(
+    capsys, shelf, tmp_path
+):
+    table = tmp_path / "gains.csv"
+    table.write_text("label,kp,sample_period\nquick,0.2,2ms\n")
+    code, out, err = run(capsys, shelf, "--design", "quick", "--schedule", table)
+    assert (code, out) == (2, "")
+    assert "2 of them are called quick" in err
+
+
+def test_a_design_given_by_its_values_is_named_once_in_a_mistake(capsys, shelf):
+    code, _, err = run(capsys, shelf, "--at", "kp=0.3")
+    assert code == 2
+    assert "judging the design asked for: it gives no sample_period" in err

@@ -79,7 +79,13 @@ def test_a_range_takes_its_unit_from_the_header(tmp_path):
         ("kp,ki,sample_period\n1,1,1ms,4\n", 2, "4 cells; expected 3"),
         ("kp,ki,sample_period\n1,1,1ms\n1,one,1ms\n", 3, "one"),
         ("kp,ki,sample_period\n1,1,1ms\n\n1,,1ms\n", 4, "an empty cell for ki"),
-        ("kp,ki,sample_period [V]\n1,1,1\n", 2, "V"),
+        ("kp,ki,sample_period [V]\n1,1,1\n", 1, "the column sample_period has the unit V; expec"),
+        ("kp,ki,sample_rate [ms]\n1,1,1\n", 1, "the column sample_rate has the unit ms; expected"),
+        ("kp [m],ki,sample_period\n1,1,1ms\n", 1, "the column kp has the unit m; expected a pla"),
+        ("kp,ki,sample_period [ms]\n1,1,2 Hz\n", 2, "found 2 Hz under sample_period [ms]; expect"),
+        ("kp,ki,sample_period [ms]\n1,1,2 ms\n", 2, "found 2 ms under sample_period [ms]; expect"),
+        ("kp,ki,sample_period [ms]\n1,1,two\n", 2, "two"),
+        ("kp,ki,sample_period,bus [samples]\n1,1,1ms,0:1 s\n", 2, "found 1 s under bus [samples]"),
         ("kp,ki,sample_period\n1,1,1 Hz\n", 2, "Hz"),
         ("kp,ki,sample_period\n3,1,1ms\n", 2, "the axis runs from"),
         ("kp,ki,sample_period\n1,0.5,1ms\n", 2, "the term is absent"),
@@ -96,7 +102,7 @@ def test_a_range_takes_its_unit_from_the_header(tmp_path):
         ("kp,ki,sample_period,bus\n1,1,1ms,1:0\n", 2, "lies above"),
         ("kp,ki,sample_period,bus\n1,1,1ms,0:1:2\n", 2, "expected LOW:HIGH"),
         ("label,kp,ki,sample_period\na,1,1,1ms\na,0,1,1ms\n", 3, "in line 2 already"),
-        ("label,kp,ki,sample_period\n,1,1,1ms\n", 2, "the label nothing"),
+        ("label,kp,ki,sample_period\n,1,1,1ms\n", 2, "found an empty label; expected 1 to 80"),
         ("kp,ki,sample_period\n", 1, "no row below"),
         ('kp,ki,sample_period\n1,"1,1ms\n', 2, "end of data"),
         ("kp,ki,sample_period\n1,\x00,1ms\n", 2, "?"),
@@ -111,6 +117,11 @@ def test_a_broken_row_is_told_with_file_and_line(tmp_path, text, line, problem):
 
 def test_a_long_cell_is_shortened(tmp_path):
     assert "…" in refused(tmp_path, f"kp,ki,sample_period\n{'9' * 5000}x,1,1ms\n").message
+
+
+def test_a_huge_cell_is_told_in_plain_words(tmp_path):
+    message = refused(tmp_path, f"kp,ki,sample_period\n{'9' * 200_000},1,1ms\n").message
+    assert "a cell of more than 131,072 letters; expected" in message
 
 
 @pytest.mark.parametrize("content", ["", "\n\n  \n", b"\xff\xfe\x00\x01", b"\x89PNG\r\n\x1a\n\x00"])

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from sweep.config import Case
+from sweep.errors import QuestionError
 from sweep.query.judge import AskedDesign, Weights, named_designs
 from sweep.query.question import Demand
 from sweep.query.requirement import Asked as Required
@@ -45,7 +47,8 @@ def gather_designs(
     Raises
     ------
     QuestionError
-        For a name that the atlas does not hold, or a mistake in the table.
+        For a name that the atlas does not hold, a mistake in the table, and two designs of one
+        name.
     """
     found: list[AskedDesign] = []
     if names or not (at or schedule):
@@ -56,7 +59,22 @@ def gather_designs(
         found.append(AskedDesign(UNNAMED, dict(at)))
     if schedule:
         found += read_schedule(schedule, stored.grid)
+    _check_names(found, schedule)
     return found
+
+
+def _check_names(designs: Sequence[AskedDesign], schedule: Path | None) -> None:
+    """Refuse two verdicts under one name, of which nobody could tell the one from the other."""
+    counts = Counter(design.name for design in designs)
+    for name, times in counts.items():
+        if times > 1:
+            rows = f" (a row of {schedule} is one of them)" if schedule else ""
+            raise QuestionError(
+                f"judging {len(designs)} designs: {times} of them are called {name}{rows}; "
+                "expected a name of its own for each",
+                where=[name],
+                remedy="label the row otherwise" if schedule else f"name {name} once",
+            )
 
 
 def gather_demands(

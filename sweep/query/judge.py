@@ -220,15 +220,14 @@ def resolve_design(stored: StoredAtlas, design: AskedDesign, demand: Demand) -> 
     missing = [axis.name for axis in grid.axes if axis.role == "design" and axis.name not in asked]
     if missing:
         raise QuestionError(
-            f"judging the design {design.name}: it gives no {', '.join(missing)}",
+            f"judging {design.name}: it gives no {', '.join(missing)}",
             where=missing,
             remedy=f"add it: --at {missing[0]}=VALUE; a design has a value for every design axis",
         )
     nature = [axis.name for axis in grid.axes if axis.role == "tolerance" and axis.name in asked]
     if nature:
         raise QuestionError(
-            f"judging the design {design.name}: {nature[0]} is a tolerance axis, which nature "
-            "chooses",
+            f"judging {design.name}: {nature[0]} is a tolerance axis, which nature chooses",
             where=nature,
             remedy=f"give its range with --over {nature[0]}=LOW:HIGH",
         )
@@ -238,7 +237,7 @@ def resolve_design(stored: StoredAtlas, design: AskedDesign, demand: Demand) -> 
         return resolve_question(grid, held, stored.title, wanted, design.at, {})
     except QuestionError as error:
         raise QuestionError(
-            f"judging the design {design.name}: {error.message}",
+            f"judging {design.name}: {error.message}",
             where=error.where,
             remedy=error.remedy,
         ) from error

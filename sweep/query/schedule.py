@@ -12,15 +12,18 @@ import math
 import re
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from decimal import Decimal
 from pathlib import Path
 from typing import NoReturn
 
 from sweep.config.document import decode, read_bytes
-from sweep.errors import ConfigError, QuestionError
+from sweep.errors import ConfigError, QuantityError, QuestionError
 from sweep.grid import Axis, Grid
+from sweep.quantities import describe_unit, parse_quantity, split_quantity
 from sweep.query.judge import AskedDesign
 from sweep.query.scope import box_span, fixed_span
 from sweep.query.select import Asked, find_axis, resolve_names
+from sweep.query.spoken import is_rate
 
 MAX_DESIGNS = 10_000
 """Most rows of a schedule."""
@@ -155,6 +158,8 @@ def _find_columns(table: _Table, grid: Grid) -> list[Axis | None]:
             table.refuse(table.head, f"a second column for {what}", "remove one of the two")
         if axis is not None and axis.is_row_axis and unit:
             table.refuse(table.head, f"{name} is a row axis, and has no unit", "leave the unit out")
+        if axis is not None and unit:
+            _check_unit(table, axis, name, unit)
         axes.append(axis)
     for axis in grid.axes:
         if axis.role == "design" and axis not in axes:
@@ -165,6 +170,20 @@ def _find_columns(table: _Table, grid: Grid) -> list[Axis | None]:
                 f"add a column {axis.name}",
             )
     return axes
+
+
+def _check_unit(table: _Table, axis: Axis, name: str, unit: str) -> None:
+    """Refuse a unit in the header that no number of its axis has."""
+    of_axis = "Hz" if is_rate(axis, name) else axis.unit
+    try:
+        parse_quantity(f"1 {unit}", of_axis, natural_period_s=Decimal(1))
+    except QuantityError as error:
+        table.refuse(
+            table.head,
+            f"the column {_shown(name)} has the unit {_shown(unit)}; expected "
+            f"{describe_unit(of_axis)}",
+            error.remedy or "write a unit of that kind in the header",
+        )
 
 
 def _axis_of(table: _Table, name: str, grid: Grid) -> Axis:
@@ -189,23 +208,39 @@ def _read_design(
         if axis is None:
             name = _check_label(table, line, cell)
         elif axis.role == "design":
-            at |= _read_cell(table, line, grid, axis, spelled, _with_unit(cell, unit))
+            text = _with_unit(table, line, cell, spelled, unit)
+            at |= _read_cell(table, line, grid, axis, spelled, text)
         elif cell:
             parts = [cell] if axis.is_row_axis else cell.split(":")
-            text = ":".join(_with_unit(part.strip(), unit) for part in parts)
+            text = ":".join(_with_unit(table, line, p.strip(), spelled, unit) for p in parts)
             over |= _read_cell(table, line, grid, axis, spelled, text)
     return AskedDesign(name, at, over)
 
 
-def _with_unit(cell: str, unit: str) -> str:
-    return f"{cell} {unit}" if cell and unit else cell
+def _with_unit(table: _Table, line: int, cell: str, spelled: str, unit: str) -> str:
+    """A cell with the unit of its column; as it is where it is no number, which is told later."""
+    if not unit:
+        return cell
+    try:
+        own = split_quantity(cell).unit
+    except QuantityError:
+        return cell
+    if own:
+        table.refuse(
+            line,
+            f"found {_shown(cell)} under {_shown(spelled)} [{_shown(unit)}]; expected a number, "
+            "whose unit stands in the header",
+            "write the number alone, or leave the unit out of the header",
+        )
+    return f"{cell} {unit}"
 
 
 def _check_label(table: _Table, line: int, cell: str) -> str:
     if not cell or len(cell) > MAX_LABEL or not cell.isprintable():
+        found = f"the label {_shown(cell)}" if cell else "an empty label"
         table.refuse(
             line,
-            f"found the label {_shown(cell)}; expected 1 to {MAX_LABEL} printable characters",
+            f"found {found}; expected 1 to {MAX_LABEL} printable characters",
             "give each design a label, or leave the column out",
         )
     return cell
@@ -271,10 +306,12 @@ def _lines(path: Path, text: str) -> Iterator[tuple[int, list[str]]]:
                 yield reader.line_num, cells
     except csv.Error as error:
         line = reader.line_num
+        too_long = "field larger" in str(error)
+        problem = f"a cell of more than {csv.field_size_limit():,} letters" if too_long else error
         raise QuestionError(
-            f"reading {path}, line {line}: {error}",
+            f"reading {path}, line {line}: {problem}; expected cells separated by commas",
             where=[f"{path}:{line}"],
-            remedy="separate the cells by commas and quote texts that hold one",
+            remedy="separate the cells by commas, quote texts that hold one, and close every quote",
         ) from None
 
 
