@@ -10,10 +10,13 @@ from pathlib import Path
 import numpy as np
 import pytest
 import stand_in
+from memory_atlas import atlas, axis
 
 from sweep.__main__ import main
 from sweep.config import parse_config
 from sweep.store.atlas import create_atlas
+from sweep.views.judge_table import judge_view
+from sweep.views.sheet import to_text
 
 ROOT = Path(__file__).parents[1]
 CONFIG = """
@@ -261,3 +264,15 @@ def test_a_design_given_by_its_values_is_named_once_in_a_mistake(capsys, shelf):
     code, _, err = run(capsys, shelf, "--at", "kp=0.3")
     assert code == 2
     assert "judging the design asked for: it gives no sample_period" in err
+
+
+def test_what_is_unknown_is_told_as_unknown():
+    """Nothing is ranked, placed or said to be in hand of nodes that are not computed."""
+    damping = axis("damping", [0.1, 0.2, 0.3], sets="plant.damping", role="tolerance", nominal=1)
+    asked = atlas([axis("kp", [1, 2], sets="controller.kp"), damping], np.full((2, 3), np.nan))
+    text = to_text(judge_view(asked.judge(at={"kp": 1})), width=108, terminal=False)
+    assert "UNKNOWN" in text
+    assert "in hand: cannot be told, unknown at damping 0.2" in text
+    assert "which tolerance hurts most cannot be told" in text
+    assert "from unknown" not in text
+    assert "nothing in hand" not in text

@@ -149,10 +149,16 @@ def _lines_table(grid: Grid, lines: Sequence[Line]) -> Table:
     for item in lines:
         unknown = f" ({item.unknown:,} nodes unknown)" if item.unknown else ""
         table.add_row(
-            *cells(item.text, _worst_text(item), place_text(grid, item.at) or "its only node"),
+            *cells(item.text, _worst_text(item), _where_text(grid, item)),
             line(item.verdict, STYLES[item.verdict]).append_text(line(unknown)),
         )
     return table
+
+
+def _where_text(grid: Grid, item: Line) -> str:
+    if math.isnan(item.worst):
+        return ""
+    return place_text(grid, item.at) or "its only node"
 
 
 def _worst_text(item: Line) -> str:
@@ -246,8 +252,10 @@ def _in_hand_text(grid: Grid, found: InHand) -> str:
     stopped = f"{found.end} at {place_text(grid, found.stopped_at or {})}"
     if found.stopped_by:
         stopped += f", reached along {found.stopped_by}"
+    if found.end == "unknown" and found.holds_to <= 1.0:
+        return f"in hand: cannot be told, {stopped}"
     if found.holds_to == 0.0:
-        return f"nothing in hand: it {stopped.replace('unknown at', 'is unknown at')}"
+        return f"nothing in hand: it {stopped}"
     if found.holds_to < 1.0:
         return f"nothing in hand: the box holds shrunk to {found.holds_to:.4g} of itself; {stopped}"
     return f"{found.percent:.3g} % in hand: {times}; {stopped}"
@@ -256,6 +264,8 @@ def _in_hand_text(grid: Grid, found: InHand) -> str:
 def _acceptance_text(grid: Grid, found: Acceptance) -> str:
     nodes = found.meets + found.fails + found.unknown
     text = f"acceptance: {found.meets:,} of {nodes:,} tolerance nodes meet"
+    if found.rows:
+        text += f", each with every row of {', '.join(found.rows)}"
     if found.unknown:
         text += f", {found.unknown:,} are unknown"
     if found.largest_box is None:
@@ -293,6 +303,9 @@ def _hurt_texts(grid: Grid, found: DesignVerdict) -> Iterable[str]:
     if not found.hurts_most:
         return
     first, *rest = found.hurts_most
+    if any(math.isnan(value) for hurt in found.hurts_most for value in (hurt.alone, hurt.nominal)):
+        yield "which tolerance hurts most cannot be told: nodes are unknown"
+        return
     where = show_value(grid.axis(first.axis), first.at)
     yield (
         f"{first.axis} hurts most: alone, at {where}, it takes log_radius from "
