@@ -244,7 +244,8 @@ def _table(answer: ChooseAnswer, rows: Sequence[ChooseRow], differing: Sequence[
         answer.grid.axis(item.axis)
         for item in next((row.delay_left for row in rows if row.delay_left), ())
     ]
-    worst = [answer.grid.axis(name) for name in differing]
+    # beside the sides of a box there is no room for where its middle is at its worst
+    worst = [answer.grid.axis(name) for name in differing if answer.best != GAIN_BOX]
     table = plain_table(
         f"period [{period_unit(answer)}]",
         "verdict",
@@ -256,7 +257,8 @@ def _table(answer: ChooseAnswer, rows: Sequence[ChooseRow], differing: Sequence[
     )
     for column in table.columns:
         column.justify = "right"
-    table.columns[0].no_wrap = table.columns[1].no_wrap = True
+    for column in table.columns[: 2 + len(axes)]:
+        column.no_wrap = True
     for row in rows:
         period = period_text(answer, row.sample_period_s).partition(" ")[0]
         edged = any(_is_period(answer, name) for name in row.beside_failing)
@@ -285,14 +287,18 @@ def _design_text(axis: Axis, row: ChooseRow) -> str:
     """A design's value with what to beware of, and the side of the gain box around it."""
     if row.design is None:
         return ""
-    ended = axis.name in row.axis_ends or axis.name in _box_ends(row)
-    limited = axis.name in (*row.range_ends, *(name for name, _ in row.box_range_ends))
-    marks = _EDGE * (axis.name in row.beside_failing) + _END * ended + _RANGE_END * limited
+    marks = _EDGE * (axis.name in row.beside_failing)
+    marks += _END * (axis.name in row.axis_ends) + _RANGE_END * (axis.name in row.range_ends)
     value = marks + number(axis, row.design[axis.name])
     if row.box is None or axis.name not in row.box.ends or axis.is_row_axis:
         return value
-    low, high = (number(axis, end) for end in row.box.ends[axis.name])
-    return f"{value} ({low} to {high})"
+    ends = [
+        _END * ((axis.name, side) in row.box.axis_ends)
+        + _RANGE_END * ((axis.name, side) in row.box_range_ends)
+        + number(axis, end)
+        for side, end in zip(("low", "high"), row.box.ends[axis.name], strict=True)
+    ]
+    return f"{value} ({'..'.join(ends)})"
 
 
 def _nodes_text(row: ChooseRow) -> str:
