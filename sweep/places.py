@@ -28,3 +28,12 @@ def _home_cache() -> Path:
         return Path.home() / ".cache"
     except RuntimeError:
         return _NOWHERE
+
+
+def can_be_written(folder: Path) -> bool:
+    """Whether files can be made in a folder, which may have to be made itself."""
+    try:
+        place = next(one for one in (folder, *folder.absolute().parents) if os.path.lexists(one))
+        return place.is_dir() and os.access(place, os.W_OK | os.X_OK)
+    except OSError:
+        return False

@@ -16,6 +16,7 @@ from matplotlib.colors import to_rgb
 from memory_atlas import atlas, axis, rows
 
 from sweep.compute.progress import KernelsReady, SweepStarted, SweepStopping, TileStored
+from sweep.errors import InputError
 from sweep.views import figures
 from sweep.views.figures import draw_map, save_figure
 from sweep.views.limits_table import limits_view
@@ -329,7 +330,7 @@ def test_a_plane_finer_than_the_picture_is_thinned_and_says_so():
 def test_a_map_that_cannot_be_written_leaves_nothing_behind(tmp_path):
     folder = tmp_path / "map.png"
     folder.mkdir()
-    with pytest.raises(IsADirectoryError):
+    with pytest.raises(InputError, match="Is a directory"):
         save_figure(draw_map(plane()), folder)
     assert list(tmp_path.iterdir()) == [folder]
 

@@ -132,7 +132,10 @@ def _map(arguments: argparse.Namespace) -> int:
         design=arguments.design,
         nearest=arguments.nearest,
     )
-    from sweep.views.figures import draw_map, save_figure
+    from sweep.views.quiet import without_matplotlib_talk
+
+    with without_matplotlib_talk():
+        from sweep.views.figures import draw_map, save_figure
 
     path: Path = arguments.o
     save_figure(draw_map(plane), path)

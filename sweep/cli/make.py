@@ -46,6 +46,15 @@ def _new(arguments: argparse.Namespace) -> int:
             where=[str(path)],
             remedy="name a file that does not exist yet",
         ) from error
+    except OSError as error:
+        gone = isinstance(error, FileNotFoundError)
+        found = "there is no such folder" if gone else f"the system says: {error.strerror}"
+        raise InputError(
+            f"writing a starter config to {path}: expected a folder {path.parent} that can be "
+            f"written; {found}",
+            where=[str(path)],
+            remedy="make the folder first, or name another file",
+        ) from error
     if arguments.json:
         print_document({"file": str(path), "for": arguments.job})
     else:

@@ -31,7 +31,7 @@ from numpy.typing import NDArray
 
 from sweep.errors import InputError
 from sweep.identity import PROGRAM_VERSION, canonical_text
-from sweep.places import user_cache
+from sweep.places import can_be_written, user_cache
 from sweep.query.blocks import Readable
 from sweep.query.memo_entry import LAYOUT, Arrays, read_entry, write_entry
 
@@ -58,6 +58,8 @@ class MemoFacts:
     """What they may take."""
     enabled: bool
     """Whether answers are looked up and kept: false under ``SWEEP_MEMO=0``."""
+    writable: bool = True
+    """Whether its folder can be written, or made: otherwise nothing can be kept there."""
 
     def to_json(self) -> dict[str, Any]:
         """As a JSON document."""
@@ -67,6 +69,7 @@ class MemoFacts:
             "bytes": self.bytes,
             "limit_bytes": self.limit_bytes,
             "enabled": self.enabled,
+            "writable": self.writable,
         }
 
 
@@ -250,7 +253,8 @@ class Memo:
         """What the memo holds now."""
         kept = self._files(_ENTRY)
         held = sum(file.size for file in kept)
-        return MemoFacts(self.folder, len(kept), held, self.limit_bytes, self.enabled)
+        writable = can_be_written(self.folder)
+        return MemoFacts(self.folder, len(kept), held, self.limit_bytes, self.enabled, writable)
 
     def _path(self, key: str) -> Path:
         return self.folder / f"{key}.memo"

@@ -16,7 +16,7 @@ import textwrap
 import uuid
 import warnings
 from collections.abc import Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import Any
 
@@ -32,6 +32,7 @@ from matplotlib.patheffects import withStroke
 from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
 from numpy.typing import NDArray
 
+from sweep.errors import InputError
 from sweep.grid import Axis
 from sweep.quantities import display_factor, display_name
 from sweep.query.answers import PlaneAnswer, show_value
@@ -109,6 +110,11 @@ def save_figure(figure: Figure, path: Path) -> None:
         What to write.
     path
         Where to; its ending says which kind.
+
+    Raises
+    ------
+    InputError
+        When it cannot be written there.
     """
     kind = path.suffix.lower().lstrip(".")
     nothing_of_now: dict[str, dict[str, None]] = {
@@ -125,8 +131,16 @@ def save_figure(figure: Figure, path: Path) -> None:
     try:
         partial.write_bytes(page.getvalue())
         partial.replace(path)
+    except OSError as error:
+        raise InputError(
+            f"writing the map to {path}: expected that its folder {path.parent} can be written; "
+            f"the system says: {error.strerror}",
+            where=[str(path)],
+            remedy="name a file in a folder that you may write to, on a disk with room",
+        ) from error
     finally:
-        partial.unlink(missing_ok=True)
+        with suppress(OSError):
+            partial.unlink(missing_ok=True)
 
 
 @contextmanager

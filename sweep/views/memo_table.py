@@ -25,6 +25,8 @@ def memo_view(facts: MemoFacts, removed: tuple[int, int] | None = None) -> Rende
         parts.append(line(f"Cleared: {answers} removed, {bytes_text(held)} freed", "bold"))
     if not facts.enabled:
         parts.append(line("The memo is switched off by SWEEP_MEMO", "bold yellow"))
+    elif not facts.writable:
+        parts.append(line("Nothing can be kept there: its folder cannot be written", "bold yellow"))
     held_text = f"{bytes_text(facts.bytes)} of at most {bytes_text(facts.limit_bytes)}"
     rows = [("folder", str(facts.folder)), ("answers", f"{facts.entries:,}"), ("disk", held_text)]
     return Group(*parts, facts_table(rows))
