@@ -57,8 +57,8 @@ ASKED = {
     "a rate shaken off the axis": (
         lambda: ATLAS.robust(at={"sample_rate": "125Hz"}, shake={"sample_rate": 5}),
         (
-            "shaking sample_rate = 125 Hz (8 ms) by 5 Hz: that leaves what the axis can tell, which "
-            "runs from 125 Hz to 1 kHz"
+            "shaking sample_rate = 125 Hz (8 ms) by 5 Hz: that leaves what the axis can "
+            "tell: it runs from 125 Hz to 1 kHz"
         ),
     ),
     "a rate shaken by no distance": (
@@ -80,8 +80,8 @@ ASKED = {
     "a bare period shaken off the axis": (
         lambda: ATLAS.robust(at={"sample_period": 0.001}, shake={"sample_period": 0.0005}),
         (
-            "shaking sample_period = 1 ms by 0.5 ms: that leaves what the axis can tell, which runs "
-            "from 1 ms to 8 ms"
+            "shaking sample_period = 1 ms by 0.5 ms: that leaves what the axis can "
+            "tell: it runs from 1 ms to 8 ms"
         ),
     ),
     "a bare period off the axis": (
