@@ -13,7 +13,7 @@ from hypothesis import strategies as st
 from memory_atlas import atlas, axis, rows
 
 from sweep.errors import QuestionError
-from sweep.query.choose import choose_designs
+from sweep.query.choosing.choose import choose_designs
 from sweep.query.question import make_demand
 from sweep.vocabulary import STABILITY_THRESHOLD as EDGE
 from sweep.vocabulary import LoopStructure

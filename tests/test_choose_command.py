@@ -12,7 +12,7 @@ from memory_atlas import atlas, axis, rows
 
 from sweep.__main__ import main
 from sweep.config import parse_config
-from sweep.query.choose import choose_designs
+from sweep.query.choosing.choose import choose_designs
 from sweep.query.question import make_demand
 from sweep.store.atlas import create_atlas
 from sweep.views.choose_table import choose_view, pick_rows

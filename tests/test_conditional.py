@@ -14,7 +14,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from sweep.query.answers import JudgeAnswer
-from sweep.query.judge import AskedDesign, judge_designs
+from sweep.query.judging.judge import AskedDesign, judge_designs
 from sweep.query.question import Demand
 from sweep.views.judge_table import judge_view
 from sweep.views.sheet import to_text

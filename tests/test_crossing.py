@@ -13,7 +13,7 @@ from hypothesis import strategies as st
 from memory_atlas import atlas, axis, rows
 
 from sweep.errors import QuestionError
-from sweep.query.crossing import find_crossing
+from sweep.query.stability.crossing import find_crossing
 from sweep.vocabulary import STABILITY_THRESHOLD as EDGE
 
 # --- accuracy of the crossing ------------------------------------------------------------------
@@ -418,7 +418,7 @@ def test_rows_that_set_the_sample_period_give_each_its_own_frequency():
 
 
 def test_every_batch_of_rows_is_a_box_in_order():
-    from sweep.query.limits import _batches
+    from sweep.query.stability.limits import _batches
 
     for sizes in ([3, 4], [1, 7], [5, 1, 3], []):
         for most in range(1, 9):

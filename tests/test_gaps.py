@@ -13,8 +13,8 @@ from memory_atlas import atlas, axis
 from sweep.config import Case, Requirement
 from sweep.errors import QuestionError
 from sweep.query.gaps import box_without_gaps, jump_without_gaps, regions_without_gaps
+from sweep.query.judging.tolerance import find_acceptance, find_in_hand
 from sweep.query.largest_box import find_largest_box
-from sweep.query.tolerance import find_acceptance, find_in_hand
 from sweep.query.verdicts import FAILS, MEETS
 from sweep.vocabulary import LoopStructure
 

@@ -18,10 +18,10 @@ from sweep.config import Case, Design, Requirement
 from sweep.errors import QuestionError
 from sweep.query.answers import JudgeAnswer
 from sweep.query.answers.plain import plain as plain_values
-from sweep.query.judge import AskedDesign, judge_designs, named_designs
+from sweep.query.judging.judge import AskedDesign, judge_designs, named_designs
+from sweep.query.judging.tolerance import find_acceptance, find_in_hand
+from sweep.query.judging.yields import find_yields
 from sweep.query.question import Demand
-from sweep.query.tolerance import find_acceptance, find_in_hand
-from sweep.query.yields import find_yields
 from sweep.views.judge_table import judge_view
 from sweep.views.sheet import CANNOT_BE_BUILT, to_text
 from sweep.vocabulary import LoopStructure
@@ -92,7 +92,7 @@ def test_verdict_and_every_line_are_those_of_plain_loops(rnd):
 def test_a_verdict_does_not_depend_on_how_many_nodes_the_tolerances_have(asked):
     whole = judged(asked)
     with pytest.MonkeyPatch.context() as patch:
-        patch.setattr("sweep.query.judge.can_be_held", lambda _: False)
+        patch.setattr("sweep.query.judging.judge.can_be_held", lambda _: False)
         boxed = judged(asked)
     left_out = ("in_hand", "acceptance", "tolerances_skipped", "largest_jump")
     documents = [found.to_json() for found in (whole, boxed)]

@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 from memory_atlas import atlas, axis
 
 from sweep.errors import QuestionError
-from sweep.query.limits import NODES_AT_ONCE
+from sweep.query.stability.limits import NODES_AT_ONCE
 from sweep.vocabulary import STABILITY_THRESHOLD as EDGE
 from sweep.vocabulary import LoopStructure
 
@@ -174,7 +174,7 @@ def test_tiles_and_row_batches_do_not_change_the_answer(made):
     before = asked.limits("along")
     asked.stored.tile_shape = asked.grid.shape
     with pytest.MonkeyPatch.context() as patch:
-        patch.setattr("sweep.query.limits.NODES_AT_ONCE", 1)
+        patch.setattr("sweep.query.stability.limits.NODES_AT_ONCE", 1)
         assert asked.limits("along").rows == before.rows
 
 

@@ -8,7 +8,7 @@ from choose_by_hand import ByHand, questions
 from hypothesis import given, settings
 from memory_atlas import atlas, axis, rows
 
-from sweep.query.choose import choose_designs
+from sweep.query.choosing.choose import choose_designs
 from sweep.query.memo import Memo
 from sweep.query.question import make_demand
 from sweep.views.price_table import price_sentence
@@ -153,7 +153,7 @@ def test_rows_are_removed_to_the_nominal_row():
 
 @pytest.mark.usefixtures("memo_is_on")
 def test_prices_from_the_memo_are_the_prices(tmp_path, monkeypatch):
-    monkeypatch.setattr("sweep.query.price.WORTH_KEEPING", 1)
+    monkeypatch.setattr("sweep.query.choosing.price.WORTH_KEEPING", 1)
     monkeypatch.setattr("sweep.query.worst.WORTH_KEEPING", 1)
     levels = np.full((2, 5, 2), -0.1)
     levels[1, 0] = 0.1

@@ -9,8 +9,8 @@ from hypothesis import strategies as st
 
 from sweep.errors import QuestionError
 from sweep.grid import Grid
-from sweep.query.judge import AskedDesign
-from sweep.query.schedule import MAX_DESIGNS, read_schedule, read_weights
+from sweep.query.judging.judge import AskedDesign
+from sweep.query.judging.schedule import MAX_DESIGNS, read_schedule, read_weights
 
 GRID = Grid(
     (

@@ -14,7 +14,7 @@ from hypothesis import example, given
 from hypothesis import strategies as st
 from memory_atlas import axis, rows
 
-from sweep.query.tolerance import find_acceptance, find_in_hand
+from sweep.query.judging.tolerance import find_acceptance, find_in_hand
 from sweep.query.verdicts import EXCLUDED, FAILS, MEETS, UNKNOWN
 
 M, F, U, X = MEETS, FAILS, UNKNOWN, EXCLUDED

@@ -13,8 +13,8 @@ from memory_atlas import axis, rows
 from scipy import special, stats
 
 from sweep.errors import QuestionError
+from sweep.query.judging.yields import WorstRow, at_least, clopper_pearson, find_yields
 from sweep.query.verdicts import EXCLUDED, FAILS, MEETS, UNKNOWN
-from sweep.query.yields import WorstRow, at_least, clopper_pearson, find_yields
 
 M, F, U, X = MEETS, FAILS, UNKNOWN, EXCLUDED
 PAIRS = [

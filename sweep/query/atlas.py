@@ -17,13 +17,11 @@ from sweep.query.answers import (
     PointAnswer,
     RobustAnswer,
 )
-from sweep.query.choose import choose_designs
+from sweep.query.choosing.choose import choose_designs
 from sweep.query.facts import AtlasFacts, read_facts
 from sweep.query.gather import as_names, gather_demands, gather_designs, gather_weights
-from sweep.query.judge import CONFIDENCE, Weights, judge_designs
-from sweep.query.limits import MOST_ROWS, find_limits, resolve_limits
+from sweep.query.judging.judge import CONFIDENCE, Weights, judge_designs
 from sweep.query.memo import Memo
-from sweep.query.plane import find_plane
 from sweep.query.point import find_point
 from sweep.query.question import make_demand, resolve_question
 from sweep.query.requirement import Asked as Required
@@ -34,6 +32,8 @@ from sweep.query.select import (
     find_axis,
     resolve_names,
 )
+from sweep.query.stability.limits import MOST_ROWS, find_limits, resolve_limits
+from sweep.query.stability.plane import find_plane
 from sweep.vocabulary import LoopStructure
 
 if TYPE_CHECKING:

@@ -10,11 +10,11 @@ from typing import TYPE_CHECKING
 
 from sweep.config import Case
 from sweep.errors import QuestionError
-from sweep.query.judge import AskedDesign, Weights, named_designs
+from sweep.query.judging.judge import AskedDesign, Weights, named_designs
+from sweep.query.judging.schedule import read_schedule, read_weights
 from sweep.query.question import Demand
 from sweep.query.requirement import Asked as Required
 from sweep.query.requirement import find_case
-from sweep.query.schedule import read_schedule, read_weights
 from sweep.query.select import Asked, resolve_names
 from sweep.query.shake import Asked as Shaking
 

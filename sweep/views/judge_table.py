@@ -19,10 +19,10 @@ from sweep.query.answers import (
     Line,
     show_value,
 )
+from sweep.query.judging.tolerance import Acceptance, InHand
+from sweep.query.judging.yields import Yield
 from sweep.query.select import Value
-from sweep.query.tolerance import Acceptance, InHand
 from sweep.query.verdicts import Verdict
-from sweep.query.yields import Yield
 from sweep.views.box_lines import jump_line, range_text
 from sweep.views.columns import head, number
 from sweep.views.sheet import (

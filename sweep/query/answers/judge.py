@@ -16,8 +16,8 @@ from sweep.query.select import Value
 from sweep.query.verdicts import Verdict
 
 if TYPE_CHECKING:
-    from sweep.query.tolerance import Acceptance, InHand
-    from sweep.query.yields import Yield
+    from sweep.query.judging.tolerance import Acceptance, InHand
+    from sweep.query.judging.yields import Yield
 
 
 @dataclass(frozen=True)

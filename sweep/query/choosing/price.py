@@ -10,13 +10,13 @@ import numpy as np
 
 from sweep.grid import Axis
 from sweep.query.answers.choose import Outcome, Price
-from sweep.query.best import Best, find_gain_boxes
 from sweep.query.blocks import Indices, Readable
+from sweep.query.choosing.best import Best, find_gain_boxes
+from sweep.query.choosing.periods import Periods
 from sweep.query.derived import measures_needed
 from sweep.query.extremes import Places
 from sweep.query.gaps import unordered_dimensions
 from sweep.query.memo import Memo
-from sweep.query.periods import Periods
 from sweep.query.question import DesignQuestion
 from sweep.query.scope import Scope, box_ends
 from sweep.query.verdicts import MEETS

@@ -18,24 +18,30 @@ from numpy.typing import NDArray
 from sweep.errors import QuestionError
 from sweep.query.answers.choose import ChooseAnswer, ChooseRow, DelayLeft, Outcome
 from sweep.query.answers.robust import LargestBox
-from sweep.query.best import Best, find_gain_box, read_best
 from sweep.query.cautions import OVER_A_BOX
-from sweep.query.delay_left import find_delay_left
-from sweep.query.extremes import Extreme, Places
-from sweep.query.gaps import design_gaps, jump_without_gaps, unordered_dimensions
-from sweep.query.largest_box import Box
-from sweep.query.memo import Memo
-from sweep.query.periods import Periods, find_periods
-from sweep.query.price import PriceList, find_outcome, find_prices, plan_prices, recall_outcomes
-from sweep.query.question import Demand, DesignQuestion, resolve_question
-from sweep.query.scope import Scope
-from sweep.query.select import Asked, resolve_names, value_at
-from sweep.query.surroundings import (
+from sweep.query.choosing.best import Best, find_gain_box, read_best
+from sweep.query.choosing.delay_left import find_delay_left
+from sweep.query.choosing.periods import Periods, find_periods
+from sweep.query.choosing.price import (
+    PriceList,
+    find_outcome,
+    find_prices,
+    plan_prices,
+    recall_outcomes,
+)
+from sweep.query.choosing.surroundings import (
     find_axis_ends,
     find_beside_failing,
     find_box_range_ends,
     find_range_ends,
 )
+from sweep.query.extremes import Extreme, Places
+from sweep.query.gaps import design_gaps, jump_without_gaps, unordered_dimensions
+from sweep.query.largest_box import Box
+from sweep.query.memo import Memo
+from sweep.query.question import Demand, DesignQuestion, resolve_question
+from sweep.query.scope import Scope
+from sweep.query.select import Asked, resolve_names, value_at
 from sweep.query.verdicts import FAILS, MEETS, NAMES, Codes
 from sweep.query.worst import (
     LOG_RADIUS,

@@ -35,7 +35,7 @@ from sweep.grid import SAME_NODE, Axis
 from sweep.query.answers.judge import GainFall
 from sweep.query.blocks import Indices, Readable
 from sweep.query.extremes import find_extremes
-from sweep.query.held_block import hold
+from sweep.query.judging.held_block import hold
 from sweep.query.scope import Scope
 from sweep.query.select import gain_changes_structure
 from sweep.query.worst import LOG_RADIUS

@@ -2,8 +2,8 @@
 
 Along a design axis the others stay at the design and the box counts at its worst. Along a tolerance
 axis the distance counts from the end of the box outward, with the other tolerances at their worst
-over the box. A distance ends where `sweep.query.limits` ends a stretch: at the boundary, and before
-what is unknown or cannot be built.
+over the box. A distance ends where `sweep.query.stability.limits` ends a stretch: at the boundary,
+and before what is unknown or cannot be built.
 """
 
 from __future__ import annotations
@@ -20,10 +20,10 @@ from sweep.query.answers import End
 from sweep.query.answers.judge import Distance, Hurt
 from sweep.query.blocks import Indices, Readable, read_nodes
 from sweep.query.extremes import find_extremes
-from sweep.query.held_block import hold
+from sweep.query.judging.held_block import hold
 from sweep.query.scope import Scope
 from sweep.query.select import Value, gain_changes_structure, value_at
-from sweep.query.walk import LimitsQuestion, Walk
+from sweep.query.stability.walk import LimitsQuestion, Walk
 from sweep.query.worst import LOG_RADIUS, find_excluded
 from sweep.vocabulary import LoopStructure
 

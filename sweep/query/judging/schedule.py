@@ -20,7 +20,7 @@ from sweep.config.document import decode, read_bytes
 from sweep.errors import ConfigError, QuantityError, QuestionError
 from sweep.grid import Axis, Grid
 from sweep.quantities import describe_unit, parse_quantity, split_quantity
-from sweep.query.judge import AskedDesign
+from sweep.query.judging.judge import AskedDesign
 from sweep.query.scope import box_span, fixed_span
 from sweep.query.select import Asked, find_axis, resolve_names
 from sweep.query.spoken import is_rate

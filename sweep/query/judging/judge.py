@@ -27,12 +27,14 @@ from sweep.query.answers.judge import (
 )
 from sweep.query.blocks import Indices, Readable
 from sweep.query.cautions import OVER_A_BOX
-from sweep.query.conditional import find_gain_fall
-from sweep.query.distances import find_distances, find_hurts, largest_step, walk_lines
 from sweep.query.extremes import MOST_DESIGN_NODES, Extreme, can_be_held
 from sweep.query.gaps import find_gaps, jump_without_gaps
-from sweep.query.held_block import hold
-from sweep.query.lines import PROCESSOR_TIME, find_lines, is_lost
+from sweep.query.judging.conditional import find_gain_fall
+from sweep.query.judging.distances import find_distances, find_hurts, largest_step, walk_lines
+from sweep.query.judging.held_block import hold
+from sweep.query.judging.lines import PROCESSOR_TIME, find_lines, is_lost
+from sweep.query.judging.tolerance import Acceptance, InHand, find_acceptance, find_in_hand
+from sweep.query.judging.yields import Yield, check_tables, find_yields
 from sweep.query.question import Demand, DesignQuestion, resolve_question
 from sweep.query.scope import Scope
 from sweep.query.select import (
@@ -43,10 +45,8 @@ from sweep.query.select import (
     resolve_names,
     value_at,
 )
-from sweep.query.tolerance import Acceptance, InHand, find_acceptance, find_in_hand
 from sweep.query.verdicts import MEETS, UNKNOWN, Codes
 from sweep.query.worst import LOG_RADIUS, WorstCases, find_worst_cases
-from sweep.query.yields import Yield, check_tables, find_yields
 from sweep.vocabulary import LoopStructure
 
 if TYPE_CHECKING:

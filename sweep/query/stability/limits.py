@@ -46,7 +46,7 @@ from sweep.query.select import (
     resolve_names,
     value_at,
 )
-from sweep.query.walk import LimitsQuestion, Walk
+from sweep.query.stability.walk import LimitsQuestion, Walk
 from sweep.query.worst import find_excluded
 from sweep.vocabulary import LoopStructure
 

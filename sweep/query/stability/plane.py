@@ -12,11 +12,11 @@ from sweep.config import Design
 from sweep.errors import QuestionError
 from sweep.grid import Axis
 from sweep.query.answers import Mark, PlaneAnswer
-from sweep.query.boundary import find_boundary
 from sweep.query.cautions import BETWEEN_NODES
 from sweep.query.held import hold_nodes
 from sweep.query.jump import find_largest_jump
 from sweep.query.select import Asked, Value, find_axis, resolve_names
+from sweep.query.stability.boundary import find_boundary
 from sweep.vocabulary import STABILITY_THRESHOLD
 
 if TYPE_CHECKING:

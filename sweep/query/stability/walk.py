@@ -12,8 +12,8 @@ from numpy.typing import NDArray
 from sweep.grid import Axis, Grid
 from sweep.query.answers import CrossingKind, End, EndKind, Interval
 from sweep.query.blocks import Indices
-from sweep.query.crossing import REACH, find_crossing, is_real
 from sweep.query.select import Value, value_at
+from sweep.query.stability.crossing import REACH, find_crossing, is_real
 from sweep.vocabulary import STABILITY_THRESHOLD
 
 FloatArray = NDArray[np.float64]

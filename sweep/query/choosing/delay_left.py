@@ -10,10 +10,10 @@ from sweep.grid import Axis
 from sweep.query.answers.choose import DelayLeft
 from sweep.query.answers.limits import End
 from sweep.query.blocks import Indices, Readable
-from sweep.query.limits import find_limits
 from sweep.query.scope import Scope
 from sweep.query.shake import Window
-from sweep.query.walk import LimitsQuestion
+from sweep.query.stability.limits import find_limits
+from sweep.query.stability.walk import LimitsQuestion
 
 PROCESSOR = "delay.compute"
 """The processor's time, which a sample period has to hold."""

@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 
 from sweep.grid import Grid
 from sweep.query.select import gain_changes_structure
-from sweep.query.walk import LimitsQuestion, Walk
+from sweep.query.stability.walk import LimitsQuestion, Walk
 
 FloatArray = NDArray[np.float64]
 Point = tuple[float, float]

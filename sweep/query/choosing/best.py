@@ -8,11 +8,11 @@ from dataclasses import dataclass
 from sweep.config.findings import find_near
 from sweep.errors import QuestionError
 from sweep.query.answers.choose import GAIN_BOX
+from sweep.query.choosing.periods import Periods
 from sweep.query.derived import spec_of
 from sweep.query.extremes import Extreme
 from sweep.query.gaps import box_without_gaps, design_gaps, unordered_dimensions
 from sweep.query.largest_box import Box
-from sweep.query.periods import Periods
 from sweep.query.requirement import check_held
 from sweep.query.verdicts import MEETS
 from sweep.query.worst import LOG_RADIUS, WorstCases

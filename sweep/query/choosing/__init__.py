@@ -1,0 +1,1 @@
+"""The best design at every sample period, and what each tolerance costs."""

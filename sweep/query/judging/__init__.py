@@ -1,0 +1,1 @@
+"""The verdict on single designs, line by line, and how far each is from trouble."""

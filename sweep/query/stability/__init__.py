@@ -1,0 +1,1 @@
+"""Where the loop is stable along an axis or in a plane: crossings found between nodes."""
