@@ -223,6 +223,10 @@ class ByHand:
                 sign = 1 if key[1] == "max" else -1
                 if not math.isnan(value) and (math.isnan(held) or sign * value > sign * held):
                     worst[key], where[key] = value, node
+        boxed = [self.grid.axis(name) for name in self.box]
+        if not any("sample_period" in one.sets for one in boxed) and where:
+            # at one period decay time follows log_radius; of unbounded ones the largest is named
+            where["decay_time", "max"] = where["log_radius", "max"]
         fails = False
         for quantity, sense, limit in self.required:
             value = worst.get((quantity, sense), math.nan)

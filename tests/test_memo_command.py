@@ -42,6 +42,7 @@ def test_the_command_gives_programs_a_document(mine, capsys):
     facts = mine.facts()
     assert json.loads(ask(capsys, "--json")[1]) == {
         "folder": str(mine.folder),
+        "writable": True,
         "entries": 2,
         "bytes": facts.bytes,
         "limit_bytes": 10**9,
