@@ -45,9 +45,12 @@ def _radius(measures: Mapping[str, Block], _period_s: Block) -> Block:
 
 def _decay_time(measures: Mapping[str, Block], period_s: Block) -> Block:
     log_radius = measures["log_radius"].astype(np.float64)
-    stable = log_radius < STABILITY_THRESHOLD
-    decay_s = -period_s / np.where(stable, log_radius, -1.0)
-    return np.where(stable, decay_s, np.where(np.isnan(log_radius), np.nan, np.inf))
+    endless = log_radius >= STABILITY_THRESHOLD
+    decay_s: Block = np.negative(log_radius, out=log_radius)
+    with np.errstate(divide="ignore"):
+        np.divide(period_s, decay_s, out=decay_s)
+    np.copyto(decay_s, np.inf, where=endless)
+    return decay_s
 
 
 def _dominant_damping(measures: Mapping[str, Block], _period_s: Block) -> Block:

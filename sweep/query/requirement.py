@@ -93,7 +93,7 @@ def find_case(cases: Sequence[Case], name: str) -> Case:
 
 def is_violated(requirement: Requirement, worst: NDArray[np.floating]) -> NDArray[np.bool_]:
     """Where a worst value breaks a bound; never where it is NaN, which is unknown."""
-    values = worst.astype(np.float64)
+    values = worst.astype(np.float64, copy=False)
     if requirement == STABLE:
         return values >= requirement.limit
     return values > requirement.limit if requirement.sense == "max" else values < requirement.limit

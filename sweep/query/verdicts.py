@@ -30,4 +30,6 @@ def decide(fails: NDArray[np.bool_], unknown: NDArray[np.bool_]) -> Codes:
     >>> decide(np.array([True, True, False, False]), np.array([True, False, True, False])).tolist()
     [0, 0, -1, 1]
     """
-    return np.where(fails, FAILS, np.where(unknown, UNKNOWN, MEETS)).astype(np.int8)
+    verdict = np.where(unknown, np.int8(UNKNOWN), np.int8(MEETS))
+    verdict[fails] = FAILS
+    return verdict

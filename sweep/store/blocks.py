@@ -10,8 +10,8 @@ reads it and says what is wrong.
 from __future__ import annotations
 
 import itertools
-import math
 import struct
+import threading
 from collections.abc import Iterator, Sequence
 from io import RawIOBase
 from pathlib import Path
@@ -28,6 +28,7 @@ _CHECKSUM = 4
 _ABSENT = 2**64 - 1
 _BLOSC_HEADER = 16
 _CODEC = Blosc()
+_SCRATCH = threading.local()
 
 
 class NotAsWritten(Exception):
@@ -80,19 +81,52 @@ def _read_tile(path: Path, layout: ShardFormat, inside: tuple[slice, ...], into:
             return
         if size > layout.most_bytes:
             raise NotAsWritten(str(path))
-        table = _read_index(file, layout, size)
-        for row, source, target in _chunks_in(layout, inside):
+        chunks = list(_chunks_in(layout, inside))
+        source = _Source(file, size, whole=2 * len(chunks) > layout.chunks)
+        table = _read_index(source, layout)
+        room = _room(layout.chunk_shape)
+        for row, part, target in chunks:
             offset, length = int(table[row, 0]), int(table[row, 1])
             if offset == _ABSENT:
                 continue
             if offset + length > size - layout.index_bytes:
                 raise NotAsWritten(str(path))
-            into[target] = _decode(_read_at(file, offset, length), layout)[source]
+            _decode(source.read(offset, length), room)
+            into[target] = room[part]
 
 
-def _read_index(file: RawIOBase, layout: ShardFormat, size: int) -> NDArray[np.uint64]:
+class _Source:
+    """The bytes of one object, read at once where most of them are wanted."""
+
+    def __init__(self, file: RawIOBase, size: int, *, whole: bool) -> None:
+        self.file, self.size = file, size
+        self.data = self._read(0, size) if whole else None
+
+    def read(self, offset: int, length: int) -> bytes:
+        """So many bytes from an offset."""
+        if self.data is not None:
+            return self.data[offset : offset + length]
+        return self._read(offset, length)
+
+    def _read(self, offset: int, length: int) -> bytes:
+        self.file.seek(offset)
+        data: bytes | None = self.file.read(length)
+        if data is None or len(data) != length:
+            raise NotAsWritten("an object that is cut short")
+        return data
+
+
+def _room(shape: tuple[int, ...]) -> Measured:
+    """Where this thread unpacks chunks, one after the other: new memory for each costs more."""
+    room: Measured | None = getattr(_SCRATCH, "room", None)
+    if room is None or room.shape != shape:
+        room = _SCRATCH.room = np.empty(shape, "<f4")
+    return room
+
+
+def _read_index(source: _Source, layout: ShardFormat) -> NDArray[np.uint64]:
     """Offset and length of every chunk, shape (chunks, 2)."""
-    data = _read_at(file, size - layout.index_bytes, layout.index_bytes)
+    data = source.read(source.size - layout.index_bytes, layout.index_bytes)
     return np.frombuffer(_checked(data), "<u8").reshape(-1, 2)
 
 
@@ -122,20 +156,18 @@ def _chunks_in(
         yield row, source, target
 
 
-def _decode(data: bytes, layout: ShardFormat) -> Measured:
-    """The values of one chunk; its header is believed only where it says what it must."""
+def _decode(data: bytes, room: Measured) -> None:
+    """Unpack one chunk; its header is believed only where it says what it must."""
     packed = _checked(data)
-    nbytes = math.prod(layout.chunk_shape) * 4
     if len(packed) < _BLOSC_HEADER:
         raise NotAsWritten("a chunk that is too short")
     unpacked_bytes, _, packed_bytes = struct.unpack("<3I", packed[4:_BLOSC_HEADER])
-    if (unpacked_bytes, packed_bytes) != (nbytes, len(packed)):
+    if (unpacked_bytes, packed_bytes) != (room.nbytes, len(packed)):
         raise NotAsWritten("a chunk of another size")
     try:
-        values = _CODEC.decode(packed)
+        _CODEC.decode(packed, out=room)
     except (RuntimeError, ValueError) as cause:
         raise NotAsWritten("a chunk that does not unpack") from cause
-    return np.frombuffer(values, "<f4").reshape(layout.chunk_shape)
 
 
 def _checked(data: bytes) -> bytes:
@@ -144,11 +176,3 @@ def _checked(data: bytes) -> bytes:
     if len(checksum) < _CHECKSUM or google_crc32c.value(body) != struct.unpack("<I", checksum)[0]:
         raise NotAsWritten("a checksum that is wrong")
     return body
-
-
-def _read_at(file: RawIOBase, offset: int, length: int) -> bytes:
-    file.seek(offset)
-    data: bytes | None = file.read(length)
-    if data is None or len(data) != length:
-        raise NotAsWritten("an object that is cut short")
-    return data

@@ -83,6 +83,11 @@ class ShardFormat:
         """Size of the index; an object that is not larger holds no values."""
         return len(self._chunks) * _BYTES_PER_ENTRY + _BYTES_PER_CHECKSUM
 
+    @property
+    def chunks(self) -> int:
+        """Inner chunks of an object."""
+        return len(self._chunks)
+
     @cached_property
     def most_bytes(self) -> int:
         """No object is larger than this: incompressible chunks, their headers and the index."""
