@@ -83,14 +83,9 @@ def test_any_arrays_of_numbers_come_back_bit_by_bit(tmp_path_factory, arrays):
 
 
 def test_a_text_comes_back(memo):
-    memo.put_text(memo.key({}), "ζ of 0.02\n")
-    assert memo.get_text(memo.key({})) == "ζ of 0.02\n"
-    assert memo.get_text(memo.key({"q": 1})) is None
+    memo.put(memo.key({}), {"text": text_array("ζ of 0.02\n")})
+    assert array_text(memo.get(memo.key({}))["text"]) == "ζ of 0.02\n"
     assert array_text(text_array("")) == ""
-
-
-def test_an_answer_without_a_text_has_none(memo):
-    assert memo.get_text(kept(memo)[0]) is None
 
 
 def test_the_order_of_a_question_does_not_matter_and_everything_else_does(memo):

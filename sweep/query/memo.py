@@ -179,15 +179,6 @@ class Memo:
                 partial.unlink()
         self._make_room(newest=self._path(key))
 
-    def get_text(self, key: str) -> str | None:
-        """The text kept under a key by `put_text`, or `None`."""
-        arrays = self.get(key)
-        return None if arrays is None or "text" not in arrays else array_text(arrays["text"])
-
-    def put_text(self, key: str, text: str) -> None:
-        """Keep a text, such as a JSON document, under a key; as `put` otherwise."""
-        self.put(key, {"text": text_array(text)})
-
     def recall(
         self,
         stored: Readable,

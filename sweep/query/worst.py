@@ -55,10 +55,6 @@ class WorstCases:
     unknown_nodes: int
     """How many of them are not computed."""
 
-    def worst_of(self, requirement: Requirement) -> NDArray[Any]:
-        """The values that decide a requirement."""
-        return self.found.worst[Extreme(requirement.quantity, requirement.sense)]
-
     def place_of(self, extreme: Extreme, design: tuple[int, ...]) -> dict[str, Value]:
         """Where in the box, and at which neighbour, a design is at its worst.
 
